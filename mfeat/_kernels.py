@@ -1,0 +1,218 @@
+"""Compiled loops for level indices and window counts. No checks and no allocation in here.
+
+Layout shared with `counts`: an image of level indices carries one extra row and column, so that
+every pixel has a right and a lower neighbour. `ok[i, j]` is 1 where the 2x2 window whose lower
+right pixel is (i, j) counts; its first and last row and column are windows that leave the array,
+and are 0. A pixel then enters each statistic with the number of counting windows around it as its
+weight, which makes borders and missing pixels one and the same case.
+"""
+
+import numpy as np
+
+from mfeat._jit import kernel
+
+# Rows of a count table; `counts.STATISTICS` names and explains them.
+_PIXEL, _DIAGONAL, _H, _V, _D, _A, _MAX, _MIN = range(8)
+
+
+@kernel
+def index_by_search(values, thresholds, index, top, left):
+    """Write the number of `thresholds` (ascending) <= each value, by binary search.
+
+    `index` (uint16) receives the result with its corner at (top, left). A NaN gets 0. All pixels
+    of a row take each step of the search together: the number of steps is fixed and the loop over
+    pixels has no branch, so it is vectorised.
+    """
+    rows, cols = values.shape
+    for i in range(rows):
+        row = values[i]
+        found = index[top + i, left : left + cols]  # thresholds known to be reached
+        found[:] = 0
+        length = len(thresholds)
+        while length > 0:
+            half = (length + 1) >> 1
+            for j in range(cols):
+                low = found[j]
+                reached = row[j] >= thresholds[np.int64(low) + half - 1]
+                found[j] = low + np.uint16(half) if reached else low
+            length -= half
+
+
+@kernel
+def index_by_comparison(values, thresholds, index, top, left):
+    """Do the work of `index_by_search` by comparing whole rows with one threshold at a time.
+
+    The inner loop is vectorised by the compiler, so this is the faster way for a few levels.
+    """
+    rows, cols = values.shape
+    for i in range(rows):
+        row = values[i]
+        found = index[top + i, left : left + cols]
+        found[:] = 0
+        for k in range(len(thresholds)):
+            threshold = thresholds[k]
+            for j in range(cols):
+                found[j] += np.uint16(row[j] >= threshold)
+
+
+@kernel
+def index_stack(values, thresholds, reach, few, index):
+    """Index a stack of images (n, h, w), each with its own thresholds (n, T) and reach (n).
+
+    Only the first `reach[k]` thresholds of image k lie within the type of its pixels.
+    """
+    for k in range(len(values)):
+        if reach[k] <= few:
+            index_by_comparison(values[k], thresholds[k, : reach[k]], index[k], 0, 0)
+        else:
+            index_by_search(values[k], thresholds[k, : reach[k]], index[k], 0, 0)
+
+
+@kernel
+def windows_ok(valid, ok):
+    """Write where a window has four valid pixels; `ok` is one row and column larger than `valid`.
+
+    Returns the number of such windows.
+    """
+    rows, cols = valid.shape
+    total = 0
+    ok[:] = 0
+    for i in range(1, rows):
+        for j in range(1, cols):
+            good = valid[i - 1, j - 1] & valid[i - 1, j] & valid[i, j - 1] & valid[i, j]
+            ok[i, j] = good
+            total += good
+    return total
+
+
+@kernel
+def count_windows(index, ok, table):
+    """Add the statistics of all counting windows to `table` (8, T + 1), one column an index.
+
+    Column k of a row holds how many sets (pixels, pairs, windows) have k as their maximum (or
+    minimum, for the last row), so one pass serves every level. Formulas: `formulas` of
+    `mfeat.functionals`; the eight rows: `mfeat.counts.STATISTICS`.
+    """
+    pixel = table[_PIXEL]
+    diagonal = table[_DIAGONAL]
+    horizontal = table[_H]
+    vertical = table[_V]
+    falling = table[_D]
+    rising = table[_A]
+    largest = table[_MAX]
+    smallest = table[_MIN]
+    rows = index.shape[0] - 1
+    cols = index.shape[1] - 1
+    for i in range(rows):
+        for j in range(cols):
+            a = index[i, j]
+            b = index[i, j + 1]
+            c = index[i + 1, j]
+            d = index[i + 1, j + 1]
+            upper_left = np.int64(ok[i, j])
+            upper_right = np.int64(ok[i, j + 1])
+            lower_left = np.int64(ok[i + 1, j])
+            lower_right = np.int64(ok[i + 1, j + 1])
+            ab = max(a, b)
+            ac = max(a, c)
+            ad = max(a, d)
+            bc = max(b, c)
+            diagonal[a] += upper_left + lower_right
+            pixel[a] += upper_left + upper_right + lower_left + lower_right
+            horizontal[ab] += upper_right + lower_right
+            vertical[ac] += lower_left + lower_right
+            falling[ad] += lower_right
+            rising[bc] += lower_right
+            largest[max(ad, bc)] += lower_right
+            smallest[min(min(a, d), min(b, c))] += lower_right
+
+
+@kernel
+def count_stack(index, ok, table):
+    """Count a stack: index (n, h + 1, w + 1), ok likewise or (1, ...), table (n, 8, T + 1)."""
+    shared = len(ok) == 1
+    for k in range(len(index)):
+        count_windows(index[k], ok[0 if shared else k], table[k])
+
+
+@kernel
+def survey(values, valid, usable):
+    """Write which pixels are usable: valid and not NaN; for floating-point images only.
+
+    Returns the number of unusable pixels and the flat position of the first valid infinity, or -1.
+    """
+    rows, cols = values.shape
+    missing = 0
+    infinite = -1
+    for i in range(rows):
+        for j in range(cols):
+            value = values[i, j]
+            good = valid[i, j] and not np.isnan(value)
+            usable[i, j] = good
+            missing += not good
+            if good and np.isinf(value) and infinite < 0:
+                infinite = i * cols + j
+    return missing, infinite
+
+
+@kernel
+def value_range(values, valid, low, high):
+    """Write the smallest and the largest valid value of each image of a stack (n, h, w)."""
+    for k in range(len(values)):
+        first = True
+        for i in range(values.shape[1]):
+            for j in range(values.shape[2]):
+                if valid[k, i, j]:
+                    value = values[k, i, j]
+                    if first or value < low[k]:
+                        low[k] = value
+                    if first or value > high[k]:
+                        high[k] = value
+                    first = False
+
+
+@kernel
+def _add_exactly(total, rest, j, value):
+    """Add to the pair total + rest without losing the rounding error (two-sum).
+
+    Source: D. E. Knuth, The Art of Computer Programming, vol. 2 (1969), section 4.2.2.
+    """
+    new = total[j] + value
+    back = new - total[j]
+    rest[j] += (total[j] - (new - back)) + (value - back)
+    total[j] = new
+
+
+@kernel
+def moments(values, valid, total, rest, mean, deviation):
+    """Write the mean and the (population) standard deviation of each image of a stack (n, h, w).
+
+    Sums run per column with their rounding errors carried along, so the result does not depend on
+    the order of the pixels and is the same, bit for bit, after rotation or reflection.
+    `total` and `rest` are scratch of length w + 1.
+    """
+    count, rows, cols = values.shape
+    for k in range(count):
+        n = 0
+        for power in range(1, 3):
+            total[:] = 0.0
+            rest[:] = 0.0
+            centre = mean[k] if power == 2 else 0.0
+            n = 0
+            for i in range(rows):
+                for j in range(cols):
+                    use = valid[k, i, j]
+                    term = values[k, i, j] - centre if use else 0.0
+                    if power == 2:
+                        term = term * term
+                    n += use
+                    _add_exactly(total, rest, j, term)
+            for j in range(cols):
+                _add_exactly(total, rest, cols, total[j])
+            for j in range(cols):
+                _add_exactly(total, rest, cols, rest[j])
+            result = (total[cols] + rest[cols]) / n if n else np.nan
+            if power == 1:
+                mean[k] = result
+            else:
+                deviation[k] = np.sqrt(result)

@@ -1,0 +1,244 @@
+"""Scalar fields derived from stacks of images: raw, smooth, band, slope, curvature.
+
+A derived value is valid only if all pixels of its stencil are; Gaussian smoothing fills its
+stencil by normalised convolution instead, and is valid where the pixel itself is. Values outside
+a patch are not invented for differences: slope is defined at the centres of 2x2 windows and
+curvature at inner pixels, so their fields are one and two pixels smaller than the image.
+
+Smoothing agrees with scipy.ndimage.gaussian_filter(mode="reflect", truncate=4.0) to float64
+rounding where nothing is missing.
+"""
+
+import math
+from collections.abc import Iterator
+from functools import lru_cache
+from typing import Any, NamedTuple
+
+import numpy as np
+
+from mfeat import _checks, _field_kernels, _kernels
+from mfeat.levels import Relief
+
+FAMILIES = ("raw", "smooth", "band", "slope", "curvature")
+SCALE_UNITS = ("pitch", "length")
+
+#: The wide Gaussian of a band has this many times the scale of the narrow one: octave bands, whose
+#: smoothings serve two bands each. Common practice.
+BAND_RATIO = 2.0
+
+#: Gaussian kernels reach this many standard deviations, as scipy.ndimage does by default.
+TRUNCATE = 4.0
+
+#: Below this many pixels a sampled Gaussian leaves the image as it is (exp(-8) = 3e-4 at a
+#: neighbour), so a smaller scale is taken for a mistake of units.
+SMALLEST_SIGMA = 0.25
+
+#: Rounding error of derived fields, as a share of the image's half range: some hundred operations
+#: of 2**-53 each, with a wide margin.
+ROUNDING = 1e-12
+
+#: By how much a field is smaller than its image, and in which power the pitch divides it.
+_SHRINK = {"raw": 0, "smooth": 0, "band": 0, "slope": 1, "curvature": 2}
+
+
+class Field(NamedTuple):
+    """One derived field: a family and the Gaussian scale at which it is taken.
+
+    The scale of "raw" is 0. Slope and curvature may have scale 0: no smoothing first.
+    """
+
+    family: str
+    scale: float = 0.0
+
+    @property
+    def name(self) -> str:
+        """Name in feature names: "raw", "smooth_2", "slope_0", "band_1.6"."""
+        if self.family == "raw":
+            return "raw"
+        text = f"{self.scale:g}"
+        return f"{self.family}_{text if float(text) == self.scale else repr(self.scale)}"
+
+
+def scales(name: str, value: Any, *, zero: bool) -> tuple[float, ...]:
+    """Check the scales of one family: a tuple or list of distinct numbers, in the given order."""
+    if isinstance(value, str) or not isinstance(value, tuple | list | np.ndarray):
+        raise TypeError(
+            f"{name} must be a tuple of Gaussian scales, () for none; got {value!r}. "
+            f"For one scale write {name}=({value!r},)"
+        )
+    checked = []
+    for position, scale in enumerate(value):
+        place = f"{name}[{position}]"
+        number = _checks.real(place, scale, minimum=0.0)
+        if number == 0.0 and not zero:
+            raise ValueError(f"{place} must be > 0; got {scale!r}")
+        if number in checked:
+            raise ValueError(f"{name} holds the scale {scale!r} twice: {value!r}")
+        checked.append(number)
+    return tuple(checked)
+
+
+def sigma_pixels(scale: float, pitch: tuple[float, float], scale_unit: str) -> tuple[float, float]:
+    """Return the Gaussian's standard deviation in pixels along rows' axis 0 and axis 1.
+
+    In unit "length" the scale is in the unit of the pitch; in unit "pitch" it is in multiples of
+    the pitch (for rectangular pixels: of the geometric mean of the two pitches).
+    """
+    dy, dx = pitch
+    length = scale if scale_unit == "length" else scale * math.sqrt(dy * dx)
+    return length / dy, length / dx
+
+
+def check_scale(
+    field: Field, shape: tuple[int, int], pitch: tuple[float, float], scale_unit: str
+) -> None:
+    """Refuse a scale that cannot act on images of this shape, and an image too small for a field.
+
+    Raises
+    ------
+    ValueError
+        With the field, the shape and what to change.
+    """
+    smallest = 2 + _SHRINK[field.family]
+    if min(shape) < smallest:
+        raise ValueError(
+            f"field {field.name} needs images of at least {smallest}x{smallest} pixels; got "
+            f"{shape[0]}x{shape[1]}"
+        )
+    if field.scale == 0.0:
+        return
+    widest = field.scale * (BAND_RATIO if field.family == "band" else 1.0)
+    if max(sigma_pixels(field.scale, pitch, scale_unit)) < SMALLEST_SIGMA:
+        raise ValueError(
+            f"field {field.name}: a scale of {field.scale:g} is "
+            f"{max(sigma_pixels(field.scale, pitch, scale_unit)):.3g} pixels at pitch {pitch}, too "
+            f"small to smooth anything (at least {SMALLEST_SIGMA} pixels). "
+            + _scale_hint(scale_unit)
+        )
+    across = max(
+        s / side for s, side in zip(sigma_pixels(widest, pitch, scale_unit), shape, strict=True)
+    )
+    if across > 1.0:
+        raise ValueError(
+            f"field {field.name}: its widest Gaussian has a standard deviation of {across:.3g} "
+            f"times the side of an image of {shape[0]}x{shape[1]} pixels at pitch {pitch}; nothing "
+            "would be left. Use smaller scales or larger images. " + _scale_hint(scale_unit)
+        )
+
+
+def _scale_hint(scale_unit: str) -> str:
+    if scale_unit == "length":
+        return 'Scales are in the unit of pitch (scale_unit="length")'
+    return 'Scales are in multiples of the pitch (scale_unit="pitch")'
+
+
+@lru_cache(maxsize=256)
+def gaussian_weights(sigma: float) -> np.ndarray:
+    """Return half of the sampled Gaussian kernel, centre first; its mirror image sums to 1 with it.
+
+    Examples
+    --------
+    >>> from mfeat.fields import gaussian_weights
+    >>> weights = gaussian_weights(1.0)
+    >>> len(weights), round(float(weights[0] + 2 * weights[1:].sum()), 12)
+    (5, 1.0)
+    """
+    if sigma == 0.0:
+        return np.ones(1)
+    distance = np.arange(int(TRUNCATE * sigma + 0.5) + 1)
+    weights = np.exp(-0.5 * (distance / sigma) ** 2)
+    return weights / (weights[0] + 2.0 * weights[1:].sum())
+
+
+def derive(
+    fields: tuple[Field, ...],
+    values: np.ndarray,
+    valid: np.ndarray | None,
+    pitch: tuple[float, float],
+    scale_unit: str,
+) -> Iterator[tuple[Field, Relief]]:
+    """Yield each field of a stack of images, in the order of `fields`.
+
+    Parameters
+    ----------
+    fields : tuple of Field
+    values : ndarray of shape (n, h, w)
+        Images in a type of `mfeat._checks.compiled_type`.
+    valid : ndarray of shape (n, h, w), uint8, or None
+        Valid pixels; None if all of them are. A stack is treated as a whole: images with missing
+        pixels are smoothed by normalised convolution, those without by plain convolution.
+    pitch : (float, float)
+    scale_unit : {"pitch", "length"}
+
+    Notes
+    -----
+    Memory: one float64 array of the stack's size for each distinct smoothing, and five more.
+    """
+    shape = values.shape[1:]
+    for field in fields:
+        check_scale(field, shape, pitch, scale_unit)
+    missing = valid is not None
+    if valid is None:
+        valid = np.ones(values.shape, dtype=np.uint8)
+    low, high = np.zeros(len(values), values.dtype), np.zeros(len(values), values.dtype)
+    _kernels.value_range(values, valid, low, high)
+    # Half of each before they are added: the sum of two large values would overflow.
+    offset = low.astype(np.float64) / 2 + high.astype(np.float64) / 2
+    half_range = high.astype(np.float64) / 2 - low.astype(np.float64) / 2
+    centred = values.astype(np.float64)
+    centred -= offset[:, None, None]
+    if missing:
+        centred[valid == 0] = 0.0
+    source = _Smoothings(centred, valid if missing else None, pitch, scale_unit)
+    for field in fields:
+        order = _SHRINK[field.family]
+        rounding = ROUNDING * half_range / min(pitch) ** order
+        if field.family == "raw":
+            yield field, Relief(values, valid, centred, offset, np.zeros(len(values)))
+            continue
+        if field.family == "band":
+            band = source.at(field.scale) - source.at(BAND_RATIO * field.scale)
+            yield field, Relief(band, valid, band, np.zeros(len(values)), rounding)
+            continue
+        smooth = source.at(field.scale)
+        if field.family == "smooth":
+            yield field, Relief(smooth, valid, smooth, offset, rounding)
+            continue
+        smaller = (len(values), shape[0] - order, shape[1] - order)
+        derived, defined = np.empty(smaller), np.empty(smaller, dtype=np.uint8)
+        by_kernel = (
+            _field_kernels.slope_stack
+            if field.family == "slope"
+            else _field_kernels.curvature_stack
+        )
+        by_kernel(smooth, valid, pitch[0], pitch[1], derived, defined)
+        yield field, Relief(derived, defined, derived, np.zeros(len(values)), rounding)
+
+
+class _Smoothings:
+    """Gaussian smoothings of one stack, each computed once and shared between the families."""
+
+    def __init__(self, centred, valid, pitch, scale_unit):
+        self._centred = centred
+        self._valid = valid
+        self._pitch = pitch
+        self._scale_unit = scale_unit
+        self._done = {0.0: centred}
+
+    def at(self, scale: float) -> np.ndarray:
+        """Return the stack smoothed at a scale; scale 0 is the stack itself."""
+        if scale not in self._done:
+            self._done[scale] = self._smooth(self._centred, scale)
+            if self._valid is not None:
+                support = self._smooth(self._valid.astype(np.float64), scale)
+                _field_kernels.normalise_stack(self._done[scale], support, self._valid)
+        return self._done[scale]
+
+    def _smooth(self, stack: np.ndarray, scale: float) -> np.ndarray:
+        sigma_rows, sigma_cols = sigma_pixels(scale, self._pitch, self._scale_unit)
+        along_columns, along_rows = gaussian_weights(sigma_rows), gaussian_weights(sigma_cols)
+        padded = np.empty(stack.shape[2] + 2 * (len(along_rows) - 1))
+        half = np.empty(stack.shape[1:])
+        out = np.empty_like(stack)
+        _field_kernels.smooth_stack(stack, along_rows, along_columns, padded, half, out)
+        return out

@@ -1,0 +1,229 @@
+"""Level rules: where the levels of a field lie, and what happens on fields without relief.
+
+"standard": mean + v * standard deviation of the field; "rank": order statistics of the field;
+"fixed": data units; "fitted": quantiles learned over a training set. The first two follow each
+field of each patch, the last two are the same for all patches.
+
+A field is *flat* when its standard deviation is within the rounding error of its computation (all
+pixels equal, or for instance the slope of a perfect plane). Its noise would otherwise be blown up
+into a texture. All pixels of a flat field count as equal to its mean: the area steps from 1 to 0
+where the levels pass the mean (at v = 0 under "standard"; under "rank" it is 1 at every level),
+contour and Euler number are 0.
+"""
+
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+
+from mfeat import _checks, _kernels
+from mfeat.counts import thresholds_for
+
+RULES = ("standard", "rank", "fixed", "fitted")
+
+#: Range of the levels where none is given, in the rule's own units.
+DEFAULT_RANGES = {"standard": (-2.5, 2.5), "rank": (0.0, 1.0), "fitted": (0.0, 1.0)}
+
+#: Levels of rule "standard" lie this many standard deviations below their nominal place, so that
+#: pixels tied with a level fall on the same side of it under every gain and offset of the image.
+TIE = 1e-9
+
+
+@dataclass
+class Relief:
+    """What the level rules need to know of a stack of fields (n, h, w).
+
+    Attributes
+    ----------
+    values : ndarray of shape (n, h, w)
+        The fields, in a type of `mfeat._checks.compiled_type`.
+    valid : ndarray of shape (n, h, w), uint8
+        1 where a pixel of the field is defined by valid pixels alone.
+    centred : ndarray of shape (n, h, w), float64
+        The fields minus `offset`.
+    offset : ndarray of shape (n,), float64
+        Subtracted before fields are derived, so that an image far from zero loses no digits.
+    rounding : ndarray of shape (n,), float64
+        A bound of the rounding error of the values; a smaller standard deviation means flat.
+    """
+
+    values: np.ndarray
+    valid: np.ndarray
+    centred: np.ndarray
+    offset: np.ndarray
+    rounding: np.ndarray
+
+    def __post_init__(self):
+        count, _, cols = self.values.shape
+        self.mean = np.empty(count)
+        self.deviation = np.empty(count)
+        scratch = np.empty((2, cols + 1))
+        _kernels.moments(
+            self.centred, self.valid, scratch[0], scratch[1], self.mean, self.deviation
+        )
+        undefined = np.isnan(self.mean)  # no valid pixel; nothing of such a field is counted
+        self.mean[undefined] = self.deviation[undefined] = 0.0
+        self.flat = (self.deviation <= self.rounding) & ~undefined
+        self.deviation[self.flat] = 0.0
+
+
+@dataclass
+class PlacedLevels:
+    """Levels of each field of a stack, ready for counting.
+
+    `thresholds` (n, T) are in the type of the pixels; of row k the first `reach[k]` are used, the
+    others lie above every possible pixel. `shown` (n, T) are the levels in data units.
+    """
+
+    thresholds: np.ndarray
+    reach: np.ndarray
+    shown: np.ndarray
+
+
+def level_values(levels: Any, rule: str, level_range: Any = None) -> np.ndarray:
+    """Return the levels in the units of a rule, as a 1-D float64 array.
+
+    Parameters
+    ----------
+    levels : int or sequence of float
+        A number of levels (1 to 65,535) to spread over `level_range`, or the levels themselves:
+        standard deviations from the mean ("standard"), fractions of the pixels from 0 to 1
+        ("rank", "fitted"), data units ("fixed"). A sequence must be strictly ascending.
+    rule : {"standard", "rank", "fixed", "fitted"}
+    level_range : (float, float), optional
+        First and last level of rules "standard" and "fixed"; the fractions between which levels of
+        rules "rank" and "fitted" are centred in equal steps. Default (-2.5, 2.5) for "standard",
+        (0, 1) for "rank" and "fitted"; required for "fixed" with a number of levels.
+
+    Examples
+    --------
+    >>> from mfeat.levels import level_values
+    >>> level_values(5, "standard")
+    array([-2.5 , -1.25,  0.  ,  1.25,  2.5 ])
+    >>> level_values(4, "rank")
+    array([0.125, 0.375, 0.625, 0.875])
+    >>> level_values([10, 20, 40], "fixed")
+    array([10., 20., 40.])
+    """
+    _checks.choice("level_rule", rule, RULES)
+    if isinstance(levels, int | np.integer | float | np.floating):
+        count = _checks.integer("levels", levels, minimum=1, maximum=_checks.MAX_LEVELS)
+        low, high = _level_range(level_range, rule)
+        if rule in ("rank", "fitted"):
+            return low + (high - low) * (np.arange(count) + 0.5) / count
+        return np.linspace(low, high, count) if count > 1 else np.array([(low + high) / 2])
+    if level_range is not None:
+        raise ValueError(
+            f"level_range={level_range!r} has no meaning beside explicit levels "
+            f"{_checks.show(np.asarray(levels))}; give one of the two"
+        )
+    values = _checks.level_sequence(levels).astype(np.float64)
+    if rule in ("rank", "fitted") and (values[0] < 0.0 or values[-1] > 1.0):
+        raise ValueError(
+            f'levels of rule "{rule}" are fractions of the pixels, from 0 to 1; '
+            f"got {_checks.show(values)}"
+        )
+    return values
+
+
+def _level_range(level_range: Any, rule: str) -> tuple[float, float]:
+    if level_range is None:
+        if rule == "fixed":
+            raise ValueError(
+                'level_rule "fixed" needs level_range=(lowest, highest) in data units, or explicit '
+                "levels; an image does not tell what range its successors will have"
+            )
+        return DEFAULT_RANGES[rule]
+    if not isinstance(level_range, tuple | list | np.ndarray) or len(level_range) != 2:
+        raise ValueError(f"level_range must be two numbers (lowest, highest); got {level_range!r}")
+    low = _checks.real("level_range[0]", level_range[0])
+    high = _checks.real("level_range[1]", level_range[1])
+    if not low < high:
+        raise ValueError(f"level_range must ascend; got ({low}, {high})")
+    if rule in ("rank", "fitted") and not 0.0 <= low < high <= 1.0:
+        raise ValueError(
+            f'level_range of rule "{rule}" holds fractions from 0 to 1; got ({low}, {high})'
+        )
+    return low, high
+
+
+def place(relief: Relief, rule: str, values: np.ndarray) -> PlacedLevels:
+    """Place levels, given in the units of `rule`, on each field of a stack.
+
+    For rule "fitted", `values` are the learned levels in data units, as for "fixed".
+    """
+    if rule == "standard":
+        steps = (values - TIE) * relief.deviation[:, None]
+        shown = (relief.offset + relief.mean)[:, None] + steps
+        own = relief.mean[:, None] + steps
+    elif rule == "rank":
+        own = _order_statistics(relief, values)
+        shown = own.astype(np.float64)
+        if relief.values is relief.centred:
+            shown = shown + relief.offset[:, None]
+    else:
+        shown = np.broadcast_to(values, (len(relief.values), len(values)))
+        own = shown - relief.offset[:, None]
+    if relief.values is not relief.centred and rule != "rank":
+        own = shown  # the pixels kept their offset and their type
+    thresholds, reach = thresholds_for(relief.values.dtype, own)
+    if relief.flat.any():
+        shown = np.array(shown)
+        for k in np.flatnonzero(relief.flat):
+            reached = _reached_by_flat(relief, k, rule, values)
+            thresholds[k] = relief.values[k][relief.valid[k] == 1].min()
+            reach[k] = reached
+            if rule in ("standard", "rank"):
+                level = relief.offset[k] + relief.mean[k]
+                shown[k, :reached] = level
+                shown[k, reached:] = np.nextafter(level, np.inf)
+    return PlacedLevels(thresholds, reach, shown)
+
+
+def _reached_by_flat(relief: Relief, k: int, rule: str, values: np.ndarray) -> int:
+    """Return how many levels a flat field reaches, all its pixels being its mean."""
+    if rule == "rank":
+        return len(values)
+    if rule == "standard":
+        return int(np.count_nonzero(values <= 0.0))
+    level = relief.offset[k] + relief.mean[k] + relief.rounding[k]
+    return int(np.count_nonzero(values <= level))
+
+
+def _order_statistics(relief: Relief, fractions: np.ndarray) -> np.ndarray:
+    """Return pixel values of given rank: exact, so monotone tone changes leave the counts alone.
+
+    Of n sorted valid values the one at position floor(p n) is the level of fraction p, so that a
+    fraction 1 - p of the pixels reaches it where no values are tied.
+    """
+    count = len(relief.values)
+    out = np.empty((count, len(fractions)), dtype=relief.values.dtype)
+    for k in range(count):
+        ranked = np.sort(relief.values[k][relief.valid[k] == 1])
+        if not ranked.size:  # an image without a valid pixel is marked by its caller
+            out[k] = 0
+            continue
+        positions = np.minimum((fractions * ranked.size).astype(np.int64), ranked.size - 1)
+        out[k] = ranked[positions]
+    return out
+
+
+def pooled_quantiles(samples: list[np.ndarray], fractions: np.ndarray) -> np.ndarray:
+    """Return quantiles of pooled samples, for rule "fitted".
+
+    Source: definition 1 (the inverse of the empirical distribution) of R. J. Hyndman and Y. Fan,
+    Sample quantiles in statistical packages, The American Statistician 50 (1996), 361-365.
+    """
+    return np.quantile(np.concatenate(samples), fractions, method="inverted_cdf")
+
+
+def sample_of(relief: Relief, k: int, size: int) -> np.ndarray:
+    """Return up to `size` evenly spaced order statistics of field k, with its offset, as float64.
+
+    They stand for the field in the pool of `pooled_quantiles`: patches weigh alike however many
+    pixels they have, and the memory of `fit` does not grow with the size of the patches.
+    """
+    ranked = np.sort(relief.centred[k][relief.valid[k] == 1]) + relief.offset[k]
+    if len(ranked) <= size:
+        return ranked
+    return ranked[((np.arange(size) + 0.5) * len(ranked) / size).astype(np.int64)]

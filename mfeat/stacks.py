@@ -1,0 +1,180 @@
+"""Patches as users hold them, sorted into stacks of one shape, type and completeness.
+
+The vectors of a patch are the same in whatever stack it is computed, so stacks can be cut for
+speed and memory alone.
+"""
+
+from dataclasses import dataclass
+from typing import Any, NamedTuple
+
+import numpy as np
+
+from mfeat import _checks, _kernels
+
+#: Pixels of a stack; bounds the memory of a worker and is small enough for the processor's cache.
+STACK_PIXELS = 1 << 17
+
+
+@dataclass(frozen=True)
+class Patches:
+    """Checked patches: `images[k][c]` is channel c of patch k, a 2-D array."""
+
+    images: list[list[np.ndarray]]
+    n_channels: int
+
+    def __len__(self) -> int:
+        return len(self.images)
+
+
+class Stack(NamedTuple):
+    """Images of one shape and type: `places` in their group, pixels, valid pixels (None: all)."""
+
+    places: np.ndarray
+    values: np.ndarray
+    valid: np.ndarray | None
+
+
+@dataclass(frozen=True)
+class Group:
+    """Images of one channel, shape and type, in the order of X; a unit of parallel work.
+
+    The images are views of the user's arrays; a worker copies those of its own group only.
+    """
+
+    channel: int
+    positions: list[int]
+    images: list[np.ndarray]
+
+    def stacks(self) -> list[Stack]:
+        """Return the images stacked: those without missing pixels, then those with some."""
+        valid = self._valid()
+        values = _checks.compiled_type(np.stack([np.asarray(image) for image in self.images]))
+        complete = np.array([v is None for v in valid])
+        if complete.all():
+            return [Stack(np.arange(len(values)), values, None)]
+        found = []
+        if complete.any():
+            found.append(Stack(np.flatnonzero(complete), _part(values, complete), None))
+        present = np.stack([v for v in valid if v is not None])
+        found.append(Stack(np.flatnonzero(~complete), _part(values, ~complete), present))
+        return found
+
+    def _valid(self) -> list[np.ndarray | None]:
+        first = self.images[0]
+        masked = any(isinstance(image, np.ma.MaskedArray) for image in self.images)
+        whole = not masked and (
+            first.dtype.kind != "f" or all(np.isfinite(image).all() for image in self.images)
+        )
+        if whole:
+            return [None] * len(self.images)
+        return [
+            _checks.valid_pixels(image, None, f"X[{position}]")
+            for position, image in zip(self.positions, self.images, strict=True)
+        ]
+
+
+def _part(values: np.ndarray, chosen: np.ndarray) -> np.ndarray:
+    return _checks.read_only(np.ascontiguousarray(values[chosen]))
+
+
+def collect(X: Any, channels: Any) -> Patches:
+    """Check X and return its patches without copying pixels."""
+    if isinstance(X, list | tuple) or (isinstance(X, np.ndarray) and X.dtype == object):
+        return _from_list(X, channels)
+    if not isinstance(X, np.ndarray):
+        if hasattr(X, "toarray"):
+            raise TypeError(
+                f"X is a sparse matrix ({type(X).__name__}); patches are dense arrays: give an "
+                "array of shape (n, h, w) or a list of 2-D arrays"
+            )
+        if isinstance(X, str | bytes) or not hasattr(X, "__len__"):
+            raise TypeError(
+                "X must be an array of shape (n, h, w) or (n, h, w, c), or a list of 2-D arrays; "
+                f"got {type(X).__name__}"
+            )
+        X = np.asarray(X) if hasattr(X, "__array__") else list(X)
+        return collect(X, channels)
+    if X.ndim not in (3, 4):
+        hint = ""
+        if X.ndim == 2:
+            hint = ". For one image write X[np.newaxis], or use minkowski_curves(image)"
+        raise ValueError(
+            "X must have shape (n, h, w) or, with channels, (n, h, w, c); "
+            f"got an array with {X.ndim} dimensions, shape {X.shape}{hint}"
+        )
+    if len(X) == 0:
+        raise ValueError(
+            f"X holds no patch: found 0 sample(s) (shape={X.shape}) while a minimum "
+            "of 1 is required"
+        )
+    number = _n_channels(channels)
+    if X.ndim == 4 and channels is None:
+        raise ValueError(
+            f"X has shape {X.shape}, so {X.shape[3]} channels, but channels is None; name them, "
+            f"e.g. channels={tuple(f'c{k}' for k in range(min(X.shape[3], 4)))!r}"
+        )
+    if X.ndim == 4 and X.shape[3] != number:
+        raise ValueError(
+            f"X has {X.shape[3]} channels (shape {X.shape}), but channels names {number}: "
+            f"{tuple(channels)!r}"
+        )
+    if X.ndim == 3 and channels is not None:
+        raise ValueError(
+            f"channels={tuple(channels)!r} needs X of shape (n, h, w, {number}); got {X.shape}"
+        )
+    _checks.image(X[0] if X.ndim == 3 else X[0, :, :, 0], "X[0]")  # type and size of them all
+    if not X.dtype.isnative:
+        X = X.astype(X.dtype.newbyteorder("="))
+    if X.ndim == 3:
+        return Patches([[image] for image in X], 1)
+    return Patches([[image[:, :, c] for c in range(number)] for image in X], number)
+
+
+def _n_channels(channels: Any) -> int:
+    return 1 if channels is None else len(channels)
+
+
+def _from_list(X: Any, channels: Any) -> Patches:
+    if len(X) == 0:
+        raise ValueError("X holds no patch: the list is empty, found 0 sample(s)")
+    number = _n_channels(channels)
+    images = []
+    for k, patch in enumerate(X):
+        patch = patch if isinstance(patch, np.ndarray) else np.asarray(patch)
+        if channels is None:
+            if patch.ndim == 3:
+                raise ValueError(
+                    f"X[{k}] has shape {patch.shape}: three dimensions mean channels, but channels "
+                    "is None. Name them, or give 2-D arrays"
+                )
+            images.append([_checks.image(patch, f"X[{k}]")])
+            continue
+        if patch.ndim != 3 or patch.shape[2] != number:
+            raise ValueError(
+                f"X[{k}] has shape {patch.shape}, but channels={tuple(channels)!r} needs "
+                f"(h, w, {number}) for every patch"
+            )
+        images.append([_checks.image(patch[:, :, c], f"X[{k}]") for c in range(number)])
+    return Patches(images, number)
+
+
+def group(patches: Patches) -> list[Group]:
+    """Sort patches into groups of at most `STACK_PIXELS` pixels (or one patch)."""
+    growing: dict[tuple, Group] = {}
+    done: list[Group] = []
+    for position, channels in enumerate(patches.images):
+        for channel, image in enumerate(channels):
+            key = (channel, image.shape, image.dtype)
+            entry = growing.setdefault(key, Group(channel, [], []))
+            entry.positions.append(position)
+            entry.images.append(image)
+            if (len(entry.images) + 1) * image.size > STACK_PIXELS:
+                done.append(growing.pop(key))
+    return done + list(growing.values())
+
+
+def valid_fractions(valid: np.ndarray) -> np.ndarray:
+    """Return the share of 2x2 windows with four valid pixels of each image of a stack."""
+    rows, cols = valid.shape[1:]
+    ok = np.empty((rows + 1, cols + 1), dtype=np.uint8)
+    return np.array([_kernels.windows_ok(v, ok) for v in valid]) / ((rows - 1) * (cols - 1))

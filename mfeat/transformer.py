@@ -1,0 +1,482 @@
+"""`MinkowskiCurves`: image patches in, fixed-length vectors out, as a scikit-learn transformer."""
+
+import pickle
+from dataclasses import replace
+from numbers import Integral, Real
+from typing import Any, ClassVar
+
+import numpy as np
+from joblib import Parallel, delayed
+from sklearn.base import BaseEstimator, TransformerMixin
+from sklearn.exceptions import NotFittedError
+from sklearn.utils._param_validation import Interval, Options, StrOptions
+
+from mfeat import _checks, stacks
+from mfeat.fields import FAMILIES, SCALE_UNITS, Field, scales
+from mfeat.functionals import CONNECTIVITIES, CONTOUR_ESTIMATORS, FUNCTIONALS
+from mfeat.levels import RULES, level_values, pooled_quantiles
+from mfeat.plan import Feature, VectorPlan, canonical_sha256
+from mfeat.vector import samples, vectors
+
+#: Total number of pixel values that `fit` keeps of each field to learn levels from.
+FIT_SAMPLE = 1 << 21
+
+#: Plans by their parameters: checking and resolving them again for each patch of a stream would
+#: cost more than the patch.
+_PLANS: dict[bytes, VectorPlan] = {}
+_MOST_PLANS = 64
+
+
+class MinkowskiCurves(TransformerMixin, BaseEstimator):
+    """Turn image patches into vectors of Minkowski curves.
+
+    Each patch becomes several scalar fields (the image itself, Gaussian smoothings, bands, slope,
+    curvature); of each field the area, contour length and Euler number of its level sets are taken
+    at every level, as densities in physical units. The vector's length, names and order follow
+    from the parameters alone.
+
+    Parameters
+    ----------
+    functionals : tuple of {"area", "contour", "euler"}, default ("area", "contour", "euler")
+        Functionals to take; their order in the vector is fixed.
+    levels : int, sequence of float, or dict, default 16
+        Number of levels (1 to 65,535), or the levels themselves in the units of the rule. A dict
+        gives either one per field family, e.g. ``{"raw": 32, "slope": 8}``.
+    level_rule : {"standard", "rank", "fixed", "fitted"}, default "standard"
+        "standard": standard deviations of each patch's field from its mean; gain and offset of the
+        image do not matter. "rank": fractions of the field's pixels; on the raw field no monotone
+        tone change matters. "fixed": data units of the field. "fitted": quantiles of the field over
+        the training patches, learned in `fit`.
+    level_range : (float, float) or dict, optional
+        Range of a number of levels in the units of the rule; default (-2.5, 2.5) for "standard",
+        (0, 1) for "rank" and "fitted"; required for "fixed". A dict gives one per field family.
+    raw : bool, default True
+        Whether the image itself is a field.
+    smooth : tuple of float, default (1, 2, 4)
+        Scales of the Gaussian smoothings; () for none.
+    band : tuple of float, default (1, 2)
+        Scales of the bands: the smoothing at s minus that at 2 s.
+    slope : tuple of float, default (0, 2)
+        Scales at which the gradient magnitude is taken (0: of the image itself), in data units per
+        length.
+    curvature : tuple of float, default ()
+        Scales at which minus half the Laplacian is taken, in data units per length^2.
+    location_scale : bool, default True
+        Whether the standard deviation of each field, and the mean of raw and slope fields, are
+        features.
+    directional : bool, default False
+        Whether the crossing densities of four directions are features; they tell orientations
+        apart and change when the part is turned.
+    connectivity : {4, 8, "mean"}, default "mean"
+        Connectivity of the Euler number.
+    contour_estimator : {"crofton-4", "crofton-2", "pixel-edge", "duda"}, default "crofton-4"
+        See `mfeat.functionals.contour`.
+    pitch : float or (float, float), default 1.0
+        Pixel pitch, or (row pitch, column pitch).
+    scale_unit : {"pitch", "length"}, default "pitch"
+        Whether scales count pitches, or are lengths in the unit of `pitch`. With "length" the same
+        surface scanned at another pitch gives comparable vectors: set the new `pitch`, leave the
+        scales.
+    channels : tuple of str, optional
+        Names of the channels of X of shape (n, h, w, c); each has a vector of its own, side by
+        side. Required for 4-D X, refused for others.
+    min_valid : float, default 0.5
+        Smallest share of 2x2 windows with four valid pixels that a patch may have, 0 to 1. In any
+        case each field needs at least one such window.
+    below_min_valid : {"error", "nan"}, default "error"
+        What becomes of a patch below it: a ValueError that lists all such patches, or a row of NaN.
+    dtype : {"float32", "float64"}, default "float32"
+        Type of the output.
+    n_jobs : int, optional
+        Number of joblib workers: None is 1 unless in a joblib context, -1 all processors. Threads
+        by default, since the compiled kernels run without Python's lock; any joblib backend gives
+        identical values.
+
+    Attributes
+    ----------
+    levels_ : dict of str to ndarray
+        Learned levels of each field, in data units; only after `fit` with rule "fitted".
+
+    Notes
+    -----
+    X is an array (n, h, w), an array (n, h, w, c), or a list of 2-D arrays of any sizes; integers,
+    bool or floating-point. Missing pixels are NaN, or masked in a numpy.ma.MaskedArray. A patch
+    without relief (all pixels equal) has a defined vector; see `mfeat.levels`.
+
+    Apart from rule "fitted", nothing is learned, and `transform` works without `fit`.
+
+    Memory beyond X and the result: about 20 MB a worker for the usual settings (patches are taken
+    in groups of some 130,000 pixels), or some 150 bytes a pixel of the largest patch if that is
+    more.
+
+    Examples
+    --------
+    >>> import numpy as np
+    >>> from mfeat import MinkowskiCurves
+    >>> patches = np.random.default_rng(0).normal(size=(5, 64, 64))
+    >>> transformer = MinkowskiCurves(levels=8)
+    >>> X = transformer.fit_transform(patches)
+    >>> X.shape, X.dtype
+    ((5, 203), dtype('float32'))
+    >>> [str(name) for name in transformer.get_feature_names_out()[:4]]
+    ['raw_mean', 'raw_std', 'raw_area_00', 'raw_area_01']
+    """
+
+    _parameter_constraints: ClassVar[dict] = {
+        "functionals": [tuple, list],
+        "levels": [Interval(Real, None, None, closed="neither"), "array-like", dict],
+        "level_rule": [StrOptions(set(RULES))],
+        "level_range": [tuple, list, dict, None],
+        "raw": ["boolean"],
+        "smooth": [tuple, list, np.ndarray],
+        "band": [tuple, list, np.ndarray],
+        "slope": [tuple, list, np.ndarray],
+        "curvature": [tuple, list, np.ndarray],
+        "location_scale": ["boolean"],
+        "directional": ["boolean"],
+        "connectivity": [StrOptions({"mean"}), Options(Integral, {4, 8})],
+        "contour_estimator": [StrOptions(set(CONTOUR_ESTIMATORS))],
+        "pitch": [Interval(Real, 0, None, closed="neither"), tuple, list, np.ndarray],
+        "scale_unit": [StrOptions(set(SCALE_UNITS))],
+        "channels": [tuple, list, None],
+        "min_valid": [Interval(Real, 0, 1, closed="both")],
+        "below_min_valid": [StrOptions({"error", "nan"})],
+        "dtype": [StrOptions({"float32", "float64"})],
+        "n_jobs": [int, None],
+    }
+
+    def __init__(
+        self,
+        functionals=FUNCTIONALS,
+        levels=16,
+        level_rule="standard",
+        level_range=None,
+        raw=True,
+        smooth=(1, 2, 4),
+        band=(1, 2),
+        slope=(0, 2),
+        curvature=(),
+        location_scale=True,
+        directional=False,
+        connectivity="mean",
+        contour_estimator="crofton-4",
+        pitch=1.0,
+        scale_unit="pitch",
+        channels=None,
+        min_valid=0.5,
+        below_min_valid="error",
+        dtype="float32",
+        n_jobs=None,
+    ):
+        self.functionals = functionals
+        self.levels = levels
+        self.level_rule = level_rule
+        self.level_range = level_range
+        self.raw = raw
+        self.smooth = smooth
+        self.band = band
+        self.slope = slope
+        self.curvature = curvature
+        self.location_scale = location_scale
+        self.directional = directional
+        self.connectivity = connectivity
+        self.contour_estimator = contour_estimator
+        self.pitch = pitch
+        self.scale_unit = scale_unit
+        self.channels = channels
+        self.min_valid = min_valid
+        self.below_min_valid = below_min_valid
+        self.dtype = dtype
+        self.n_jobs = n_jobs
+
+    def fit(self, X: Any, y: Any = None) -> "MinkowskiCurves":
+        """Check the parameters and the patches; learn levels if the rule is "fitted".
+
+        Parameters
+        ----------
+        X : array of shape (n, h, w) or (n, h, w, c), or list of 2-D arrays
+            Patches; see the Notes of the class.
+        y : ignored
+
+        Returns
+        -------
+        self
+        """
+        plan = self._plan()
+        patches = stacks.collect(X, self.channels)
+        self.__dict__.pop("levels_", None)
+        if plan.level_rule == "fitted":
+            self.levels_ = self._learn(plan, patches)
+        return self
+
+    def transform(self, X: Any) -> np.ndarray:
+        """Return one vector a patch.
+
+        Parameters
+        ----------
+        X : array of shape (n, h, w) or (n, h, w, c), or list of 2-D arrays
+            Patches; see the Notes of the class.
+
+        Returns
+        -------
+        ndarray of shape (n, n_features), float32 or float64
+            Rows of NaN for patches refused under ``below_min_valid="nan"``.
+
+        Raises
+        ------
+        ValueError
+            For patches that are too small, hold infinities, or have too few valid pixels.
+        NotFittedError
+            With rule "fitted", before `fit`.
+        """
+        plan = self._plan(learned=True)
+        patches = stacks.collect(X, self.channels)
+        span = plan.length()
+        out = np.full((len(patches), span * patches.n_channels), np.nan, dtype=self.dtype)
+        groups = stacks.group(patches)
+        done = self._parallel(_rows, plan, groups, min_valid=float(self.min_valid))
+        refused = []
+        for group, (rows, reasons) in zip(groups, done, strict=True):
+            start = group.channel * span
+            out[group.positions, start : start + span] = rows
+            refused.extend(
+                (int(position), group.channel, reason)
+                for position, reason in zip(group.positions, reasons, strict=True)
+                if reason
+            )
+        self._settle(refused, out)
+        return out
+
+    def get_feature_names_out(self, input_features: Any = None) -> np.ndarray:
+        """Return the names of the vector's numbers, e.g. "smooth_2_contour_07".
+
+        Parameters
+        ----------
+        input_features : ignored
+            Present for scikit-learn's interface.
+
+        Returns
+        -------
+        ndarray of str objects
+        """
+        return np.array([feature.name for feature in self.feature_table()], dtype=object)
+
+    def feature_table(self) -> list[Feature]:
+        """Return what each number of the vector is, in order.
+
+        Returns
+        -------
+        list of Feature
+            Named tuples (name, field, scale, functional, level, unit);
+            ``pandas.DataFrame(transformer.feature_table())`` is a table.
+
+        Examples
+        --------
+        >>> from mfeat import MinkowskiCurves
+        >>> MinkowskiCurves(levels=2).feature_table()[4]
+        Feature(name='raw_contour_00', field='raw', scale=0.0, functional='contour', level=-2.5,
+        unit='1/l')
+        """
+        return self._plan().all_features()
+
+    def settings(self) -> dict[str, Any]:
+        """Return all that the values depend on (not `n_jobs`), in types that JSON knows."""
+        return self._plan(learned=True).settings() | {
+            "min_valid": float(self.min_valid),
+            "below_min_valid": self.below_min_valid,
+        }
+
+    def fingerprint(self) -> str:
+        """Return the SHA-256 of the settings as canonical JSON: 64 hexadecimal digits.
+
+        Equal settings have equal fingerprints on every machine. With rule "fitted" the learned
+        levels are part of it, so it needs `fit` first.
+
+        Examples
+        --------
+        >>> from mfeat import MinkowskiCurves
+        >>> one = MinkowskiCurves(smooth=(1, 2), n_jobs=2)
+        >>> other = MinkowskiCurves(smooth=[1.0, 2.0])
+        >>> one.fingerprint() == other.fingerprint()
+        True
+        """
+        return canonical_sha256(self.settings())
+
+    def _plan(self, learned: bool = False) -> VectorPlan:
+        """Return the plan of the parameters as they are now, with or without learned levels."""
+        parameters = [getattr(self, name) for name in self._parameter_constraints]
+        try:
+            key = pickle.dumps(parameters)
+        except (pickle.PicklingError, TypeError, AttributeError):
+            return self._resolve()  # where it will be said which parameter is wrong
+        plan = _PLANS.get(key)
+        if plan is None:
+            plan = self._resolve()
+            if len(_PLANS) >= _MOST_PLANS:
+                _PLANS.clear()
+            _PLANS[key] = plan
+        if learned and plan.level_rule == "fitted":
+            if not hasattr(self, "levels_"):
+                raise NotFittedError(
+                    'MinkowskiCurves with level_rule="fitted" learns its levels from training '
+                    "patches: call fit before this"
+                )
+            return replace(plan, learned=self.levels_)
+        return plan
+
+    def _resolve(self) -> VectorPlan:
+        """Check all parameters and turn them into a plan."""
+        self._validate_params()
+        fields = self._fields()
+        channels = self._channel_names()
+        per_family = {}
+        for family in {field.family for field in fields}:
+            per_family[family] = level_values(
+                _of_family("levels", self.levels, family),
+                self.level_rule,
+                _of_family("level_range", self.level_range, family),
+            )
+        plan = VectorPlan(
+            fields=fields,
+            functionals=self._functionals(),
+            level_rule=self.level_rule,
+            level_values={field.name: per_family[field.family] for field in fields},
+            location_scale=bool(self.location_scale),
+            directional=bool(self.directional),
+            connectivity=_checks.choice("connectivity", self.connectivity, CONNECTIVITIES),
+            contour_estimator=self.contour_estimator,
+            pitch=_checks.pitch(self.pitch),
+            scale_unit=self.scale_unit,
+            dtype=np.dtype(self.dtype),
+            channels=channels,
+        )
+        if plan.length() == 0:
+            raise ValueError(
+                "the vector would be empty: functionals is (), directional and location_scale are "
+                "False; switch one of them on"
+            )
+        return plan
+
+    def _fields(self) -> tuple[Field, ...]:
+        fields = [Field("raw")] if self.raw else []
+        for family in FAMILIES[1:]:
+            zero = family in ("slope", "curvature")
+            fields += [Field(family, s) for s in scales(family, getattr(self, family), zero=zero)]
+        if not fields:
+            raise ValueError(
+                "no field is left: raw is False and smooth, band, slope and curvature are (); "
+                "give at least one"
+            )
+        return tuple(fields)
+
+    def _functionals(self) -> tuple[str, ...]:
+        names = tuple(_checks.choice("functionals", f, FUNCTIONALS) for f in self.functionals)
+        if len(set(names)) < len(names):
+            raise ValueError(f"functionals holds a name twice: {names!r}")
+        return names
+
+    def _channel_names(self) -> tuple[str, ...] | None:
+        if self.channels is None:
+            return None
+        names = tuple(self.channels)
+        if (
+            not names
+            or not all(isinstance(n, str) and n for n in names)
+            or (len(set(names)) < len(names))
+        ):
+            raise ValueError(f"channels must be distinct, non-empty names; got {self.channels!r}")
+        return names
+
+    def _parallel(self, work, plan: VectorPlan, groups: list, **options: Any) -> list:
+        if len(groups) == 1:  # no scheduling for a single patch in a stream
+            return [work(plan, groups[0], **options)]
+        return Parallel(n_jobs=self.n_jobs, prefer="threads")(
+            delayed(work)(plan, group, **options) for group in groups
+        )
+
+    def _learn(self, plan: VectorPlan, patches: stacks.Patches) -> dict[str, np.ndarray]:
+        """Learn levels as quantiles of each field over all patches of all channels."""
+        size = max(16, FIT_SAMPLE // max(1, len(patches) * patches.n_channels))
+        found = self._parallel(_samples, plan, stacks.group(patches), size=size)
+        learned = {}
+        for field in plan.fields:
+            pool = [sample for part in found for sample in part[field.name] if len(sample)]
+            if not pool:
+                raise ValueError(
+                    f"no patch has a valid pixel of field {field.name}, so no level can be learned"
+                )
+            learned[field.name] = pooled_quantiles(pool, plan.level_values[field.name])
+        return learned
+
+    def _settle(self, refused: list[tuple[int, int, str]], out: np.ndarray) -> None:
+        """Raise for refused patches, or mark their whole rows."""
+        if not refused:
+            return
+        if self.below_min_valid == "error":
+            shown = "; ".join(
+                f"X[{position}]"
+                + (f" channel {self.channels[channel]!r}" if self.channels else "")
+                + f": {reason}"
+                for position, channel, reason in sorted(refused)[:5]
+            )
+            raise ValueError(
+                f"{len(refused)} of {len(out)} patches have too few valid pixels. {shown}"
+                + ("; ..." if len(refused) > 5 else "")
+                + '. Leave them out, lower min_valid, or set below_min_valid="nan" to get rows of '
+                "NaN for them"
+            )
+        out[[position for position, _, _ in refused]] = np.nan
+
+    def __sklearn_tags__(self):
+        tags = super().__sklearn_tags__()
+        tags.input_tags.two_d_array = False
+        tags.input_tags.three_d_array = True
+        tags.input_tags.allow_nan = True
+        tags.requires_fit = self.level_rule == "fitted"
+        tags.transformer_tags.preserves_dtype = []
+        return tags
+
+
+def _of_family(name: str, value: Any, family: str) -> Any:
+    """Return a parameter for one family, where it may be a dict over families."""
+    if not isinstance(value, dict):
+        return value
+    unknown = sorted(set(value) - set(FAMILIES), key=str)
+    if unknown:
+        raise ValueError(f"{name} has unknown field families {unknown}; known are {list(FAMILIES)}")
+    if family not in value:
+        raise ValueError(
+            f"{name} is a dict without an entry for {family!r}, a family in use; it has "
+            f"{list(value)}"
+        )
+    return value[family]
+
+
+def _rows(
+    plan: VectorPlan, group: stacks.Group, *, min_valid: float
+) -> tuple[np.ndarray, list[str]]:
+    """Compute the rows of one group, and for each patch a reason to refuse it, or ''."""
+    rows = np.empty((len(group.images), plan.length()))
+    reasons = [""] * len(rows)
+    for stack in group.stacks():
+        found = vectors(plan, stack.values, stack.valid)
+        rows[stack.places] = found
+        if stack.valid is None:
+            continue
+        fractions = stacks.valid_fractions(stack.valid)
+        undefined = np.isnan(found).any(axis=1)
+        for place, fraction, bad in zip(stack.places, fractions, undefined, strict=True):
+            if fraction < min_valid or fraction == 0.0:
+                reasons[place] = f"valid fraction {fraction:.3g} < min_valid {min_valid:g}"
+            elif bad:
+                reasons[place] = "one of its fields has no window of four valid pixels"
+    return rows, reasons
+
+
+def _samples(plan: VectorPlan, group: stacks.Group, *, size: int) -> dict[str, list[np.ndarray]]:
+    """Return the samples of each field of the patches of one group."""
+    pool: dict[str, list[np.ndarray]] = {field.name: [] for field in plan.fields}
+    for stack in group.stacks():
+        for name, found in samples(plan, stack.values, stack.valid, size).items():
+            pool[name].extend(found)
+    return pool
