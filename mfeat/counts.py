@@ -222,7 +222,7 @@ def count_patterns(
     >>> image = np.array([[0, 3, 0], [0, 3, 9], [0, 0, 0]], dtype=np.uint8)
     >>> counts = count_patterns(image, levels=[1, 5], edges="framed")
     >>> counts.classes()["q1"]
-    array([4, 4])
+    array([5, 4])
     """
     image = _checks.image(image)
     levels = _checks.level_sequence(levels)

@@ -131,14 +131,14 @@ def minkowski_curves(
     >>> from mfeat import minkowski_curves
     >>> y, x = np.mgrid[-15:16, -15:16]
     >>> cone = 10 - np.hypot(x, y)
-    >>> curves = minkowski_curves(cone, levels=[2.0, 5.0], edges="framed", pitch=0.1, unit="mm")
+    >>> curves = minkowski_curves(cone, levels=[2.5, 5.5], edges="framed", pitch=0.1, unit="mm")
     >>> curves
     Curves of the raw field at 2 levels, valid fraction 1
-      levels             2 to 5
-      area            0.81 to 1.97        mm^2
-      contour       3.1538 to 4.9797      mm
+      levels           2.5 to 5.5
+      area            0.69 to 1.77        mm^2
+      contour       2.8577 to 4.6887      mm
       euler              1 to 1
-    >>> bool(abs(curves.contour[0] - 2 * np.pi * 0.8) < 0.1)
+    >>> bool(abs(curves.contour[0] - 2 * np.pi * 0.75) < 0.05)
     True
     """
     if level_rule is None:

@@ -16,7 +16,7 @@ STACK_PIXELS = 1 << 17
 
 
 @dataclass(frozen=True)
-class Patches:
+class Collected:
     """Checked patches: `images[k][c]` is channel c of patch k, a 2-D array."""
 
     images: list[list[np.ndarray]]
@@ -77,7 +77,7 @@ def _part(values: np.ndarray, chosen: np.ndarray) -> np.ndarray:
     return _checks.read_only(np.ascontiguousarray(values[chosen]))
 
 
-def collect(X: Any, channels: Any) -> Patches:
+def collect(X: Any, channels: Any) -> Collected:
     """Check X and return its patches without copying pixels."""
     if isinstance(X, list | tuple) or (isinstance(X, np.ndarray) and X.dtype == object):
         return _from_list(X, channels)
@@ -126,21 +126,30 @@ def collect(X: Any, channels: Any) -> Patches:
     if not X.dtype.isnative:
         X = X.astype(X.dtype.newbyteorder("="))
     if X.ndim == 3:
-        return Patches([[image] for image in X], 1)
-    return Patches([[image[:, :, c] for c in range(number)] for image in X], number)
+        return Collected([[image] for image in X], 1)
+    return Collected([[image[:, :, c] for c in range(number)] for image in X], number)
 
 
 def _n_channels(channels: Any) -> int:
     return 1 if channels is None else len(channels)
 
 
-def _from_list(X: Any, channels: Any) -> Patches:
+def _array(patch: Any, k: int) -> np.ndarray:
+    if isinstance(patch, np.ndarray):
+        return patch
+    try:
+        return np.asarray(patch)
+    except ValueError as error:
+        raise ValueError(f"X[{k}] must be an array; it is ragged: {error}") from None
+
+
+def _from_list(X: Any, channels: Any) -> Collected:
     if len(X) == 0:
         raise ValueError("X holds no patch: the list is empty, found 0 sample(s)")
     number = _n_channels(channels)
     images = []
     for k, patch in enumerate(X):
-        patch = patch if isinstance(patch, np.ndarray) else np.asarray(patch)
+        patch = _array(patch, k)
         if channels is None:
             if patch.ndim == 3:
                 raise ValueError(
@@ -155,10 +164,10 @@ def _from_list(X: Any, channels: Any) -> Patches:
                 f"(h, w, {number}) for every patch"
             )
         images.append([_checks.image(patch[:, :, c], f"X[{k}]") for c in range(number)])
-    return Patches(images, number)
+    return Collected(images, number)
 
 
-def group(patches: Patches) -> list[Group]:
+def group(patches: Collected) -> list[Group]:
     """Sort patches into groups of at most `STACK_PIXELS` pixels (or one patch)."""
     growing: dict[tuple, Group] = {}
     done: list[Group] = []

@@ -12,7 +12,7 @@ from sklearn.exceptions import NotFittedError
 from sklearn.utils._param_validation import Interval, Options, StrOptions
 
 from mfeat import _checks, stacks
-from mfeat.fields import FAMILIES, SCALE_UNITS, Field, scales
+from mfeat.fields import FAMILIES, SCALE_UNITS, Field, check_scale, scales
 from mfeat.functionals import CONNECTIVITIES, CONTOUR_ESTIMATORS, FUNCTIONALS
 from mfeat.levels import RULES, level_values, pooled_quantiles
 from mfeat.plan import Feature, VectorPlan, canonical_sha256
@@ -142,7 +142,11 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
         "min_valid": [Interval(Real, 0, 1, closed="both")],
         "below_min_valid": [StrOptions({"error", "nan"})],
         "dtype": [StrOptions({"float32", "float64"})],
-        "n_jobs": [int, None],
+        "n_jobs": [
+            Interval(Integral, 1, None, closed="left"),
+            Interval(Integral, None, -1, closed="right"),
+            None,
+        ],
     }
 
     def __init__(
@@ -204,9 +208,10 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
         """
         plan = self._plan()
         patches = stacks.collect(X, self.channels)
+        groups = _groups(plan, patches)
         self.__dict__.pop("levels_", None)
         if plan.level_rule == "fitted":
-            self.levels_ = self._learn(plan, patches)
+            self.levels_ = self._learn(plan, groups, len(patches) * patches.n_channels)
         return self
 
     def transform(self, X: Any) -> np.ndarray:
@@ -233,7 +238,7 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
         patches = stacks.collect(X, self.channels)
         span = plan.length()
         out = np.full((len(patches), span * patches.n_channels), np.nan, dtype=self.dtype)
-        groups = stacks.group(patches)
+        groups = _groups(plan, patches)
         done = self._parallel(_rows, plan, groups, min_valid=float(self.min_valid))
         refused = []
         for group, (rows, reasons) in zip(groups, done, strict=True):
@@ -394,10 +399,12 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
             delayed(work)(plan, group, **options) for group in groups
         )
 
-    def _learn(self, plan: VectorPlan, patches: stacks.Patches) -> dict[str, np.ndarray]:
+    def _learn(
+        self, plan: VectorPlan, groups: list[stacks.Group], n_images: int
+    ) -> dict[str, np.ndarray]:
         """Learn levels as quantiles of each field over all patches of all channels."""
-        size = max(16, FIT_SAMPLE // max(1, len(patches) * patches.n_channels))
-        found = self._parallel(_samples, plan, stacks.group(patches), size=size)
+        size = max(16, FIT_SAMPLE // n_images)
+        found = self._parallel(_samples, plan, groups, size=size)
         learned = {}
         for field in plan.fields:
             pool = [sample for part in found for sample in part[field.name] if len(sample)]
@@ -452,6 +459,18 @@ def _of_family(name: str, value: Any, family: str) -> Any:
     return value[family]
 
 
+def _groups(plan: VectorPlan, patches: stacks.Collected) -> list[stacks.Group]:
+    """Return the groups of the patches, each large enough for every field of the plan."""
+    groups = stacks.group(patches)
+    for group in groups:
+        for field in plan.fields:
+            try:
+                check_scale(field, group.images[0].shape, plan.pitch, plan.scale_unit)
+            except ValueError as error:
+                raise ValueError(f"X[{group.positions[0]}]: {error}") from None
+    return groups
+
+
 def _rows(
     plan: VectorPlan, group: stacks.Group, *, min_valid: float
 ) -> tuple[np.ndarray, list[str]]:
@@ -466,7 +485,9 @@ def _rows(
         fractions = stacks.valid_fractions(stack.valid)
         undefined = np.isnan(found).any(axis=1)
         for place, fraction, bad in zip(stack.places, fractions, undefined, strict=True):
-            if fraction < min_valid or fraction == 0.0:
+            if fraction == 0.0:
+                reasons[place] = "no window of four valid pixels"
+            elif fraction < min_valid:
                 reasons[place] = f"valid fraction {fraction:.3g} < min_valid {min_valid:g}"
             elif bad:
                 reasons[place] = "one of its fields has no window of four valid pixels"
