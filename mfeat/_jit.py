@@ -17,6 +17,7 @@ import sys
 import tempfile
 import threading
 import time
+from collections.abc import Callable
 from pathlib import Path
 
 import numba
@@ -47,13 +48,13 @@ def cache_directory() -> Path | None:
         root = Path(os.environ["MFEAT_CACHE_DIR"])
     elif numba.config.CACHE_DIR:
         root = Path(numba.config.CACHE_DIR) / "mfeat"
-    elif sys.platform == "win32":
-        root = Path(os.environ.get("LOCALAPPDATA", Path.home() / "AppData/Local")) / "mfeat"
-    elif sys.platform == "darwin":
-        root = Path.home() / "Library/Caches/mfeat"
     else:
-        root = Path(os.environ.get("XDG_CACHE_HOME") or Path.home() / ".cache") / "mfeat"
-    folder = root / f"kernels-{_source_hash()[:16]}"
+        try:
+            root = _user_cache() / "mfeat"
+        except RuntimeError as error:  # e.g. in a container, a user without a home folder
+            _log.info("no kernel cache (%s): kernels are compiled in every process", error)
+            return None
+    folder = root.absolute() / f"kernels-{_source_hash()[:16]}"
     try:
         folder.mkdir(parents=True, exist_ok=True)
         tempfile.TemporaryFile(dir=folder).close()
@@ -61,6 +62,14 @@ def cache_directory() -> Path | None:
         _log.info("no kernel cache at %s (%s): kernels are compiled in every process", root, error)
         return None
     return folder
+
+
+def _user_cache() -> Path:
+    if sys.platform == "win32":
+        return Path(os.environ.get("LOCALAPPDATA") or Path.home() / "AppData/Local")
+    if sys.platform == "darwin":
+        return Path.home() / "Library/Caches"
+    return Path(os.environ.get("XDG_CACHE_HOME") or Path.home() / ".cache")
 
 
 def _source_hash() -> str:
@@ -81,8 +90,9 @@ class KernelCache(NullCache):
     by a power failure is a miss and is written anew.
     """
 
-    def __init__(self, name: str, folder: Path):
-        self._name = name
+    def __init__(self, function: Callable, folder: Path):
+        self._name = function.__name__
+        self._module = function.__module__
         self._folder = folder
 
     @property
@@ -91,7 +101,8 @@ class KernelCache(NullCache):
         return str(self._folder)
 
     def _file(self, sig, codegen) -> Path:
-        key = repr((self._name, sig, codegen.magic_tuple(), FLAGS, numba.config.BOUNDSCHECK))
+        name = (self._module, self._name)
+        key = repr((name, sig, codegen.magic_tuple(), FLAGS, numba.config.BOUNDSCHECK))
         return self._folder / f"{self._name}-{hashlib.sha256(key.encode()).hexdigest()[:32]}.bin"
 
     def load_overload(self, sig, target_context):
@@ -135,7 +146,7 @@ def kernel(function):
     dispatcher = numba.njit(**FLAGS)(function)
     if dispatcher is function or _FOLDER is None:  # compilation is switched off, or no cache
         return dispatcher
-    dispatcher._cache = KernelCache(function.__name__, _FOLDER)
+    dispatcher._cache = KernelCache(function, _FOLDER)
     return dispatcher
 
 

@@ -7,6 +7,8 @@ and are 0. A pixel then enters each statistic with the number of counting window
 weight, which makes borders and missing pixels one and the same case.
 """
 
+import math
+
 import numpy as np
 
 from mfeat._jit import kernel
@@ -81,7 +83,7 @@ def windows_ok(valid, ok):
         for j in range(1, cols):
             good = valid[i - 1, j - 1] & valid[i - 1, j] & valid[i, j - 1] & valid[i, j]
             ok[i, j] = good
-            total += good
+            total += np.int64(good)
     return total
 
 
@@ -172,47 +174,59 @@ def value_range(values, valid, low, high):
 
 
 @kernel
-def _add_exactly(total, rest, j, value):
-    """Add to the pair total + rest without losing the rounding error (two-sum).
-
-    Source: D. E. Knuth, The Art of Computer Programming, vol. 2 (1969), section 4.2.2.
-    """
-    new = total[j] + value
-    back = new - total[j]
-    rest[j] += (total[j] - (new - back)) + (value - back)
-    total[j] = new
+def _unit_scale(low, high):
+    """Return a power of two that brings numbers between `low` and `high` into [-1, 1]."""
+    exponent = math.frexp(max(abs(low), abs(high)))[1]
+    return math.ldexp(1.0, -max(exponent, -1000))  # numbers near 0 would need an infinite scale
 
 
 @kernel
 def moments(values, valid, total, rest, mean, deviation):
     """Write the mean and the (population) standard deviation of each image of a stack (n, h, w).
 
-    Sums run per column with their rounding errors carried along, so the result does not depend on
-    the order of the pixels and is the same, bit for bit, after rotation or reflection.
-    `total` and `rest` are scratch of length w + 1.
+    Each term is cut, by adding and subtracting a power of two, into two slices so coarse that
+    sums of either are exact. So the result does not depend on the order of the pixels and is the
+    same, bit for bit, after rotation or reflection. What lies below the second slice is dropped:
+    at most n^2 2^-105 of the largest term in the mean of n pixels.
+    `total` and `rest` are scratch of length w + 1: sums of the slices per column, then of all.
+    Source: S. M. Rump, T. Ogita and S. Oishi, Accurate floating-point summation part I, SIAM J.
+    Sci. Comput. 31 (2008), 189-224, section 3 (extraction of slices).
     """
     count, rows, cols = values.shape
+    bits = math.frexp(np.float64(rows * cols + 2))[1]
+    coarse = math.ldexp(1.0, bits)
+    fine = math.ldexp(1.0, 2 * bits - 53)
     for k in range(count):
+        low = np.inf
+        high = -np.inf
         n = 0
+        for i in range(rows):
+            for j in range(cols):
+                if valid[k, i, j]:
+                    n += 1
+                    low = min(low, values[k, i, j])
+                    high = max(high, values[k, i, j])
+        if n == 0:
+            mean[k] = deviation[k] = np.nan
+            continue
         for power in range(1, 3):
+            centre = mean[k] if power == 2 else 0.0
+            scale = _unit_scale(low - centre, high - centre)
             total[:] = 0.0
             rest[:] = 0.0
-            centre = mean[k] if power == 2 else 0.0
-            n = 0
             for i in range(rows):
                 for j in range(cols):
-                    use = valid[k, i, j]
-                    term = values[k, i, j] - centre if use else 0.0
+                    term = (values[k, i, j] - centre) * scale if valid[k, i, j] else 0.0
                     if power == 2:
                         term = term * term
-                    n += use
-                    _add_exactly(total, rest, j, term)
+                    slice_ = (term + coarse) - coarse
+                    total[j] += slice_
+                    rest[j] += ((term - slice_) + fine) - fine
             for j in range(cols):
-                _add_exactly(total, rest, cols, total[j])
-            for j in range(cols):
-                _add_exactly(total, rest, cols, rest[j])
-            result = (total[cols] + rest[cols]) / n if n else np.nan
+                total[cols] += total[j]
+                rest[cols] += rest[j]
+            result = (total[cols] + rest[cols]) / n
             if power == 1:
-                mean[k] = result
+                mean[k] = result / scale
             else:
-                deviation[k] = np.sqrt(result)
+                deviation[k] = np.sqrt(result) / scale

@@ -194,7 +194,7 @@ def derive(
         order = _SHRINK[field.family]
         rounding = ROUNDING * half_range / min(pitch) ** order
         if field.family == "raw":
-            yield field, Relief(values, valid, centred, offset, np.zeros(len(values)))
+            yield field, Relief(values, valid, centred, offset, rounding, constant=low == high)
             continue
         if field.family == "band":
             band = source.at(field.scale) - source.at(BAND_RATIO * field.scale)

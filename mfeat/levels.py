@@ -24,8 +24,9 @@ RULES = ("standard", "rank", "fixed", "fitted")
 #: Range of the levels where none is given, in the rule's own units.
 DEFAULT_RANGES = {"standard": (-2.5, 2.5), "rank": (0.0, 1.0), "fitted": (0.0, 1.0)}
 
-#: Levels of rule "standard" lie this many standard deviations below their nominal place, so that
-#: pixels tied with a level fall on the same side of it under every gain and offset of the image.
+#: Levels of rule "standard", and of rule "rank" on derived fields, lie this many standard
+#: deviations below their nominal place, so that pixels tied with a level fall on the same side of it
+#: under every gain and offset of the image.
 TIE = 1e-9
 
 
@@ -45,6 +46,8 @@ class Relief:
         Subtracted before fields are derived, so that an image far from zero loses no digits.
     rounding : ndarray of shape (n,), float64
         A bound of the rounding error of the values; a smaller standard deviation means flat.
+    constant : ndarray of shape (n,), bool, optional
+        Which fields are constant, where that is known exactly and rounding has no part in it.
     """
 
     values: np.ndarray
@@ -52,6 +55,7 @@ class Relief:
     centred: np.ndarray
     offset: np.ndarray
     rounding: np.ndarray
+    constant: np.ndarray | None = None
 
     def __post_init__(self):
         count, _, cols = self.values.shape
@@ -63,7 +67,8 @@ class Relief:
         )
         undefined = np.isnan(self.mean)  # no valid pixel; nothing of such a field is counted
         self.mean[undefined] = self.deviation[undefined] = 0.0
-        self.flat = (self.deviation <= self.rounding) & ~undefined
+        flat = self.deviation <= self.rounding if self.constant is None else self.constant
+        self.flat = flat & ~undefined
         self.deviation[self.flat] = 0.0
 
 
@@ -158,9 +163,11 @@ def place(relief: Relief, rule: str, values: np.ndarray) -> PlacedLevels:
         own = relief.mean[:, None] + steps
     elif rule == "rank":
         own = _order_statistics(relief, values)
-        shown = own.astype(np.float64)
-        if relief.values is relief.centred:
-            shown = shown + relief.offset[:, None]
+        if relief.values is relief.centred:  # a derived field, whose ties rounding has blurred
+            own = own - TIE * relief.deviation[:, None]
+            shown = own + relief.offset[:, None]
+        else:
+            shown = own.astype(np.float64)
     else:
         shown = np.broadcast_to(values, (len(relief.values), len(values)))
         own = shown - relief.offset[:, None]

@@ -87,13 +87,14 @@ def collect(X: Any, channels: Any) -> Collected:
                 f"X is a sparse matrix ({type(X).__name__}); patches are dense arrays: give an "
                 "array of shape (n, h, w) or a list of 2-D arrays"
             )
+        if hasattr(X, "__array__"):
+            return collect(np.asarray(X), channels)
         if isinstance(X, str | bytes) or not hasattr(X, "__len__"):
             raise TypeError(
                 "X must be an array of shape (n, h, w) or (n, h, w, c), or a list of 2-D arrays; "
                 f"got {type(X).__name__}"
             )
-        X = np.asarray(X) if hasattr(X, "__array__") else list(X)
-        return collect(X, channels)
+        return collect(list(X), channels)
     if X.ndim not in (3, 4):
         hint = ""
         if X.ndim == 2:

@@ -1,5 +1,7 @@
 """Laws 1 and 2: counting is exact and additive, for every type, layout, mask and level."""
 
+import itertools
+
 import hypothesis.strategies as st
 import naive
 import numpy as np
@@ -8,14 +10,25 @@ from hypothesis import given, settings
 from hypothesis.extra.numpy import array_shapes, arrays
 from skimage import data, measure
 
-from mfeat import counts as counts_module
 from mfeat import count_patterns
+from mfeat import counts as counts_module
 from mfeat.counts import STATISTICS
 from mfeat.functionals import euler
 
-DTYPES = (
-    "bool int8 uint8 int16 uint16 int32 uint32 int64 uint64 float16 float32 float64".split()
-)
+DTYPES = [
+    "bool",
+    "int8",
+    "uint8",
+    "int16",
+    "uint16",
+    "int32",
+    "uint32",
+    "int64",
+    "uint64",
+    "float16",
+    "float32",
+    "float64",
+]
 DOUBLED = {"horizontal": ("2h", 1), "vertical": ("2v", 1), "falling": ("d", 2), "rising": ("a", 2)}
 
 
@@ -92,8 +105,11 @@ def test_any_size_type_mask_and_levels(data):
     small = st.integers(0, 1) if dtype == "bool" else st.integers(0, 4)
     image = data.draw(arrays(dtype, shape, elements=small.map(np.dtype(dtype).type)))
     mask = data.draw(st.none() | arrays(bool, shape))
-    levels = data.draw(st.lists(st.sampled_from([-1, 0, 0.5, 1, 2, 2.5, 3, 4, 9]), min_size=1,
-                                max_size=6, unique=True).map(sorted))
+    levels = data.draw(
+        st.lists(
+            st.sampled_from([-1, 0, 0.5, 1, 2, 2.5, 3, 4, 9]), min_size=1, max_size=6, unique=True
+        ).map(sorted)
+    )
     edges = data.draw(st.sampled_from(["inside", "framed"]))
     assert_equals_naive(image, levels, mask, edges)
 
@@ -105,7 +121,13 @@ def test_64_bit_integers_do_not_pass_through_floats(dtype):
     image = np.array([[base, base + 1], [base + 2, base - 1]], dtype=dtype)
     levels = [base - 1, base, base + 1, base + 2, base + 3]
     assert_equals_naive(image, levels)
-    assert count_patterns(image, levels).table[STATISTICS.index("pixel")].tolist() == [4, 3, 2, 1, 0]
+    assert count_patterns(image, levels).table[STATISTICS.index("pixel")].tolist() == [
+        4,
+        3,
+        2,
+        1,
+        0,
+    ]
 
 
 def test_levels_beyond_the_type_of_the_image():
@@ -182,9 +204,11 @@ def test_all_missing_counts_nothing():
 
 
 def cut_points(data, length):
-    inner = data.draw(st.lists(st.integers(1, length - 2), unique=True, max_size=3)) if (
-        length > 2
-    ) else []
+    inner = (
+        data.draw(st.lists(st.integers(1, length - 2), unique=True, max_size=3))
+        if (length > 2)
+        else []
+    )
     return [0, *sorted(inner), length - 1]
 
 
@@ -198,8 +222,8 @@ def test_tiles_that_share_a_row_and_a_column_add_up(data):
     rows, cols = cut_points(data, shape[0]), cut_points(data, shape[1])
     tiles = [
         np.s_[top : bottom + 1, left : right + 1]
-        for top, bottom in zip(rows, rows[1:], strict=False)
-        for left, right in zip(cols, cols[1:], strict=False)
+        for top, bottom in itertools.pairwise(rows)
+        for left, right in itertools.pairwise(cols)
     ]
     order = data.draw(st.permutations(range(len(tiles))))
     parts = [
@@ -278,8 +302,13 @@ OK = np.zeros((3, 3))
         (TypeError, r"dtype complex128", np.zeros((3, 3), complex), [0], {}),
         (TypeError, r"dtype object", np.zeros((3, 3), object), [0], {}),
         (TypeError, r"dtype <U1", np.array([["a", "b"], ["c", "d"]]), [0], {}),
-        (ValueError, r"holds inf at row 1, column 2", np.array([[0, 0, 0], [0, 0, np.inf]]), [0],
-         {}),
+        (
+            ValueError,
+            r"holds inf at row 1, column 2",
+            np.array([[0, 0, 0], [0, 0, np.inf]]),
+            [0],
+            {},
+        ),
         (ValueError, r"holds -inf at row 0, column 0", np.array([[-np.inf, 0], [0, 0]]), [0], {}),
         (ValueError, r"levels must hold 1 to 65535 levels; got 0", OK, [], {}),
         (ValueError, r"got 65536", OK, np.arange(65_536), {}),
@@ -292,17 +321,37 @@ OK = np.zeros((3, 3))
         (TypeError, r"integers or floats", OK, ["1"], {}),
         (TypeError, r"integers or floats; got dtype bool", OK, [True], {}),
         (ValueError, r"levels mixes 9007199254740993", OK, [0.5, 2**53 + 1], {}),
-        (ValueError, r"mask of image has shape \(2, 2\), the image \(3, 3\)", OK, [0],
-         {"mask": np.ones((2, 2), bool)}),
-        (TypeError, r"mask of image must be boolean.*uint8.*mask != 0", OK, [0],
-         {"mask": np.ones((3, 3), np.uint8)}),
+        (
+            ValueError,
+            r"mask of image has shape \(2, 2\), the image \(3, 3\)",
+            OK,
+            [0],
+            {"mask": np.ones((2, 2), bool)},
+        ),
+        (
+            TypeError,
+            r"mask of image must be boolean.*uint8.*mask != 0",
+            OK,
+            [0],
+            {"mask": np.ones((3, 3), np.uint8)},
+        ),
         (ValueError, r"pitch must be a finite number > 0; got 0", OK, [0], {"pitch": 0}),
-        (ValueError, r"pitch\[1\] must be a finite number > 0; got -1", OK, [0],
-         {"pitch": (1, -1)}),
+        (
+            ValueError,
+            r"pitch\[1\] must be a finite number > 0; got -1",
+            OK,
+            [0],
+            {"pitch": (1, -1)},
+        ),
         (ValueError, r"pitch must be one number or .*got 3", OK, [0], {"pitch": (1, 2, 3)}),
         (TypeError, r"pitch must be a number; got '1'", OK, [0], {"pitch": "1"}),
-        (ValueError, r"edges must be one of 'inside', 'framed'; got 'open'", OK, [0],
-         {"edges": "open"}),
+        (
+            ValueError,
+            r"edges must be one of 'inside', 'framed'; got 'open'",
+            OK,
+            [0],
+            {"edges": "open"},
+        ),
     ],
 )
 def test_bad_input_is_named(error, match, image, levels, options):

@@ -65,8 +65,14 @@ def test_every_table_entry_from_first_principles(window):
     assert 4 * (stats @ EULER_WEIGHTS[8]) == quarter - diagonal
     assert 4 * (stats @ EULER_WEIGHTS["mean"]) == quarter
     # Duda's contour, as given in Pratt, Digital Image Processing (1978), from memory
-    step = {"q0": 0, "q1": math.sqrt(0.5), "q2": 1, "qd": math.sqrt(2), "q3": math.sqrt(0.5),
-            "q4": 0}[kind]
+    step = {
+        "q0": 0,
+        "q1": math.sqrt(0.5),
+        "q2": 1,
+        "qd": math.sqrt(2),
+        "q3": math.sqrt(0.5),
+        "q4": 0,
+    }[kind]
     assert stats @ DUDA_WEIGHTS == pytest.approx(step, abs=1e-15)
 
 
@@ -96,8 +102,9 @@ def test_contours_equal_scikit_image():
         counts = count_one(image)
         for estimator, directions in (("crofton-2", 2), ("crofton-4", 4)):
             expected = measure.perimeter_crofton(np.pad(image, 1), directions=directions)
-            assert contour(counts, estimator=estimator)[0] == pytest.approx(expected, abs=1e-12,
-                                                                            rel=1e-13)
+            assert contour(counts, estimator=estimator)[0] == pytest.approx(
+                expected, abs=1e-12, rel=1e-13
+            )
 
 
 @pytest.mark.parametrize("n", [2, 3, 10, 31])

@@ -1,0 +1,223 @@
+"""Fields against SciPy, the naive reference and analytic surfaces."""
+
+import naive
+import numpy as np
+import pytest
+from scipy import ndimage
+
+from mfeat import minkowski_curves
+from mfeat.fields import Field, derive, gaussian_weights, scales, sigma_pixels
+
+
+def field_of(image, family, scale, *, valid=None, pitch=(1.0, 1.0), scale_unit="pitch"):
+    """Return one field of one image with its offset, NaN where it is not valid."""
+    stack_valid = None if valid is None else valid[None].astype(np.uint8)
+    [(_, relief)] = derive(
+        (Field(family, float(scale)),),
+        np.asarray(image, float)[None],
+        stack_valid,
+        pitch,
+        scale_unit,
+    )
+    values = relief.centred[0] + relief.offset[0]
+    return np.where(relief.valid[0] == 1, values, np.nan)
+
+
+@pytest.fixture(scope="module")
+def image():
+    return 40.0 + 9.0 * np.random.default_rng(0).normal(size=(37, 50))
+
+
+@pytest.mark.parametrize("scale", [0.5, 1, 1.6, 2, 4, 9, 20])
+def test_smoothing_equals_scipy(image, scale):
+    # scipy.ndimage.gaussian_filter(mode="reflect", truncate=4), to float64 rounding
+    expected = ndimage.gaussian_filter(image, scale, mode="reflect", truncate=4.0)
+    assert field_of(image, "smooth", scale) == pytest.approx(expected, rel=1e-12, abs=1e-12)
+
+
+def test_rectangular_pitch_smooths_the_same_length_both_ways(image):
+    got = field_of(image, "smooth", 3.0, pitch=(0.5, 2.0), scale_unit="length")
+    expected = ndimage.gaussian_filter(image, (6.0, 1.5), mode="reflect", truncate=4.0)
+    assert got == pytest.approx(expected, rel=1e-12)
+    # in multiples of the pitch: of the geometric mean, here 1
+    got = field_of(image, "smooth", 3.0, pitch=(0.5, 2.0))
+    assert got == pytest.approx(expected, rel=1e-12)
+
+
+@pytest.mark.parametrize("scale", [1, 2])
+def test_bands_are_differences_of_gaussians(image, scale):
+    expected = ndimage.gaussian_filter(image, scale, truncate=4.0) - ndimage.gaussian_filter(
+        image, 2 * scale, truncate=4.0
+    )
+    assert field_of(image, "band", scale) == pytest.approx(expected, abs=1e-11)
+
+
+def test_missing_pixels_are_filled_for_the_filter_but_stay_missing(image):
+    # normalised convolution, Knutsson and Westin (1993); naive reference with plain loops
+    valid = np.random.default_rng(1).random(image.shape) < 0.8
+    for sigma in (1.0, 2.5):
+        got = field_of(np.where(valid, image, 0.0), "smooth", sigma, valid=valid)
+        expected = naive.gaussian_smooth(image, sigma, sigma, valid)
+        assert np.array_equal(np.isnan(got), ~valid)
+        assert got[valid] == pytest.approx(expected[valid], rel=1e-11)
+
+
+def test_what_lies_under_a_missing_pixel_has_no_say(image):
+    valid = np.random.default_rng(2).random(image.shape) < 0.9
+    for family, scale in (("smooth", 2), ("band", 1), ("slope", 0), ("slope", 1), ("curvature", 1)):
+        one = field_of(np.where(valid, image, 1e6), family, scale, valid=valid)
+        other = field_of(np.where(valid, image, -3.0), family, scale, valid=valid)
+        assert np.array_equal(one, other, equal_nan=True)
+
+
+def test_slope_of_a_plane_in_data_units_per_length():
+    y, x = np.mgrid[:9, :12]
+    dy, dx = 0.5, 2.0
+    plane = 3.0 * (y * dy) - 4.0 * (x * dx)
+    slope = field_of(plane, "slope", 0, pitch=(dy, dx))
+    assert slope.shape == (8, 11)
+    assert slope == pytest.approx(5.0, rel=1e-12)
+
+
+def test_curvature_of_a_paraboloid_is_positive_on_bumps():
+    # z = -(x^2 + 3 y^2) / 2: minus half the Laplacian is (1 + 3) / 2 everywhere; the sign of the
+    # mean peak curvature Spc of ISO 25178-2 (from memory)
+    y, x = np.mgrid[-5:6, -6:7]
+    dy, dx = 0.25, 0.5
+    bump = -((x * dx) ** 2 + 3 * (y * dy) ** 2) / 2
+    curvature = field_of(bump, "curvature", 0, pitch=(dy, dx))
+    assert curvature.shape == (9, 11)
+    assert curvature == pytest.approx(2.0, rel=1e-9)
+
+
+def test_slope_and_curvature_against_numpy_differences(image):
+    across = (np.diff(image, axis=1)[:-1] + np.diff(image, axis=1)[1:]) / 2
+    down = (np.diff(image, axis=0)[:, :-1] + np.diff(image, axis=0)[:, 1:]) / 2
+    assert field_of(image, "slope", 0) == pytest.approx(np.hypot(across, down), rel=1e-12)
+    # scipy.ndimage.laplace is the same five-point stencil
+    expected = -0.5 * ndimage.laplace(image)[1:-1, 1:-1]
+    assert field_of(image, "curvature", 0) == pytest.approx(expected, abs=1e-11)
+
+
+def test_differences_need_every_pixel_of_their_stencil(image):
+    valid = np.ones(image.shape, bool)
+    valid[10, 20] = False
+    slope = np.isnan(field_of(image, "slope", 0, valid=valid))
+    assert np.argwhere(slope).tolist() == [[9, 19], [9, 20], [10, 19], [10, 20]]
+    curvature = np.isnan(field_of(image, "curvature", 0, valid=valid))
+    # the pixel itself and its four neighbours, in coordinates of the inner pixels
+    assert np.argwhere(curvature).tolist() == [[8, 19], [9, 18], [9, 19], [9, 20], [10, 19]]
+
+
+def test_windows_that_touch_missing_pixels_are_not_counted(image):
+    valid = np.ones(image.shape, bool)
+    valid[10, 20] = False
+    got = minkowski_curves(image, levels=4, mask=valid)
+    assert got.counts.windows == 36 * 49 - 4
+    # the slope field misses four values, so sixteen of its windows less overlaps: a 3x3 block
+    got = minkowski_curves(image, levels=4, mask=valid, field="slope")
+    assert got.counts.windows == 35 * 48 - 9
+
+
+def test_large_offsets_lose_no_digits(image):
+    # 1e9 + z keeps z to 1e-7; fields are derived from z minus the middle of its range
+    shifted = image + 1e9
+    z = shifted - 1e9
+    for family, scale in (("slope", 1), ("curvature", 1), ("band", 1)):
+        got, expected = field_of(shifted, family, scale), field_of(z, family, scale)
+        assert got == pytest.approx(expected, rel=1e-9, abs=1e-9)
+
+
+def test_extreme_values_do_not_overflow():
+    image = np.array([[1e308, -1e308, 1e308]] * 3)
+    got = minkowski_curves(image, levels=[0.0])
+    assert got.area[0] == 0.5
+
+
+def test_kernel_weights():
+    # radius int(4 sigma + .5) as in SciPy; symmetric kernel sums to one
+    for sigma in (0.3, 1.0, 2.49, 10.0):
+        half = gaussian_weights(sigma)
+        assert len(half) == int(4 * sigma + 0.5) + 1
+        assert half[0] + 2 * half[1:].sum() == pytest.approx(1.0, abs=1e-15)
+        assert half[1] / half[0] == pytest.approx(np.exp(-0.5 / sigma**2))
+
+
+def test_scales_in_lengths_follow_the_pitch():
+    assert sigma_pixels(4.0, (2.0, 2.0), "length") == (2.0, 2.0)
+    assert sigma_pixels(4.0, (2.0, 2.0), "pitch") == (4.0, 4.0)
+
+
+def test_the_same_surface_at_another_pitch_has_the_same_curves():
+    # a band-limited surface sampled at pitch 1 and 0.5; scales are lengths
+    def sampled(pitch):
+        y, x = np.mgrid[0:120:pitch, 0:120:pitch]
+        return np.sin(0.21 * x + 0.4) * np.cos(0.17 * y) + 0.5 * np.sin(0.13 * x - 0.19 * y)
+
+    for family, scale in (
+        ("raw", 0.0),
+        ("smooth", 3.0),
+        ("band", 2.0),
+        ("slope", 2.0),
+        ("curvature", 2.0),
+    ):
+        options = {"levels": 7, "field": family, "scale": scale, "scale_unit": "length"}
+        coarse = minkowski_curves(sampled(1.0), pitch=1.0, **options)
+        fine = minkowski_curves(sampled(0.5), pitch=0.5, **options)
+        assert fine.levels == pytest.approx(coarse.levels, rel=0.02, abs=0.01 * np.ptp(fine.levels))
+        assert fine.area == pytest.approx(coarse.area, abs=0.02)
+        peak = coarse.contour.max()
+        assert fine.contour == pytest.approx(coarse.contour, abs=0.06 * peak), family
+
+
+@pytest.mark.parametrize(
+    ("error", "match", "options"),
+    [
+        (ValueError, r"scale must be 0 for field \"raw\"", {"scale": 1.0}),
+        (ValueError, r"scale\[0\] must be > 0; got 0", {"field": "smooth"}),
+        (
+            ValueError,
+            r"scale\[0\] must be a finite number >= 0; got -1",
+            {"field": "slope", "scale": -1},
+        ),
+        (ValueError, r"scale\[0\] must be a finite", {"field": "slope", "scale": np.nan}),
+        (ValueError, r"field must be one of 'raw'.*got 'gradient'", {"field": "gradient"}),
+        (
+            ValueError,
+            r"smooth_0.1: a scale of 0.1 is 0.1 pixels.*too small.*multiples",
+            {"field": "smooth", "scale": 0.1},
+        ),
+        (
+            ValueError,
+            r"smooth_1: a scale of 1 is 0.1 pixels at pitch.*in the unit of pitch",
+            {"field": "smooth", "scale": 1, "pitch": 10, "scale_unit": "length"},
+        ),
+        (
+            ValueError,
+            r"band_30: its widest Gaussian .* times the side.*37x50",
+            {"field": "band", "scale": 30},
+        ),
+        (ValueError, r"scale_unit must be one of 'pitch', 'length'", {"scale_unit": "px"}),
+    ],
+)
+def test_bad_fields_are_named(image, error, match, options):
+    with pytest.raises(error, match=match):
+        minkowski_curves(image, **options)
+
+
+def test_images_too_small_for_a_field():
+    tiny = np.random.default_rng(3).random((2, 9))
+    assert minkowski_curves(tiny, 3).levels.shape == (3,)
+    with pytest.raises(ValueError, match=r"slope_0 needs images of at least 3x3 pixels; got 2x9"):
+        minkowski_curves(tiny, 3, field="slope")
+    with pytest.raises(ValueError, match=r"curvature_0 needs images of at least 4x4"):
+        minkowski_curves(tiny, 3, field="curvature")
+
+
+def test_scales_are_tuples_of_distinct_numbers():
+    with pytest.raises(TypeError, match=r"smooth must be a tuple.*write smooth=\(2,\)"):
+        scales("smooth", 2, zero=False)
+    with pytest.raises(ValueError, match=r"smooth holds the scale 2.0 twice"):
+        scales("smooth", (2, 2.0), zero=False)
+    with pytest.raises(TypeError, match=r"smooth\[1\] must be a number; got '1'"):
+        scales("smooth", (2, "1"), zero=False)
