@@ -137,9 +137,11 @@ def compiled_type(array: np.ndarray) -> np.ndarray:
     size = array.dtype.itemsize
     if kind == "f":
         wanted = np.float64 if size == 8 else np.float32
+    elif (kind == "u" and size == 1) or kind == "b":
+        wanted = np.uint8
     elif kind == "u" and size == 8:
         wanted = np.uint64
-    elif kind == "b" or size < 4 or (kind == "i" and size == 4):
+    elif size < 4 or (kind == "i" and size == 4):
         wanted = np.int32
     else:
         wanted = np.int64

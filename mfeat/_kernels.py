@@ -58,6 +58,33 @@ def index_by_comparison(values, thresholds, index, top, left):
 
 
 @kernel
+def index_by_table(values, thresholds, table, index, top, left):
+    """Do the work of `index_by_search` for 8-bit values by looking each one up.
+
+    `table` is scratch of 256 entries; it holds the index of every possible value.
+    """
+    entry = 0
+    for k in range(len(thresholds)):
+        while entry < thresholds[k]:
+            table[entry] = k
+            entry += 1
+    table[entry:] = len(thresholds)
+    rows, cols = values.shape
+    for i in range(rows):
+        row = values[i]
+        found = index[top + i, left : left + cols]
+        for j in range(cols):
+            found[j] = table[row[j]]
+
+
+@kernel
+def index_stack_by_table(values, thresholds, reach, table, index):
+    """Index a stack of 8-bit images; arguments as for `index_stack`, and scratch of 256 entries."""
+    for k in range(len(values)):
+        index_by_table(values[k], thresholds[k, : reach[k]], table, index[k], 0, 0)
+
+
+@kernel
 def index_stack(values, thresholds, reach, few, index):
     """Index a stack of images (n, h, w), each with its own thresholds (n, T) and reach (n).
 

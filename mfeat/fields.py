@@ -185,53 +185,61 @@ def derive(
     # Half of each before they are added: the sum of two large values would overflow.
     offset = low.astype(np.float64) / 2 + high.astype(np.float64) / 2
     half_range = high.astype(np.float64) / 2 - low.astype(np.float64) / 2
-    centred = values.astype(np.float64)
-    centred -= offset[:, None, None]
-    if missing:
-        centred[valid == 0] = 0.0
-    source = _Smoothings(centred, valid if missing else None, pitch, scale_unit)
+    source = _Smoothings(values, valid, missing, offset, pitch, scale_unit)
     for field in fields:
         order = _SHRINK[field.family]
         rounding = ROUNDING * half_range / min(pitch) ** order
+        nothing = np.zeros(len(values))
         if field.family == "raw":
-            yield field, Relief(values, valid, centred, offset, rounding, constant=low == high)
-            continue
-        if field.family == "band":
+            yield field, Relief(values, valid, offset, rounding, source.centred, low == high)
+        elif field.family == "band":
             band = source.at(field.scale) - source.at(BAND_RATIO * field.scale)
-            yield field, Relief(band, valid, band, np.zeros(len(values)), rounding)
-            continue
-        smooth = source.at(field.scale)
-        if field.family == "smooth":
-            yield field, Relief(smooth, valid, smooth, offset, rounding)
-            continue
-        smaller = (len(values), shape[0] - order, shape[1] - order)
-        derived, defined = np.empty(smaller), np.empty(smaller, dtype=np.uint8)
-        by_kernel = (
-            _field_kernels.slope_stack
-            if field.family == "slope"
-            else _field_kernels.curvature_stack
-        )
-        by_kernel(smooth, valid, pitch[0], pitch[1], derived, defined)
-        yield field, Relief(derived, defined, derived, np.zeros(len(values)), rounding)
+            yield field, Relief(band, valid, nothing, rounding)
+        elif field.family == "smooth":
+            yield field, Relief(source.at(field.scale), valid, offset, rounding)
+        else:
+            smaller = (len(values), shape[0] - order, shape[1] - order)
+            derived, defined = np.empty(smaller), np.empty(smaller, dtype=np.uint8)
+            by_kernel = (
+                _field_kernels.slope_stack
+                if field.family == "slope"
+                else _field_kernels.curvature_stack
+            )
+            by_kernel(source.at(field.scale), valid, pitch[0], pitch[1], derived, defined)
+            yield field, Relief(derived, defined, nothing, rounding)
 
 
 class _Smoothings:
     """Gaussian smoothings of one stack, each computed once and shared between the families."""
 
-    def __init__(self, centred, valid, pitch, scale_unit):
-        self._centred = centred
+    def __init__(self, values, valid, missing, offset, pitch, scale_unit):
+        self._values = values
         self._valid = valid
+        self._missing = missing
+        self._offset = offset
         self._pitch = pitch
         self._scale_unit = scale_unit
-        self._done = {0.0: centred}
+        self._done: dict[float, np.ndarray] = {}
+
+    def centred(self) -> np.ndarray:
+        """Return the images minus their offsets, float64, zero where pixels are missing."""
+        if 0.0 not in self._done:
+            centred = self._values - self._offset[:, None, None]
+            if self._missing:
+                centred[self._valid == 0] = 0.0
+            self._done[0.0] = centred
+        return self._done[0.0]
 
     def at(self, scale: float) -> np.ndarray:
-        """Return the stack smoothed at a scale; scale 0 is the stack itself."""
+        """Return the centred images smoothed at a scale; scale 0 leaves them as they are."""
+        if scale == 0.0:
+            return self.centred()
         if scale not in self._done:
-            self._done[scale] = self._smooth(self._centred, scale)
-            if self._valid is not None:
+            smoothed = self._smooth(self.centred(), scale)
+            if self._missing:
                 support = self._smooth(self._valid.astype(np.float64), scale)
-                _field_kernels.normalise_stack(self._done[scale], support, self._valid)
+                _field_kernels.normalise_stack(smoothed, support, self._valid)
+            self._done[scale] = smoothed
         return self._done[scale]
 
     def _smooth(self, stack: np.ndarray, scale: float) -> np.ndarray:

@@ -11,7 +11,9 @@ where the levels pass the mean (at v = 0 under "standard"; under "rank" it is 1 
 contour and Euler number are 0.
 """
 
+from collections.abc import Callable
 from dataclasses import dataclass
+from functools import cached_property
 from typing import Any
 
 import numpy as np
@@ -25,8 +27,8 @@ RULES = ("standard", "rank", "fixed", "fitted")
 DEFAULT_RANGES = {"standard": (-2.5, 2.5), "rank": (0.0, 1.0), "fitted": (0.0, 1.0)}
 
 #: Levels of rule "standard", and of rule "rank" on derived fields, lie this many standard
-#: deviations below their nominal place, so that pixels tied with a level fall on the same side of it
-#: under every gain and offset of the image.
+#: deviations below their nominal place, so that pixels tied with a level fall on the same side of
+#: it under every gain and offset of the image.
 TIE = 1e-9
 
 
@@ -37,39 +39,70 @@ class Relief:
     Attributes
     ----------
     values : ndarray of shape (n, h, w)
-        The fields, in a type of `mfeat._checks.compiled_type`.
+        The fields, in a type of `mfeat._checks.compiled_type`: of raw fields the images as they
+        are, of derived ones float64 without the `offset`.
     valid : ndarray of shape (n, h, w), uint8
         1 where a pixel of the field is defined by valid pixels alone.
-    centred : ndarray of shape (n, h, w), float64
-        The fields minus `offset`.
     offset : ndarray of shape (n,), float64
         Subtracted before fields are derived, so that an image far from zero loses no digits.
     rounding : ndarray of shape (n,), float64
         A bound of the rounding error of the values; a smaller standard deviation means flat.
+    raw : callable, optional
+        For raw fields only: returns `values` minus `offset` as float64, zero where missing.
     constant : ndarray of shape (n,), bool, optional
         Which fields are constant, where that is known exactly and rounding has no part in it.
     """
 
     values: np.ndarray
     valid: np.ndarray
-    centred: np.ndarray
     offset: np.ndarray
     rounding: np.ndarray
+    raw: Callable[[], np.ndarray] | None = None
     constant: np.ndarray | None = None
 
-    def __post_init__(self):
+    @property
+    def derived(self) -> bool:
+        """Whether the values are computed, and without their offset."""
+        return self.raw is None
+
+    @property
+    def centred(self) -> np.ndarray:
+        """The fields minus `offset`, float64."""
+        return self.values if self.raw is None else self.raw()
+
+    @property
+    def mean(self) -> np.ndarray:
+        """Mean of each field minus `offset`; 0 without a valid pixel."""
+        return self._moments[0]
+
+    @property
+    def deviation(self) -> np.ndarray:
+        """Standard deviation of each field; exactly 0 if it is flat."""
+        return self._moments[1]
+
+    @cached_property
+    def flat(self) -> np.ndarray:
+        """Which fields have no relief."""
+        if self.constant is not None:
+            return self.constant
+        return (self._raw_moments[1] <= self.rounding) & ~np.isnan(self._raw_moments[0])
+
+    @cached_property
+    def _raw_moments(self) -> tuple[np.ndarray, np.ndarray]:
         count, _, cols = self.values.shape
-        self.mean = np.empty(count)
-        self.deviation = np.empty(count)
+        mean, deviation = np.empty(count), np.empty(count)
         scratch = np.empty((2, cols + 1))
-        _kernels.moments(
-            self.centred, self.valid, scratch[0], scratch[1], self.mean, self.deviation
+        _kernels.moments(self.centred, self.valid, scratch[0], scratch[1], mean, deviation)
+        return mean, deviation
+
+    @cached_property
+    def _moments(self) -> tuple[np.ndarray, np.ndarray]:
+        mean, deviation = self._raw_moments
+        undefined = np.isnan(mean)  # no valid pixel; nothing of such a field is counted
+        return (
+            np.where(undefined, 0.0, mean),
+            np.where(undefined | self.flat, 0.0, deviation),
         )
-        undefined = np.isnan(self.mean)  # no valid pixel; nothing of such a field is counted
-        self.mean[undefined] = self.deviation[undefined] = 0.0
-        flat = self.deviation <= self.rounding if self.constant is None else self.constant
-        self.flat = flat & ~undefined
-        self.deviation[self.flat] = 0.0
 
 
 @dataclass
@@ -163,7 +196,7 @@ def place(relief: Relief, rule: str, values: np.ndarray) -> PlacedLevels:
         own = relief.mean[:, None] + steps
     elif rule == "rank":
         own = _order_statistics(relief, values)
-        if relief.values is relief.centred:  # a derived field, whose ties rounding has blurred
+        if relief.derived:  # rounding has blurred the ties of such a field
             own = own - TIE * relief.deviation[:, None]
             shown = own + relief.offset[:, None]
         else:
@@ -171,7 +204,7 @@ def place(relief: Relief, rule: str, values: np.ndarray) -> PlacedLevels:
     else:
         shown = np.broadcast_to(values, (len(relief.values), len(values)))
         own = shown - relief.offset[:, None]
-    if relief.values is not relief.centred and rule != "rank":
+    if not relief.derived and rule != "rank":
         own = shown  # the pixels kept their offset and their type
     thresholds, reach = thresholds_for(relief.values.dtype, own)
     if relief.flat.any():

@@ -77,12 +77,12 @@ class Patches(Sequence):
         Parameters
         ----------
         label_image : array of bool or integers, of the image's shape
-            Label of each pixel; missing pixels of the image are not asked.
+            Label of each pixel; missing pixels of the image, and masked labels, are not asked.
         rule : {"majority", "any"}, default "majority"
             "majority": the most frequent label (of equally frequent ones the smallest). "any": the
             most frequent label other than `background` if there is one, else `background`; so one
             defect pixel makes a defect patch.
-        background : default 0
+        background : bool or int, default 0
             The label of sound pixels, for rule "any".
 
         Returns
@@ -101,6 +101,10 @@ class Patches(Sequence):
         PatchLabels(labels=array([0, 3]), fractions=array([1.    , 0.0625]))
         """
         _checks.choice("rule", rule, LABEL_RULES)
+        if not isinstance(background, bool | np.bool_ | int | np.integer):
+            raise TypeError(f"background must be a bool or an integer; got {background!r}")
+        masked = isinstance(label_image, np.ma.MaskedArray)
+        known = ~np.ma.getmaskarray(label_image) if masked else None
         label_image = np.asarray(label_image)
         if label_image.dtype.kind not in "biu":
             raise TypeError(
@@ -115,7 +119,7 @@ class Patches(Sequence):
         fractions = np.empty(len(self))
         for k, (row, col) in enumerate(self.positions):
             place = np.s_[row : row + self.size[0], col : col + self.size[1]]
-            valid = _checks.valid_pixels(self.image[place], None)
+            valid = _checks.valid_pixels(self.image[place], known[place] if masked else None)
             inside = label_image[place]
             inside = inside.ravel() if valid is None else inside[valid == 1]
             found, number = np.unique(inside, return_counts=True)
@@ -123,8 +127,8 @@ class Patches(Sequence):
                 number = np.where(found == background, 0, number)
             if len(found) == 0:
                 raise ValueError(
-                    f"the patch at row {row}, column {col} has no valid pixel to take a label "
-                    "from; cut with min_valid > 0"
+                    f"the patch at row {row}, column {col} has no valid pixel with a label; cut "
+                    "with min_valid > 0, or label more pixels"
                 )
             best = int(np.argmax(number))
             labels[k] = found[best]

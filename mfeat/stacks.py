@@ -12,7 +12,7 @@ import numpy as np
 from mfeat import _checks, _kernels
 
 #: Pixels of a stack; bounds the memory of a worker and is small enough for the processor's cache.
-STACK_PIXELS = 1 << 17
+STACK_PIXELS = 1 << 18
 
 
 @dataclass(frozen=True)

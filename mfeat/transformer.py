@@ -326,8 +326,19 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
                     'MinkowskiCurves with level_rule="fitted" learns its levels from training '
                     "patches: call fit before this"
                 )
-            return replace(plan, learned=self.levels_)
+            return replace(plan, learned=self._learned(plan))
         return plan
+
+    def _learned(self, plan: VectorPlan) -> dict[str, np.ndarray]:
+        """Return the learned levels of the plan's fields; they may stem from other parameters."""
+        for name, wanted in plan.level_values.items():
+            if len(self.levels_.get(name, ())) != len(wanted):
+                raise ValueError(
+                    f"parameters were changed after fit: field {name} needs {len(wanted)} learned "
+                    f"levels, but levels_ has {len(self.levels_.get(name, ()))} for it; call fit "
+                    "again"
+                )
+        return {name: self.levels_[name] for name in plan.level_values}
 
     def _resolve(self) -> VectorPlan:
         """Check all parameters and turn them into a plan."""

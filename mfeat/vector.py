@@ -8,10 +8,10 @@ import numpy as np
 
 from mfeat import _kernels
 from mfeat.counts import (
-    FEW_LEVELS,
     STATISTICS,
     all_windows_ok,
     crossings_of,
+    index_stack,
     levels_from_top,
 )
 from mfeat.fields import Field, derive
@@ -33,8 +33,7 @@ def count_stack(
     Returns histograms over level indices (n, 8, T + 1) and the counting windows of each field (n,).
     """
     count, rows, cols = relief.values.shape
-    index = np.zeros((count, rows + 1, cols + 1), dtype=np.uint16)
-    _kernels.index_stack(relief.values, levels.thresholds, levels.reach, FEW_LEVELS, index)
+    index = index_stack(relief.values, levels.thresholds, levels.reach)
     if missing:
         ok = np.empty((count, rows + 1, cols + 1), dtype=np.uint8)
         windows = np.array([_kernels.windows_ok(relief.valid[k], ok[k]) for k in range(count)])

@@ -1,0 +1,85 @@
+"""The demonstration data set: simulated height maps of powder-coated panels, as files."""
+
+import csv
+from pathlib import Path
+from typing import Any
+
+import tifffile
+from tqdm import tqdm
+
+from mfeat import _checks
+from mfeat.surfaces import PANEL_CONDITIONS, simulate_panel
+
+#: Columns of the manifest. Paths are relative to its folder; the pitch is in `unit`.
+MANIFEST_COLUMNS = ("path", "label", "group", "truth", "pitch_x", "pitch_y", "unit")
+
+
+def write_demo(
+    folder: Any, panels: int = 4, *, side: int = 512, pitch: float = 10.0, seed: int = 0
+) -> Path:
+    """Write simulated panels of every condition as TIFF files, with their truth and a manifest.
+
+    Parameters
+    ----------
+    folder : path-like
+        Made if it does not exist; refused if it holds anything, so that nothing is overwritten.
+    panels : int, default 4
+        Panels of each condition.
+    side : int, default 512
+        Side of a panel in pixels, >= 16.
+    pitch : float, default 10.0
+        Pixel pitch in micrometres.
+    seed : int, default 0
+        Seed of the first panel of each condition; the others count on from it.
+
+    Returns
+    -------
+    pathlib.Path
+        The manifest, a CSV file with the columns of `MANIFEST_COLUMNS`: height maps are float32
+        micrometres with NaN for missing pixels, truth images uint8 with 0 for sound pixels and
+        otherwise the position of the label in `mfeat.surfaces.PANEL_CONDITIONS`.
+
+    Raises
+    ------
+    FileExistsError
+        If the folder is not empty.
+    ValueError, TypeError
+        For sizes that make no panel.
+
+    Examples
+    --------
+    >>> import tempfile
+    >>> from pathlib import Path
+    >>> from mfeat.demo import write_demo
+    >>> with tempfile.TemporaryDirectory() as folder:
+    ...     manifest = write_demo(Path(folder) / "demo", panels=1, side=32)
+    ...     print(manifest.read_text().splitlines()[1])
+    heights/sound_0000.tif,sound,sound_0000,truth/sound_0000.tif,10.0,10.0,um
+    """
+    panels = _checks.integer("panels", panels, minimum=1)
+    seed = _checks.integer("seed", seed, minimum=0)
+    side = _checks.integer("side", side, minimum=16)
+    pitch = _checks.real("pitch", pitch, above=0.0)
+    folder = Path(folder)
+    if folder.exists() and (not folder.is_dir() or any(folder.iterdir())):
+        raise FileExistsError(
+            f"{folder} exists and is not an empty folder; name a new one, or empty it first"
+        )
+    for name in ("heights", "truth"):
+        (folder / name).mkdir(parents=True)
+    rows = []
+    wanted = [(c, seed + k) for c in PANEL_CONDITIONS for k in range(panels)]
+    for condition, number in tqdm(wanted, "panels", disable=None):
+        panel = simulate_panel(condition, number, (side, side), pitch)
+        name = f"{condition}_{number:04d}"
+        tifffile.imwrite(folder / "heights" / f"{name}.tif", panel.height)
+        tifffile.imwrite(folder / "truth" / f"{name}.tif", panel.truth, compression="zlib")
+        rows.append(
+            (f"heights/{name}.tif", condition, name, f"truth/{name}.tif", pitch, pitch, "um")
+        )
+    manifest = folder / "manifest.csv"
+    with manifest.open("w", newline="", encoding="utf-8") as stream:
+        writer = csv.writer(stream, lineterminator="\n")
+        writer.writerow(MANIFEST_COLUMNS)
+        writer.writerows(rows)
+    return manifest
