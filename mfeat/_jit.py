@@ -20,6 +20,7 @@ import time
 from collections.abc import Callable
 from pathlib import Path
 
+import llvmlite
 import numba
 import numpy as np
 from numba.core import compiler, event, serialize
@@ -77,7 +78,12 @@ def _source_hash() -> str:
     digest = hashlib.sha256()
     for name in KERNEL_SOURCES:
         digest.update(name.encode() + b"\0" + (here / name).read_bytes() + b"\0")
-    versions = (platform.python_version(), numba.__version__, np.__version__)
+    versions = (
+        platform.python_version(),
+        llvmlite.__version__,
+        numba.__version__,
+        np.__version__,
+    )
     digest.update(repr(versions).encode())
     return digest.hexdigest()
 

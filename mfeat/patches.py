@@ -223,6 +223,15 @@ class PatchGrid:
         ------
         ValueError
             If the image is smaller than a patch, or holds infinities, or the mask does not fit.
+
+        Examples
+        --------
+        >>> import numpy as np
+        >>> from mfeat import PatchGrid
+        >>> image = np.zeros((20, 30), dtype=np.uint8)
+        >>> patches = PatchGrid(size=10, stride=5).cut(image)
+        >>> len(patches), patches[0].shape, np.shares_memory(patches[0], image)
+        (15, (10, 10), True)
         """
         image = _checks.image(image)
         positions = self.positions(image.shape)

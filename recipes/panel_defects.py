@@ -175,7 +175,7 @@ def main(argv: list[str] | None = None) -> float:
     )
     present = [c for c in PANEL_CONDITIONS if c in labels]
     print()
-    print(classification_report(labels, found, labels=present, digits=3))
+    print(classification_report(labels, found, labels=present, digits=3, zero_division=0))
     table = confusion_matrix(labels, found, labels=present)
     width = max(len(c) for c in present) + 2
     print("true \\ found".ljust(width) + "".join(c.rjust(width) for c in present))
