@@ -354,6 +354,8 @@ def _up_to_float(dtype: np.dtype, levels: np.ndarray) -> np.ndarray:
             [int(e) < int(u) for e, u in zip(exact.flat, levels.flat, strict=True)], levels.shape
         )
         return _up_to_float(dtype, np.where(too_low, np.nextafter(exact, np.inf), exact))
+    if dtype == np.float64:
+        return levels.astype(np.float64)
     with np.errstate(over="ignore"):  # a level beyond float32 becomes inf, which no pixel reaches
         nearest = levels.astype(dtype)
     too_low = nearest.astype(np.float64) < levels

@@ -173,6 +173,11 @@ def minkowski_curves(
         pitch=pitch,
         edges=edges,
     )
+    if not np.isfinite(placed.shown).all():
+        raise ValueError(
+            f"field {chosen.name} overflows float64: the pixels reach from "
+            f"{np.nanmin(stack):.3g} to {np.nanmax(stack):.3g}. Set no-data values to NaN"
+        )
     if counts.windows == 0:
         raise ValueError(
             f"field {chosen.name} has no 2x2 window of four valid pixels among its "

@@ -89,16 +89,27 @@ def sigma_pixels(scale: float, pitch: tuple[float, float], scale_unit: str) -> t
     return length / dy, length / dx
 
 
-def check_scale(
-    field: Field, shape: tuple[int, int], pitch: tuple[float, float], scale_unit: str
+@lru_cache(maxsize=256)  # streams of patches ask again and again; a refusal is not cached
+def check_scales(
+    fields: tuple[Field, ...],
+    shape: tuple[int, int],
+    pitch: tuple[float, float],
+    scale_unit: str,
 ) -> None:
-    """Refuse a scale that cannot act on images of this shape, and an image too small for a field.
+    """Refuse scales that cannot act on images of this shape, and images too small for a field.
 
     Raises
     ------
     ValueError
         With the field, the shape and what to change.
     """
+    for field in fields:
+        _check_scale(field, shape, pitch, scale_unit)
+
+
+def _check_scale(
+    field: Field, shape: tuple[int, int], pitch: tuple[float, float], scale_unit: str
+) -> None:
     smallest = 2 + _SHRINK[field.family]
     if min(shape) < smallest:
         raise ValueError(
@@ -175,8 +186,7 @@ def derive(
     Memory: one float64 array of the stack's size for each distinct smoothing, and five more.
     """
     shape = values.shape[1:]
-    for field in fields:
-        check_scale(field, shape, pitch, scale_unit)
+    check_scales(fields, shape, pitch, scale_unit)
     missing = valid is not None
     if valid is None:
         valid = np.ones(values.shape, dtype=np.uint8)

@@ -166,8 +166,7 @@ def area(counts: PatternCounts, kind: str | None = None) -> np.ndarray:
     >>> area(count_patterns(square, levels=[1], pitch=0.5, edges="framed"))
     array([2.25])
     """
-    dy, dx = counts.pitch
-    return _scaled(counts, area_of(counts.table) * (dy * dx), kind)
+    return _scaled(counts, area_of(counts.table), kind, power=2)
 
 
 def contour(
@@ -268,20 +267,36 @@ def direction_steps(pitch: tuple[float, float]) -> dict[str, float]:
     return {"horizontal": dx, "vertical": dy, "falling": diagonal, "rising": diagonal}
 
 
-def _scaled(counts: PatternCounts, total: np.ndarray, kind: str | None) -> np.ndarray:
+def per_window(total: np.ndarray, windows: np.ndarray) -> np.ndarray:
+    """Return totals (..., T) in windows as a fraction of the window area; NaN without windows."""
+    with np.errstate(divide="ignore", invalid="ignore"):
+        return total / windows[..., None]
+
+
+def per_area(total: np.ndarray, windows: np.ndarray, pitch: tuple[float, float]) -> np.ndarray:
+    """Return totals (..., T) per area of the windows (...); NaN where there are none."""
+    with np.errstate(divide="ignore", invalid="ignore"):
+        return total / (windows[..., None] * (pitch[0] * pitch[1]))
+
+
+def _scaled(
+    counts: PatternCounts, total: np.ndarray, kind: str | None, power: int = 0
+) -> np.ndarray:
+    """Return a total as it is or as a density; area comes in windows (power 2 of the length)."""
     if kind is None:
         kind = "total" if counts.edges == "framed" else "density"
     _checks.choice("kind", kind, KINDS)
+    dy, dx = counts.pitch
     if kind == "total":
-        return total
+        return total * (dy * dx) if power == 2 else total
     if counts.edges == "framed":
         raise ValueError(
             'a density of framed counts is biased for textures; count with edges="inside", or ask '
             'for kind="total"'
         )
     _require_windows(counts)
-    dy, dx = counts.pitch
-    return total / (counts.windows * (dy * dx))
+    windows = np.array(counts.windows)
+    return per_window(total, windows) if power == 2 else per_area(total, windows, counts.pitch)
 
 
 def _require_windows(counts: PatternCounts) -> None:

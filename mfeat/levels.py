@@ -81,11 +81,15 @@ class Relief:
         return self._moments[1]
 
     @cached_property
+    def empty(self) -> np.ndarray:
+        """Which fields have no valid pixel; nothing of them is counted."""
+        return ~self.valid.any(axis=(1, 2))
+
+    @cached_property
     def flat(self) -> np.ndarray:
         """Which fields have no relief."""
-        if self.constant is not None:
-            return self.constant
-        return (self._raw_moments[1] <= self.rounding) & ~np.isnan(self._raw_moments[0])
+        even = self._raw_moments[1] <= self.rounding if self.constant is None else self.constant
+        return even & ~self.empty if even.any() else even
 
     @cached_property
     def _raw_moments(self) -> tuple[np.ndarray, np.ndarray]:
@@ -98,11 +102,9 @@ class Relief:
     @cached_property
     def _moments(self) -> tuple[np.ndarray, np.ndarray]:
         mean, deviation = self._raw_moments
-        undefined = np.isnan(mean)  # no valid pixel; nothing of such a field is counted
-        return (
-            np.where(undefined, 0.0, mean),
-            np.where(undefined | self.flat, 0.0, deviation),
-        )
+        if np.isnan(mean).any():  # an empty field; or one that overflowed, which stays NaN
+            mean, deviation = np.where(self.empty, 0.0, (mean, deviation))
+        return mean, np.where(self.flat, 0.0, deviation)
 
 
 @dataclass
@@ -155,7 +157,14 @@ def level_values(levels: Any, rule: str, level_range: Any = None) -> np.ndarray:
             f"level_range={level_range!r} has no meaning beside explicit levels "
             f"{_checks.show(np.asarray(levels))}; give one of the two"
         )
-    values = _checks.level_sequence(levels).astype(np.float64)
+    given = _checks.level_sequence(levels)
+    values = given.astype(np.float64)
+    rounded = [int(v) != int(g) for v, g in zip(values, given, strict=True)]
+    if given.dtype.kind != "f" and any(rounded):
+        raise ValueError(
+            f"levels[{rounded.index(True)}] = {given[rounded.index(True)]} is beyond 2**53 and "
+            "would be rounded; count_patterns takes such levels exactly"
+        )
     if rule in ("rank", "fitted") and (values[0] < 0.0 or values[-1] > 1.0):
         raise ValueError(
             f'levels of rule "{rule}" are fractions of the pixels, from 0 to 1; '

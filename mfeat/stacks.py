@@ -20,7 +20,12 @@ class Collected:
     """Checked patches: `images[k][c]` is channel c of patch k, a 2-D array."""
 
     images: list[list[np.ndarray]]
-    n_channels: int
+    channels: tuple[str, ...] | None
+
+    @property
+    def n_channels(self) -> int:
+        """Number of channels, 1 where they have no names."""
+        return 1 if self.channels is None else len(self.channels)
 
     def __len__(self) -> int:
         return len(self.images)
@@ -42,8 +47,14 @@ class Group:
     """
 
     channel: int
+    channel_name: str | None
     positions: list[int]
     images: list[np.ndarray]
+
+    def name(self, place: int) -> str:
+        """Return how messages call an image: "X[3]", or "X[3] channel 'red'"."""
+        channel = "" if self.channel_name is None else f" channel {self.channel_name!r}"
+        return f"X[{self.positions[place]}]{channel}"
 
     def stacks(self) -> list[Stack]:
         """Return the images stacked: those without missing pixels, then those with some."""
@@ -68,8 +79,8 @@ class Group:
         if whole:
             return [None] * len(self.images)
         return [
-            _checks.valid_pixels(image, None, f"X[{position}]")
-            for position, image in zip(self.positions, self.images, strict=True)
+            _checks.valid_pixels(image, None, self.name(place))
+            for place, image in enumerate(self.images)
         ]
 
 
@@ -127,8 +138,8 @@ def collect(X: Any, channels: Any) -> Collected:
     if not X.dtype.isnative:
         X = X.astype(X.dtype.newbyteorder("="))
     if X.ndim == 3:
-        return Collected([[image] for image in X], 1)
-    return Collected([[image[:, :, c] for c in range(number)] for image in X], number)
+        return Collected([[image] for image in X], None)
+    return Collected([[image[:, :, c] for c in range(number)] for image in X], tuple(channels))
 
 
 def _n_channels(channels: Any) -> int:
@@ -165,17 +176,18 @@ def _from_list(X: Any, channels: Any) -> Collected:
                 f"(h, w, {number}) for every patch"
             )
         images.append([_checks.image(patch[:, :, c], f"X[{k}]") for c in range(number)])
-    return Collected(images, number)
+    return Collected(images, None if channels is None else tuple(channels))
 
 
-def group(patches: Collected) -> list[Group]:
+def group_patches(patches: Collected) -> list[Group]:
     """Sort patches into groups of at most `STACK_PIXELS` pixels (or one patch)."""
     growing: dict[tuple, Group] = {}
     done: list[Group] = []
     for position, channels in enumerate(patches.images):
         for channel, image in enumerate(channels):
             key = (channel, image.shape, image.dtype)
-            entry = growing.setdefault(key, Group(channel, [], []))
+            name = None if patches.channels is None else patches.channels[channel]
+            entry = growing.setdefault(key, Group(channel, name, [], []))
             entry.positions.append(position)
             entry.images.append(image)
             if (len(entry.images) + 1) * image.size > STACK_PIXELS:

@@ -1,30 +1,24 @@
 """`MinkowskiCurves`: image patches in, fixed-length vectors out, as a scikit-learn transformer."""
 
-import pickle
-from dataclasses import replace
-from numbers import Integral, Real
+from numbers import Integral
 from typing import Any, ClassVar
 
 import numpy as np
 from joblib import Parallel, delayed
 from sklearn.base import BaseEstimator, TransformerMixin
 from sklearn.exceptions import NotFittedError
-from sklearn.utils._param_validation import Interval, Options, StrOptions
+from sklearn.utils._param_validation import Options, StrOptions
 
-from mfeat import _checks, stacks
-from mfeat.fields import FAMILIES, SCALE_UNITS, Field, check_scale, scales
-from mfeat.functionals import CONNECTIVITIES, CONTOUR_ESTIMATORS, FUNCTIONALS
-from mfeat.levels import RULES, level_values, pooled_quantiles
+from mfeat import stacks
+from mfeat.fields import SCALE_UNITS
+from mfeat.functionals import CONTOUR_ESTIMATORS, FUNCTIONALS
+from mfeat.levels import RULES, pooled_quantiles
 from mfeat.plan import Feature, VectorPlan, canonical_sha256
-from mfeat.vector import samples, vectors
+from mfeat.settings import resolve, with_learned
+from mfeat.vector import groups_of, rows_of, samples_of
 
 #: Total number of pixel values that `fit` keeps of each field to learn levels from.
 FIT_SAMPLE = 1 << 21
-
-#: Plans by their parameters: checking and resolving them again for each patch of a stream would
-#: cost more than the patch.
-_PLANS: dict[bytes, VectorPlan] = {}
-_MOST_PLANS = 64
 
 
 class MinkowskiCurves(TransformerMixin, BaseEstimator):
@@ -122,31 +116,28 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
     ['raw_mean', 'raw_std', 'raw_area_00', 'raw_area_01']
     """
 
+    # Constraints that scikit-learn can word well; `mfeat.settings` checks the others.
     _parameter_constraints: ClassVar[dict] = {
         "functionals": [tuple, list],
-        "levels": [Interval(Real, None, None, closed="neither"), "array-like", dict],
+        "levels": "no_validation",
         "level_rule": [StrOptions(set(RULES))],
-        "level_range": [tuple, list, dict, None],
+        "level_range": "no_validation",
         "raw": ["boolean"],
-        "smooth": [tuple, list, np.ndarray],
-        "band": [tuple, list, np.ndarray],
-        "slope": [tuple, list, np.ndarray],
-        "curvature": [tuple, list, np.ndarray],
+        "smooth": "no_validation",
+        "band": "no_validation",
+        "slope": "no_validation",
+        "curvature": "no_validation",
         "location_scale": ["boolean"],
         "directional": ["boolean"],
         "connectivity": [StrOptions({"mean"}), Options(Integral, {4, 8})],
         "contour_estimator": [StrOptions(set(CONTOUR_ESTIMATORS))],
-        "pitch": [Interval(Real, 0, None, closed="neither"), tuple, list, np.ndarray],
+        "pitch": "no_validation",
         "scale_unit": [StrOptions(set(SCALE_UNITS))],
         "channels": [tuple, list, None],
-        "min_valid": [Interval(Real, 0, 1, closed="both")],
+        "min_valid": "no_validation",
         "below_min_valid": [StrOptions({"error", "nan"})],
         "dtype": [StrOptions({"float32", "float64"})],
-        "n_jobs": [
-            Interval(Integral, 1, None, closed="left"),
-            Interval(Integral, None, -1, closed="right"),
-            None,
-        ],
+        "n_jobs": "no_validation",
     }
 
     def __init__(
@@ -207,11 +198,13 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
         self
         """
         plan = self._plan()
-        patches = stacks.collect(X, self.channels)
-        groups = _groups(plan, patches)
+        patches = stacks.collect(X, plan.channels)
+        groups = groups_of(plan, patches)
         self.__dict__.pop("levels_", None)
+        self.__dict__.pop("_fitted_plan", None)
         if plan.level_rule == "fitted":
             self.levels_ = self._learn(plan, groups, len(patches) * patches.n_channels)
+            self._fitted_plan = plan
         return self
 
     def transform(self, X: Any) -> np.ndarray:
@@ -235,18 +228,18 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
             With rule "fitted", before `fit`.
         """
         plan = self._plan(learned=True)
-        patches = stacks.collect(X, self.channels)
+        patches = stacks.collect(X, plan.channels)
         span = plan.length()
         out = np.full((len(patches), span * patches.n_channels), np.nan, dtype=self.dtype)
-        groups = _groups(plan, patches)
-        done = self._parallel(_rows, plan, groups, min_valid=float(self.min_valid))
+        groups = groups_of(plan, patches)
+        done = self._parallel(rows_of, plan, groups, float(self.min_valid))
         refused = []
         for group, (rows, reasons) in zip(groups, done, strict=True):
             start = group.channel * span
             out[group.positions, start : start + span] = rows
             refused.extend(
-                (int(position), group.channel, reason)
-                for position, reason in zip(group.positions, reasons, strict=True)
+                (group.positions[place], group.channel, f"{group.name(place)}: {reason}")
+                for place, reason in enumerate(reasons)
                 if reason
             )
         self._settle(refused, out)
@@ -309,105 +302,21 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
 
     def _plan(self, learned: bool = False) -> VectorPlan:
         """Return the plan of the parameters as they are now, with or without learned levels."""
-        parameters = [getattr(self, name) for name in self._parameter_constraints]
-        try:
-            key = pickle.dumps(parameters)
-        except (pickle.PicklingError, TypeError, AttributeError):
-            return self._resolve()  # where it will be said which parameter is wrong
-        plan = _PLANS.get(key)
-        if plan is None:
-            plan = self._resolve()
-            if len(_PLANS) >= _MOST_PLANS:
-                _PLANS.clear()
-            _PLANS[key] = plan
-        if learned and plan.level_rule == "fitted":
-            if not hasattr(self, "levels_"):
-                raise NotFittedError(
-                    'MinkowskiCurves with level_rule="fitted" learns its levels from training '
-                    "patches: call fit before this"
-                )
-            return replace(plan, learned=self._learned(plan))
-        return plan
-
-    def _learned(self, plan: VectorPlan) -> dict[str, np.ndarray]:
-        """Return the learned levels of the plan's fields; they may stem from other parameters."""
-        for name, wanted in plan.level_values.items():
-            if len(self.levels_.get(name, ())) != len(wanted):
-                raise ValueError(
-                    f"parameters were changed after fit: field {name} needs {len(wanted)} learned "
-                    f"levels, but levels_ has {len(self.levels_.get(name, ()))} for it; call fit "
-                    "again"
-                )
-        return {name: self.levels_[name] for name in plan.level_values}
-
-    def _resolve(self) -> VectorPlan:
-        """Check all parameters and turn them into a plan."""
-        self._validate_params()
-        fields = self._fields()
-        channels = self._channel_names()
-        per_family = {}
-        for family in {field.family for field in fields}:
-            per_family[family] = level_values(
-                _of_family("levels", self.levels, family),
-                self.level_rule,
-                _of_family("level_range", self.level_range, family),
+        plan = resolve(self)
+        if not (learned and plan.level_rule == "fitted"):
+            return plan
+        if not hasattr(self, "levels_"):
+            raise NotFittedError(
+                'MinkowskiCurves with level_rule="fitted" learns its levels from training '
+                "patches: call fit before this"
             )
-        plan = VectorPlan(
-            fields=fields,
-            functionals=self._functionals(),
-            level_rule=self.level_rule,
-            level_values={field.name: per_family[field.family] for field in fields},
-            location_scale=bool(self.location_scale),
-            directional=bool(self.directional),
-            connectivity=_checks.choice("connectivity", self.connectivity, CONNECTIVITIES),
-            contour_estimator=self.contour_estimator,
-            pitch=_checks.pitch(self.pitch),
-            scale_unit=self.scale_unit,
-            dtype=np.dtype(self.dtype),
-            channels=channels,
-        )
-        if plan.length() == 0:
-            raise ValueError(
-                "the vector would be empty: functionals is (), directional and location_scale are "
-                "False; switch one of them on"
-            )
-        return plan
+        return with_learned(plan, self._fitted_plan, self.levels_)
 
-    def _fields(self) -> tuple[Field, ...]:
-        fields = [Field("raw")] if self.raw else []
-        for family in FAMILIES[1:]:
-            zero = family in ("slope", "curvature")
-            fields += [Field(family, s) for s in scales(family, getattr(self, family), zero=zero)]
-        if not fields:
-            raise ValueError(
-                "no field is left: raw is False and smooth, band, slope and curvature are (); "
-                "give at least one"
-            )
-        return tuple(fields)
-
-    def _functionals(self) -> tuple[str, ...]:
-        names = tuple(_checks.choice("functionals", f, FUNCTIONALS) for f in self.functionals)
-        if len(set(names)) < len(names):
-            raise ValueError(f"functionals holds a name twice: {names!r}")
-        return names
-
-    def _channel_names(self) -> tuple[str, ...] | None:
-        if self.channels is None:
-            return None
-        names = tuple(self.channels)
-        if (
-            not names
-            or not all(isinstance(n, str) and n for n in names)
-            or (len(set(names)) < len(names))
-        ):
-            raise ValueError(f"channels must be distinct, non-empty names; got {self.channels!r}")
-        return names
-
-    def _parallel(self, work, plan: VectorPlan, groups: list, **options: Any) -> list:
+    def _parallel(self, work, plan: VectorPlan, groups: list, option: Any) -> list:
         if len(groups) == 1:  # no scheduling for a single patch in a stream
-            return [work(plan, groups[0], **options)]
+            return [work(plan, groups[0], option)]
         return Parallel(n_jobs=self.n_jobs, prefer="threads")(
-            delayed(work)(plan, group, **options) for group in groups
+            delayed(work)(plan, group, option) for group in groups
         )
 
     def _learn(
@@ -415,7 +324,7 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
     ) -> dict[str, np.ndarray]:
         """Learn levels as quantiles of each field over all patches of all channels."""
         size = max(16, FIT_SAMPLE // n_images)
-        found = self._parallel(_samples, plan, groups, size=size)
+        found = self._parallel(samples_of, plan, groups, size)
         learned = {}
         for field in plan.fields:
             pool = [sample for part in found for sample in part[field.name] if len(sample)]
@@ -431,14 +340,10 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
         if not refused:
             return
         if self.below_min_valid == "error":
-            shown = "; ".join(
-                f"X[{position}]"
-                + (f" channel {self.channels[channel]!r}" if self.channels else "")
-                + f": {reason}"
-                for position, channel, reason in sorted(refused)[:5]
-            )
+            shown = "; ".join(text for _, _, text in sorted(refused)[:5])
+            patches = len({position for position, _, _ in refused})
             raise ValueError(
-                f"{len(refused)} of {len(out)} patches have too few valid pixels. {shown}"
+                f"{patches} of {len(out)} patches have too few valid pixels. {shown}"
                 + ("; ..." if len(refused) > 5 else "")
                 + '. Leave them out, lower min_valid, or set below_min_valid="nan" to get rows of '
                 "NaN for them"
@@ -453,62 +358,3 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
         tags.requires_fit = self.level_rule == "fitted"
         tags.transformer_tags.preserves_dtype = []
         return tags
-
-
-def _of_family(name: str, value: Any, family: str) -> Any:
-    """Return a parameter for one family, where it may be a dict over families."""
-    if not isinstance(value, dict):
-        return value
-    unknown = sorted(set(value) - set(FAMILIES), key=str)
-    if unknown:
-        raise ValueError(f"{name} has unknown field families {unknown}; known are {list(FAMILIES)}")
-    if family not in value:
-        raise ValueError(
-            f"{name} is a dict without an entry for {family!r}, a family in use; it has "
-            f"{list(value)}"
-        )
-    return value[family]
-
-
-def _groups(plan: VectorPlan, patches: stacks.Collected) -> list[stacks.Group]:
-    """Return the groups of the patches, each large enough for every field of the plan."""
-    groups = stacks.group(patches)
-    for group in groups:
-        for field in plan.fields:
-            try:
-                check_scale(field, group.images[0].shape, plan.pitch, plan.scale_unit)
-            except ValueError as error:
-                raise ValueError(f"X[{group.positions[0]}]: {error}") from None
-    return groups
-
-
-def _rows(
-    plan: VectorPlan, group: stacks.Group, *, min_valid: float
-) -> tuple[np.ndarray, list[str]]:
-    """Compute the rows of one group, and for each patch a reason to refuse it, or ''."""
-    rows = np.empty((len(group.images), plan.length()))
-    reasons = [""] * len(rows)
-    for stack in group.stacks():
-        found = vectors(plan, stack.values, stack.valid)
-        rows[stack.places] = found
-        if stack.valid is None:
-            continue
-        fractions = stacks.valid_fractions(stack.valid)
-        undefined = np.isnan(found).any(axis=1)
-        for place, fraction, bad in zip(stack.places, fractions, undefined, strict=True):
-            if fraction == 0.0:
-                reasons[place] = "no window of four valid pixels"
-            elif fraction < min_valid:
-                reasons[place] = f"valid fraction {fraction:.3g} < min_valid {min_valid:g}"
-            elif bad:
-                reasons[place] = "one of its fields has no window of four valid pixels"
-    return rows, reasons
-
-
-def _samples(plan: VectorPlan, group: stacks.Group, *, size: int) -> dict[str, list[np.ndarray]]:
-    """Return the samples of each field of the patches of one group."""
-    pool: dict[str, list[np.ndarray]] = {field.name: [] for field in plan.fields}
-    for stack in group.stacks():
-        for name, found in samples(plan, stack.values, stack.valid, size).items():
-            pool[name].extend(found)
-    return pool

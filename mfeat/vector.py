@@ -14,10 +14,18 @@ from mfeat.counts import (
     index_stack,
     levels_from_top,
 )
-from mfeat.fields import Field, derive
-from mfeat.functionals import area_of, contour_of, direction_steps, euler_of
+from mfeat.fields import Field, check_scales, derive
+from mfeat.functionals import (
+    area_of,
+    contour_of,
+    direction_steps,
+    euler_of,
+    per_area,
+    per_window,
+)
 from mfeat.levels import PlacedLevels, Relief, place, sample_of
 from mfeat.plan import DIRECTIONS, VectorPlan
+from mfeat.stacks import Collected, Group, group_patches, valid_fractions
 
 
 def levels_of(plan: VectorPlan, field: Field) -> np.ndarray:
@@ -51,22 +59,19 @@ def densities(plan: VectorPlan, table: np.ndarray, windows: np.ndarray) -> list[
     `table` (..., 8, T) holds counts and `windows` (...) the counting windows; NaN where there are
     none.
     """
-    dy, dx = plan.pitch
     found = []
-    with np.errstate(divide="ignore", invalid="ignore"):
-        per_window = 1.0 * windows[..., None]
-        per_area = per_window * (dy * dx)
-        names = plan.level_functionals()
-        if "area" in names:
-            found.append(area_of(table) / per_window)
-        if "contour" in names:
-            found.append(contour_of(table, plan.pitch, plan.contour_estimator) / per_area)
-        if "euler" in names:
-            found.append(euler_of(table, plan.connectivity) / per_area)
-        if plan.directional:
-            twice = crossings_of(table)
-            step = direction_steps(plan.pitch)
-            found.extend(twice[name] / (2 * per_window * step[name]) for name in DIRECTIONS)
+    names = plan.level_functionals()
+    if "area" in names:
+        found.append(per_window(area_of(table), windows))
+    if "contour" in names:
+        length = contour_of(table, plan.pitch, plan.contour_estimator)
+        found.append(per_area(length, windows, plan.pitch))
+    if "euler" in names:
+        found.append(per_area(euler_of(table, plan.connectivity), windows, plan.pitch))
+    if plan.directional:
+        twice = crossings_of(table)
+        step = direction_steps(plan.pitch)
+        found.extend(per_window(twice[name] / (2 * step[name]), windows) for name in DIRECTIONS)
     return found
 
 
@@ -97,11 +102,65 @@ def vectors(plan: VectorPlan, values: np.ndarray, valid: np.ndarray | None) -> n
     return out
 
 
-def samples(
-    plan: VectorPlan, values: np.ndarray, valid: np.ndarray | None, size: int
-) -> dict[str, list[np.ndarray]]:
-    """Return the samples of each field of each image of a stack, from which levels are learned."""
-    return {
-        field.name: [sample_of(relief, k, size) for k in range(len(values))]
-        for field, relief in derive(plan.fields, values, valid, plan.pitch, plan.scale_unit)
-    }
+def rows_of(plan: VectorPlan, group: Group, min_valid: float) -> tuple[np.ndarray, list[str]]:
+    """Return the rows of a group of images, and for each a reason to refuse it, or ''.
+
+    Raises
+    ------
+    ValueError
+        If a number does not fit the output type: values so large mean no-data markers.
+    """
+    rows = np.empty((len(group.images), plan.length()))
+    reasons = [""] * len(rows)
+    for stack in group.stacks():
+        with np.errstate(over="ignore", invalid="ignore"):  # checked below
+            found = vectors(plan, stack.values, stack.valid)
+        rows[stack.places] = found
+        if stack.valid is not None:
+            fractions = valid_fractions(stack.valid)
+            undefined = np.isnan(found).any(axis=1)
+            for place, fraction, bad in zip(stack.places, fractions, undefined, strict=True):
+                if fraction == 0.0:
+                    reasons[place] = "no window of four valid pixels"
+                elif fraction < min_valid:
+                    reasons[place] = f"valid fraction {fraction:.3g} < min_valid {min_valid:g}"
+                elif bad:
+                    reasons[place] = "one of its fields has no window of four valid pixels"
+    _refuse_overflow(plan, group, rows, reasons)
+    return rows, reasons
+
+
+def _refuse_overflow(plan: VectorPlan, group: Group, rows: np.ndarray, reasons: list[str]) -> None:
+    fits = np.abs(rows) <= np.finfo(plan.dtype).max
+    if fits.all():
+        return
+    for k in np.flatnonzero(~fits.all(axis=1)):
+        if not reasons[k]:
+            image = group.images[k]
+            name = plan.features()[int(np.argmin(fits[k]))].name
+            raise ValueError(
+                f"{group.name(k)}: feature {name} does not fit {plan.dtype}; the pixels reach "
+                f"from {np.nanmin(image):.3g} to {np.nanmax(image):.3g}. Set no-data values to NaN "
+                "or mask them"
+            )
+
+
+def samples_of(plan: VectorPlan, group: Group, size: int) -> dict[str, list[np.ndarray]]:
+    """Return samples of each field of the images of a group, from which levels are learned."""
+    pool: dict[str, list[np.ndarray]] = {field.name: [] for field in plan.fields}
+    for stack in group.stacks():
+        derived = derive(plan.fields, stack.values, stack.valid, plan.pitch, plan.scale_unit)
+        for field, relief in derived:
+            pool[field.name].extend(sample_of(relief, k, size) for k in range(len(stack.values)))
+    return pool
+
+
+def groups_of(plan: VectorPlan, patches: Collected) -> list[Group]:
+    """Return the groups of patches, each large enough for every field of the plan."""
+    groups = group_patches(patches)
+    for group in groups:
+        try:
+            check_scales(plan.fields, group.images[0].shape, plan.pitch, plan.scale_unit)
+        except ValueError as error:
+            raise ValueError(f"{group.name(0)}: {error}") from None
+    return groups

@@ -90,7 +90,7 @@ def test_a_ragged_patch_is_named():
 
 def test_groups_are_of_one_shape_and_type_in_the_order_of_x():
     patches = [*numbered(MIXED_SHAPES), np.full((4, 5), 6, dtype=np.uint8)]
-    groups = stacks.group(stacks.collect(patches, None))
+    groups = stacks.group_patches(stacks.collect(patches, None))
     # by hand: three shapes of float64, and the one patch of uint8
     assert sorted(group.positions for group in groups) == [[0, 2, 5], [1, 4], [3], [6]]
     assert (places_in(groups, 7) == 1).all()
@@ -99,7 +99,7 @@ def test_groups_are_of_one_shape_and_type_in_the_order_of_x():
 def test_channels_are_grouped_apart():
     X = np.stack([np.arange(3), 100 + np.arange(3)], axis=-1)[:, None, None, :]
     X = np.broadcast_to(X, (3, 4, 4, 2))
-    groups = stacks.group(stacks.collect(X, ("a", "b")))
+    groups = stacks.group_patches(stacks.collect(X, ("a", "b")))
     found = [(group.channel, group.positions) for group in groups]
     assert found == [(0, [0, 1, 2]), (1, [0, 1, 2])]
     assert (places_in(groups, 3, 2) == 1).all()
@@ -118,7 +118,7 @@ def test_channels_are_grouped_apart():
 )
 def test_groups_are_bounded(monkeypatch, limit, sizes):
     monkeypatch.setattr(stacks, "STACK_PIXELS", limit)
-    groups = stacks.group(stacks.collect(numbered([(4, 5)] * 7), None))
+    groups = stacks.group_patches(stacks.collect(numbered([(4, 5)] * 7), None))
     assert [len(group.positions) for group in groups] == sizes
     assert [position for group in groups for position in group.positions] == list(range(7))
 
@@ -132,7 +132,7 @@ def test_grouping_loses_and_doubles_nothing(shapes, limit):
     patches = stacks.collect(numbered(shapes, np.int16), None)
     with pytest.MonkeyPatch.context() as patch:
         patch.setattr(stacks, "STACK_PIXELS", limit)
-        groups = stacks.group(patches)
+        groups = stacks.group_patches(patches)
     assert (places_in(groups, len(shapes)) == 1).all()
     for group in groups:
         assert group.positions == sorted(group.positions)
@@ -145,7 +145,7 @@ def test_grouping_loses_and_doubles_nothing(shapes, limit):
 
 
 def the_group(patches):
-    [group] = stacks.group(stacks.collect(patches, None))
+    [group] = stacks.group_patches(stacks.collect(patches, None))
     return group
 
 

@@ -1,0 +1,154 @@
+"""From the parameters of a transformer to the plan of its vectors: all checks in one place."""
+
+import pickle
+from dataclasses import replace
+from typing import Any
+
+import numpy as np
+
+from mfeat import _checks
+from mfeat.fields import FAMILIES, Field, scales
+from mfeat.functionals import CONNECTIVITIES, FUNCTIONALS
+from mfeat.levels import level_values
+from mfeat.plan import VectorPlan
+
+# Plans by their parameters: checking and resolving them again for each patch of a stream would
+# cost more than the patch.
+_PLANS: dict[bytes, VectorPlan] = {}
+_MOST_PLANS = 64
+
+
+def resolve(estimator: Any) -> VectorPlan:
+    """Check the parameters of a `MinkowskiCurves` as they are now and turn them into a plan.
+
+    Raises
+    ------
+    ValueError, TypeError
+        Naming the parameter, what was given and what is legal.
+    """
+    parameters = [getattr(estimator, name) for name in estimator._parameter_constraints]
+    try:
+        key = pickle.dumps(parameters)
+    except (pickle.PicklingError, TypeError, AttributeError):
+        return _resolve(estimator)  # where it will be said which parameter is wrong
+    plan = _PLANS.get(key)
+    if plan is None:
+        plan = _resolve(estimator)
+        if len(_PLANS) >= _MOST_PLANS:
+            _PLANS.clear()
+        _PLANS[key] = plan
+    return plan
+
+
+def with_learned(
+    plan: VectorPlan, fitted: VectorPlan, learned: dict[str, np.ndarray]
+) -> VectorPlan:
+    """Return a plan with levels learned under another, which must agree where it matters.
+
+    Fields may be left out after `fit`; levels, pitch and new fields need another `fit`.
+    """
+    for name in ("pitch", "scale_unit"):
+        if getattr(plan, name) != getattr(fitted, name):
+            raise ValueError(
+                f"parameters were changed after fit: {name} was {getattr(fitted, name)!r} when the "
+                f"levels were learned and is {getattr(plan, name)!r} now; call fit again"
+            )
+    for name, wanted in plan.level_values.items():
+        there = fitted.level_values.get(name)
+        if there is None or not np.array_equal(there, wanted):
+            had = "none" if there is None else _checks.show(there)
+            raise ValueError(
+                f"parameters were changed after fit: field {name} has the levels "
+                f"{_checks.show(wanted)} now, and had {had} when they were learned; call fit again"
+            )
+    return replace(plan, learned={name: learned[name] for name in plan.level_values})
+
+
+def _resolve(estimator: Any) -> VectorPlan:
+    estimator._validate_params()
+    share = _checks.real("min_valid", estimator.min_valid, minimum=0.0)
+    if share > 1.0:
+        raise ValueError(f"min_valid must be from 0 to 1; got {estimator.min_valid!r}")
+    _check_jobs(estimator.n_jobs)
+    fields = _fields(estimator)
+    per_family = {
+        family: level_values(
+            _of_family("levels", estimator.levels, family),
+            estimator.level_rule,
+            _of_family("level_range", estimator.level_range, family),
+        )
+        for family in dict.fromkeys(field.family for field in fields)
+    }
+    plan = VectorPlan(
+        fields=fields,
+        functionals=_functionals(estimator.functionals),
+        level_rule=estimator.level_rule,
+        level_values={field.name: per_family[field.family] for field in fields},
+        location_scale=bool(estimator.location_scale),
+        directional=bool(estimator.directional),
+        connectivity=_checks.choice("connectivity", estimator.connectivity, CONNECTIVITIES),
+        contour_estimator=estimator.contour_estimator,
+        pitch=_checks.pitch(estimator.pitch),
+        scale_unit=estimator.scale_unit,
+        dtype=np.dtype(estimator.dtype),
+        channels=_channels(estimator.channels),
+    )
+    if plan.length() == 0:
+        raise ValueError(
+            "the vector would be empty: functionals is (), directional and location_scale are "
+            "False; switch one of them on"
+        )
+    return plan
+
+
+def _check_jobs(n_jobs: Any) -> None:
+    if n_jobs is None:
+        return
+    if _checks.integer("n_jobs", n_jobs, minimum=-(2**31)) == 0:
+        raise ValueError("n_jobs must be None, >= 1, or <= -1 to count from all processors; got 0")
+
+
+def _fields(estimator: Any) -> tuple[Field, ...]:
+    fields = [Field("raw")] if estimator.raw else []
+    for family in FAMILIES[1:]:
+        zero = family in ("slope", "curvature")
+        given = scales(family, getattr(estimator, family), zero=zero)
+        fields += [Field(family, scale) for scale in given]
+    if not fields:
+        raise ValueError(
+            "no field is left: raw is False and smooth, band, slope and curvature are (); "
+            "give at least one"
+        )
+    return tuple(fields)
+
+
+def _functionals(given: Any) -> tuple[str, ...]:
+    names = tuple(_checks.choice("functionals", name, FUNCTIONALS) for name in given)
+    if len(set(names)) < len(names):
+        raise ValueError(f"functionals holds a name twice: {names!r}")
+    return names
+
+
+def _channels(given: Any) -> tuple[str, ...] | None:
+    if given is None:
+        return None
+    names = tuple(given)
+    proper = all(isinstance(name, str) and name for name in names)
+    if not names or not proper or len(set(names)) < len(names):
+        raise ValueError(f"channels must be distinct, non-empty names; got {given!r}")
+    return names
+
+
+def _of_family(name: str, value: Any, family: str) -> Any:
+    """Return a parameter for one family, where it may be a dict over families."""
+    if not isinstance(value, dict):
+        return value
+    unknown = sorted(set(value) - set(FAMILIES), key=str)
+    if unknown:
+        raise ValueError(f"{name} has unknown field families {unknown}; known are {list(FAMILIES)}")
+    if family not in value:
+        raise ValueError(
+            f"{name} is a dict without an entry for {family!r}, a family in use; it has "
+            f"{list(value)}"
+        )
+    return value[family]
