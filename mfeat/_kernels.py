@@ -133,27 +133,26 @@ def count_windows(index, ok, table):
     rows = index.shape[0] - 1
     cols = index.shape[1] - 1
     for i in range(rows):
+        upper, lower = index[i], index[i + 1]
+        ok_above, ok_below = ok[i], ok[i + 1]
+        # The right half of a window is the left half of the next: carried along, not read again.
+        a, c = upper[0], lower[0]
+        upper_left, lower_left = np.int64(ok_above[0]), np.int64(ok_below[0])
         for j in range(cols):
-            a = index[i, j]
-            b = index[i, j + 1]
-            c = index[i + 1, j]
-            d = index[i + 1, j + 1]
-            upper_left = np.int64(ok[i, j])
-            upper_right = np.int64(ok[i, j + 1])
-            lower_left = np.int64(ok[i + 1, j])
-            lower_right = np.int64(ok[i + 1, j + 1])
-            ab = max(a, b)
-            ac = max(a, c)
+            b, d = upper[j + 1], lower[j + 1]
+            upper_right, lower_right = np.int64(ok_above[j + 1]), np.int64(ok_below[j + 1])
             ad = max(a, d)
             bc = max(b, c)
             diagonal[a] += upper_left + lower_right
             pixel[a] += upper_left + upper_right + lower_left + lower_right
-            horizontal[ab] += upper_right + lower_right
-            vertical[ac] += lower_left + lower_right
+            horizontal[max(a, b)] += upper_right + lower_right
+            vertical[max(a, c)] += lower_left + lower_right
             falling[ad] += lower_right
             rising[bc] += lower_right
             largest[max(ad, bc)] += lower_right
             smallest[min(min(a, d), min(b, c))] += lower_right
+            a, c = b, d
+            upper_left, lower_left = upper_right, lower_right
 
 
 @kernel

@@ -53,10 +53,15 @@ class Field(NamedTuple):
     @property
     def name(self) -> str:
         """Name in feature names: "raw", "smooth_2", "slope_0", "band_1.6"."""
-        if self.family == "raw":
-            return "raw"
-        text = f"{self.scale:g}"
-        return f"{self.family}_{text if float(text) == self.scale else repr(self.scale)}"
+        return _field_name(self.family, self.scale)
+
+
+@lru_cache(maxsize=1024)
+def _field_name(family: str, scale: float) -> str:
+    if family == "raw":
+        return "raw"
+    text = f"{scale:g}"
+    return f"{family}_{text if float(text) == scale else repr(scale)}"
 
 
 def scales(name: str, value: Any, *, zero: bool) -> tuple[float, ...]:
@@ -190,8 +195,11 @@ def derive(
     missing = valid is not None
     if valid is None:
         valid = np.ones(values.shape, dtype=np.uint8)
-    low, high = np.zeros(len(values), values.dtype), np.zeros(len(values), values.dtype)
-    _kernels.value_range(values, valid, low, high)
+    if missing:
+        low, high = np.zeros((2, len(values)), values.dtype)
+        _kernels.value_range(values, valid, low, high)
+    else:
+        low, high = values.min(axis=(1, 2)), values.max(axis=(1, 2))
     # Half of each before they are added: the sum of two large values would overflow.
     offset = low.astype(np.float64) / 2 + high.astype(np.float64) / 2
     half_range = high.astype(np.float64) / 2 - low.astype(np.float64) / 2

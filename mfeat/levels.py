@@ -112,12 +112,19 @@ class PlacedLevels:
     """Levels of each field of a stack, ready for counting.
 
     `thresholds` (n, T) are in the type of the pixels; of row k the first `reach[k]` are used, the
-    others lie above every possible pixel. `shown` (n, T) are the levels in data units.
+    others lie above every possible pixel. `own` (n, T) are the levels in the units of the relief's
+    values, without `offset` (n,).
     """
 
     thresholds: np.ndarray
     reach: np.ndarray
-    shown: np.ndarray
+    own: np.ndarray
+    offset: np.ndarray
+
+    @property
+    def shown(self) -> np.ndarray:
+        """The levels in data units, float64."""
+        return self.own + self.offset[:, None]
 
 
 def level_values(levels: Any, rule: str, level_range: Any = None) -> np.ndarray:
@@ -199,34 +206,29 @@ def place(relief: Relief, rule: str, values: np.ndarray) -> PlacedLevels:
 
     For rule "fitted", `values` are the learned levels in data units, as for "fixed".
     """
+    derived = relief.derived
+    offset = relief.offset if derived else np.zeros(len(relief.offset))
     if rule == "standard":
-        steps = (values - TIE) * relief.deviation[:, None]
-        shown = (relief.offset + relief.mean)[:, None] + steps
-        own = relief.mean[:, None] + steps
+        # The pixels of a raw field keep their offset and their type, and so do its levels.
+        middle = relief.mean if derived else relief.offset + relief.mean
+        own = middle[:, None] + (values - TIE) * relief.deviation[:, None]
     elif rule == "rank":
         own = _order_statistics(relief, values)
-        if relief.derived:  # rounding has blurred the ties of such a field
+        if derived:  # rounding has blurred the ties of such a field
             own = own - TIE * relief.deviation[:, None]
-            shown = own + relief.offset[:, None]
-        else:
-            shown = own.astype(np.float64)
     else:
-        shown = np.broadcast_to(values, (len(relief.values), len(values)))
-        own = shown - relief.offset[:, None]
-    if not relief.derived and rule != "rank":
-        own = shown  # the pixels kept their offset and their type
+        own = values - offset[:, None]
     thresholds, reach = thresholds_for(relief.values.dtype, own)
     if relief.flat.any():
-        shown = np.array(shown)
+        thresholds, own = np.array(thresholds), own.astype(np.float64)
         for k in np.flatnonzero(relief.flat):
-            reached = _reached_by_flat(relief, k, rule, values)
+            reach[k] = _reached_by_flat(relief, k, rule, values)
             thresholds[k] = relief.values[k][relief.valid[k] == 1].min()
-            reach[k] = reached
             if rule in ("standard", "rank"):
-                level = relief.offset[k] + relief.mean[k]
-                shown[k, :reached] = level
-                shown[k, reached:] = np.nextafter(level, np.inf)
-    return PlacedLevels(thresholds, reach, shown)
+                level = relief.mean[k] + (0.0 if derived else relief.offset[k])
+                own[k, : reach[k]] = level
+                own[k, reach[k] :] = np.nextafter(level, np.inf)
+    return PlacedLevels(thresholds, reach, own, offset)
 
 
 def _reached_by_flat(relief: Relief, k: int, rule: str, values: np.ndarray) -> int:

@@ -7,6 +7,7 @@ output columns, the feature table and the fingerprint.
 import hashlib
 import json
 from dataclasses import dataclass
+from functools import cached_property
 from typing import Any, NamedTuple
 
 import numpy as np
@@ -89,8 +90,9 @@ class VectorPlan:
             return ()
         return ("mean", "std") if field.family in _LOCATED else ("std",)
 
+    @cached_property
     def length(self) -> int:
-        """Return how many numbers the vector of one channel has."""
+        """How many numbers the vector of one channel has."""
         per_level = len(self.level_functionals())
         return sum(
             len(self.moments(field)) + per_level * len(self.level_values[field.name])

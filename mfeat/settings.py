@@ -93,7 +93,7 @@ def _resolve(estimator: Any) -> VectorPlan:
         dtype=np.dtype(estimator.dtype),
         channels=_channels(estimator.channels),
     )
-    if plan.length() == 0:
+    if plan.length == 0:
         raise ValueError(
             "the vector would be empty: functionals is (), directional and location_scale are "
             "False; switch one of them on"

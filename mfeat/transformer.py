@@ -229,7 +229,7 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
         """
         plan = self._plan(learned=True)
         patches = stacks.collect(X, plan.channels)
-        span = plan.length()
+        span = plan.length
         out = np.full((len(patches), span * patches.n_channels), np.nan, dtype=self.dtype)
         groups = groups_of(plan, patches)
         done = self._parallel(rows_of, plan, groups, float(self.min_valid))

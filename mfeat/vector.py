@@ -53,8 +53,8 @@ def count_stack(
     return table, windows
 
 
-def densities(plan: VectorPlan, table: np.ndarray, windows: np.ndarray) -> list[np.ndarray]:
-    """Return the level functionals of the plan, in order, as densities (..., T).
+def densities(plan: VectorPlan, table: np.ndarray, windows: np.ndarray) -> np.ndarray:
+    """Return the level functionals of the plan, in order, as densities (functionals, ..., T).
 
     `table` (..., 8, T) holds counts and `windows` (...) the counting windows; NaN where there are
     none.
@@ -72,7 +72,7 @@ def densities(plan: VectorPlan, table: np.ndarray, windows: np.ndarray) -> list[
         twice = crossings_of(table)
         step = direction_steps(plan.pitch)
         found.extend(per_window(twice[name] / (2 * step[name]), windows) for name in DIRECTIONS)
-    return found
+    return np.array(found).reshape(len(names), *table.shape[:-2], table.shape[-1])
 
 
 def vectors(plan: VectorPlan, values: np.ndarray, valid: np.ndarray | None) -> np.ndarray:
@@ -80,25 +80,27 @@ def vectors(plan: VectorPlan, values: np.ndarray, valid: np.ndarray | None) -> n
 
     An image in one of whose fields no window counts gets NaN for that field.
     """
-    out = np.empty((len(values), plan.length()))
+    out = np.empty((len(values), plan.length))
     waiting: dict[int, list] = {}  # by number of levels: functionals of many fields in one go
+    functionals = len(plan.level_functionals())
     column = 0
     for field, relief in derive(plan.fields, values, valid, plan.pitch, plan.scale_unit):
         levels = place(relief, plan.level_rule, levels_of(plan, field))
         table, windows = count_stack(relief, levels, valid is not None)
+        nothing = windows == 0
         for moment in plan.moments(field):
             number = relief.offset + relief.mean if moment == "mean" else relief.deviation
-            out[:, column] = np.where(windows == 0, np.nan, number)
+            out[:, column] = np.where(nothing, np.nan, number) if nothing.any() else number
             column += 1
         count = levels.thresholds.shape[1]
         waiting.setdefault(count, []).append((column, table, windows))
-        column += count * len(plan.level_functionals())
+        column += count * functionals
     for count, group in waiting.items():
         columns, tables, windows = zip(*group, strict=True)
         found = densities(plan, levels_from_top(np.stack(tables)), np.stack(windows))
-        for k, functional in enumerate(found):
-            for column, density in zip(columns, functional, strict=True):
-                out[:, column + k * count : column + (k + 1) * count] = density
+        # (functional, field, image, level) to the columns of (field, functional, level)
+        places = np.add.outer(columns, np.arange(functionals * count))
+        out[:, places.ravel()] = found.transpose(2, 1, 0, 3).reshape(len(out), -1)
     return out
 
 
@@ -110,7 +112,7 @@ def rows_of(plan: VectorPlan, group: Group, min_valid: float) -> tuple[np.ndarra
     ValueError
         If a number does not fit the output type: values so large mean no-data markers.
     """
-    rows = np.empty((len(group.images), plan.length()))
+    rows = np.empty((len(group.images), plan.length))
     reasons = [""] * len(rows)
     for stack in group.stacks():
         with np.errstate(over="ignore", invalid="ignore"):  # checked below
