@@ -6,6 +6,7 @@ foreground at every level at once. Everything downstream is a weighted sum of th
 """
 
 from dataclasses import dataclass, field
+from functools import lru_cache
 from typing import Any
 
 import numpy as np
@@ -32,6 +33,8 @@ FEW_LEVELS = 24
 
 #: Pixels of an image indexed and counted at a time; bounds the memory of `count_patterns`.
 BAND_PIXELS = 1 << 20
+
+_SMALL_PIXELS = 1 << 16
 
 
 @dataclass(frozen=True, eq=False)
@@ -310,10 +313,21 @@ def levels_from_top(table: np.ndarray) -> np.ndarray:
 
 
 def all_windows_ok(rows: int, cols: int) -> tuple[np.ndarray, int]:
-    """Return the map of counting windows of an image without missing pixels, and their number."""
+    """Return the map of counting windows of an image without missing pixels, and their number.
+
+    It must not be written to: the maps of small images are kept for the next patch.
+    """
+    make = _small_windows_ok if rows * cols <= _SMALL_PIXELS else _windows_ok
+    return make(rows, cols), (rows - 1) * (cols - 1)
+
+
+def _windows_ok(rows: int, cols: int) -> np.ndarray:
     ok = np.zeros((rows + 1, cols + 1), dtype=np.uint8)
     ok[1:rows, 1:cols] = 1
-    return ok, (rows - 1) * (cols - 1)
+    return ok
+
+
+_small_windows_ok = lru_cache(maxsize=64)(_windows_ok)
 
 
 def compiled_dtype(values: np.ndarray) -> np.dtype:
