@@ -84,7 +84,7 @@ def draw(path: Path, images, labels, groups, vectors, names, table) -> None:
     present = [c for c in PANEL_CONDITIONS if c in labels]
     figure, charts = plt.subplot_mosaic(
         [list(PANEL_CONDITIONS), ["left", "left", "middle", "middle", "right", "right"]],
-        figsize=(13, 8),
+        figsize=(13, 7.6),
         height_ratios=(1, 1.6),
         layout="constrained",
     )
@@ -100,8 +100,10 @@ def draw(path: Path, images, labels, groups, vectors, names, table) -> None:
         plane = np.stack([np.ones(patch.size), y.ravel(), x.ravel()], axis=1)
         fit = np.linalg.lstsq(plane[good.ravel()], patch[good].astype(float), rcond=None)[0]
         shown = axes.imshow(patch - (plane @ fit).reshape(patch.shape), cmap="bone")
-        axes.set(title=condition.replace("_", " "), xticks=[], yticks=[])
-        figure.colorbar(shown, ax=axes, orientation="horizontal", label="height, um", shrink=0.8)
+        axes.set(title=condition.replace("_", " "), xticks=[], yticks=[], facecolor="crimson")
+        figure.colorbar(
+            shown, ax=axes, orientation="horizontal", label="height, um (red: lost)", shrink=0.8
+        )
     for axes, functional, unit in ((left, "contour", "1/mm"), (middle, "euler", "1/mm$^2$")):
         columns = [k for k, name in enumerate(names) if name.startswith(f"band_4_{functional}_")]
         levels = np.linspace(-2.5, 2.5, len(columns))
