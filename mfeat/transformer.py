@@ -99,9 +99,9 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
 
     Apart from rule "fitted", nothing is learned, and `transform` works without `fit`.
 
-    Memory beyond X and the result: about 20 MB a worker for the usual settings (patches are taken
-    in groups of some 130,000 pixels), or some 150 bytes a pixel of the largest patch if that is
-    more.
+    Memory beyond X and the result: about 25 MB a worker for the usual settings (patches are taken
+    in groups of some 260,000 pixels), or some 80 bytes a pixel of the largest patch if that is
+    more; and some 300 bytes a patch.
 
     Examples
     --------

@@ -1,0 +1,68 @@
+"""The stated bounds of memory, by tracemalloc, which sees NumPy's arrays; no timing involved."""
+
+import tracemalloc
+
+import numpy as np
+import pytest
+
+from mfeat import MinkowskiCurves, count_patterns, minkowski_curves
+
+MB = 1e6
+
+
+def peak_of(work):
+    """Return the largest number of bytes that a second call holds beyond what was there."""
+    work()
+    tracemalloc.start()
+    try:
+        work()
+        return tracemalloc.get_traced_memory()[1]
+    finally:
+        tracemalloc.stop()
+
+
+@pytest.fixture(scope="module")
+def image():
+    return np.random.default_rng(0).integers(0, 200, (3000, 2000)).astype(np.uint16)
+
+
+def test_counting_takes_bands_whatever_the_size(image):
+    levels = np.arange(1, 33)
+    small, large = (peak_of(lambda x=x: count_patterns(x, levels)) for x in (image[:1500], image))
+    assert large < 13 * MB
+    assert large < small + 0.1 * MB
+
+
+def test_counting_with_missing_pixels_keeps_a_map_of_them(image):
+    levels = np.arange(1, 33)
+    assert peak_of(lambda: count_patterns(image, levels, image > 20)) < 13 * MB + 2.1 * image.size
+    heights = image.astype(np.float32)
+    assert peak_of(lambda: count_patterns(heights, levels)) < 13 * MB + 2.1 * image.size
+
+
+@pytest.mark.parametrize(("field", "scale"), [("raw", 0), ("band", 2), ("curvature", 2)])
+def test_curves_take_some_bytes_a_pixel(image, field, scale):
+    part = image[:1000, :1000]
+    options = {"levels": 16, "field": field, "scale": scale}
+    assert peak_of(lambda: minkowski_curves(part, **options)) < 40 * part.size
+    assert peak_of(lambda: minkowski_curves(part, mask=part > 20, **options)) < 55 * part.size
+
+
+@pytest.mark.parametrize("missing", [False, True])
+def test_a_worker_takes_groups_whatever_the_number_of_patches(image, missing):
+    patches = image[:2048, :1920].reshape(32, 64, 30, 64).swapaxes(1, 2).reshape(-1, 64, 64)
+    patches = patches.astype(np.float32)
+    if missing:
+        patches[:, 3, 4] = np.nan
+    transformer = MinkowskiCurves()
+    small, large = (
+        peak_of(lambda n=n: transformer.transform(patches[:n])) - 4 * 395 * n for n in (128, 960)
+    )
+    assert large < 25 * MB
+    # a few hundred bytes a patch for its view of X; nothing of its pixels
+    assert large < small + 500 * (960 - 128) + 3 * MB
+
+
+def test_a_large_patch_takes_some_bytes_a_pixel(image):
+    patch = image[None, :1500, :1500]
+    assert peak_of(lambda: MinkowskiCurves().transform(patch)) < 80 * patch.size
