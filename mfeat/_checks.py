@@ -6,8 +6,6 @@ from typing import Any
 
 import numpy as np
 
-from mfeat import _kernels
-
 #: Largest number of levels: level indices are 16-bit, and index 0 means "below every level".
 MAX_LEVELS = 65_535
 
@@ -17,25 +15,41 @@ _FLOATS = (np.float16, np.float32, np.float64)
 def choice(name: str, value: Any, known: Sequence[Any]) -> Any:
     """Return `value` if it is one of `known`; a closed option has no silent fallback."""
     for entry in known:
-        if type(entry) is type(value) and entry == value:
-            return value
-        if isinstance(value, int | np.integer) and not isinstance(value, bool) and entry == value:
+        kinds = str if isinstance(entry, str) else int | np.integer
+        if isinstance(value, kinds) and not isinstance(value, bool) and entry == value:
             return entry
     raise ValueError(f"{name} must be one of {', '.join(map(repr, known))}; got {value!r}")
 
 
-def real(name: str, value: Any, *, minimum: float = -math.inf, above: float = -math.inf) -> float:
-    """Return `value` as a finite float that is >= `minimum` and > `above`."""
+def real(
+    name: str,
+    value: Any,
+    *,
+    minimum: float = -math.inf,
+    above: float = -math.inf,
+    maximum: float = math.inf,
+) -> float:
+    """Return `value` as a finite float that is >= `minimum`, > `above` and <= `maximum`."""
     if isinstance(value, bool | np.bool_) or not isinstance(
         value, int | float | np.integer | np.floating
     ):
         raise TypeError(f"{name} must be a number; got {value!r} ({type(value).__name__})")
-    number = float(value)
+    try:
+        number = float(value)
+    except OverflowError:
+        number = math.inf
     if not math.isfinite(number) or number < minimum or number <= above:
         bound = f" > {above:g}" if above > -math.inf else ""
         bound = f" >= {minimum:g}" if minimum > -math.inf else bound
-        raise ValueError(f"{name} must be a finite number{bound}; got {value!r}")
+        raise ValueError(f"{name} must be a finite number{bound}; got {_short(value)}")
+    if number > maximum:
+        raise ValueError(f"{name} must be <= {maximum:g}; got {_short(value)}")
     return number
+
+
+def _short(value: Any) -> str:
+    text = repr(value)
+    return text if len(text) <= 40 else f"{text[:20]}... ({len(text)} characters)"
 
 
 def integer(name: str, value: Any, *, minimum: int, maximum: int | None = None) -> int:
@@ -50,33 +64,51 @@ def integer(name: str, value: Any, *, minimum: int, maximum: int | None = None) 
 
 def pitch(value: Any, name: str = "pitch") -> tuple[float, float]:
     """Return the pitch as (row pitch, column pitch); a single number means square pixels."""
+    if isinstance(value, np.ndarray) and value.ndim == 0:
+        value = value[()]
     if isinstance(value, tuple | list | np.ndarray):
         if len(value) != 2:
             raise ValueError(
                 f"{name} must be one number or (row pitch, column pitch); "
                 f"got {len(value)} numbers: {value!r}"
             )
-        return (real(f"{name}[0]", value[0], above=0.0), real(f"{name}[1]", value[1], above=0.0))
-    number = real(name, value, above=0.0)
+        return (_one_pitch(f"{name}[0]", value[0]), _one_pitch(f"{name}[1]", value[1]))
+    number = _one_pitch(name, value)
     return (number, number)
 
 
-def image(array: Any, name: str = "image") -> np.ndarray:
-    """Return a 2-D array of a countable type in native byte order; masked arrays stay masked.
+def _one_pitch(name: str, value: Any) -> float:
+    number = real(name, value, above=0.0)
+    if not 1e-60 <= number <= 1e60:  # areas and curvatures need its square, either way up
+        raise ValueError(f"{name} must be from 1e-60 to 1e60; got {value!r}. Use another unit")
+    return number
 
-    Countable: bool, integers of up to 64 bit, float16, float32, float64. Nothing is copied unless
-    the bytes are swapped.
+
+def as_array(given: Any, name: str) -> np.ndarray:
+    """Return an array; a sequence of masked rows becomes a masked array."""
+    if isinstance(given, np.ndarray):
+        return given
+    if isinstance(given, dict | set | str | bytes):
+        raise TypeError(f"{name} must be an array of numbers; got {type(given).__name__}")
+    try:
+        if isinstance(given, list | tuple) and any(isinstance(r, np.ma.MaskedArray) for r in given):
+            return np.ma.stack(given)
+        return np.asarray(given)
+    except ValueError as error:
+        raise ValueError(f"{name} must be an array; it is ragged: {error}") from None
+
+
+def image(array: Any, name: str = "image") -> np.ndarray:
+    """Return a 2-D array of a countable type, in any byte order; masked arrays stay masked.
+
+    Countable: bool, integers of up to 64 bit, float16, float32, float64. Nothing is copied.
     """
-    if not isinstance(array, np.ndarray):
-        try:
-            array = np.asarray(array)
-        except ValueError as error:
-            raise ValueError(f"{name} must be a 2-D array; it is ragged: {error}") from None
+    array = as_array(array, name)
     dtype = array.dtype
     if not (dtype == np.bool_ or dtype.kind in "iu" or dtype.newbyteorder("=").type in _FLOATS):
         raise TypeError(
             f"{name} must hold bool, integers of up to 64 bit, float16, float32 or float64; "
-            f"got dtype {dtype}. Convert it first, e.g. {name}.astype('float64')"
+            f"got dtype {dtype}. Give an array of plain numbers"
         )
     if array.ndim != 2:
         hint = "; for several images or channels use MinkowskiCurves" if array.ndim > 2 else ""
@@ -85,46 +117,84 @@ def image(array: Any, name: str = "image") -> np.ndarray:
         )
     if array.shape[0] < 2 or array.shape[1] < 2:
         raise ValueError(f"{name} must be at least 2x2 pixels; got shape {array.shape}")
-    if not dtype.isnative:
-        array = array.astype(dtype.newbyteorder("="))
     return array
 
 
-def valid_pixels(array: np.ndarray, mask: Any, name: str = "image") -> np.ndarray | None:
+def valid_mask(mask: Any, shape: tuple[int, ...], name: str = "image") -> np.ndarray | None:
+    """Return a user's mask as a boolean array; where the mask itself is masked, it is False."""
+    if mask is None:
+        return None
+    mask = as_array(mask, f"mask of {name}")
+    if isinstance(mask, np.ma.MaskedArray):
+        mask = mask.filled(False)
+    if mask.dtype != np.bool_:
+        raise TypeError(
+            f"mask of {name} must be boolean, True where a pixel is valid; "
+            f"got dtype {mask.dtype}. Write e.g. mask=(mask != 0)"
+        )
+    if mask.shape != shape:
+        raise ValueError(f"mask of {name} has shape {mask.shape}, the image {shape}")
+    return mask
+
+
+def valid_pixels(
+    array: np.ndarray, mask: np.ndarray | None = None, name: str = "image", first_row: int = 0
+) -> np.ndarray | None:
     """Return the map of valid pixels as uint8, or None where every pixel is valid.
 
     A pixel is missing where `mask` is False, where a masked array masks it, and where it is NaN.
-    Infinities in valid pixels are refused.
+    Infinities in valid pixels are refused; `first_row` is the row of the image that the array
+    starts with.
     """
-    valid = None
-    if mask is not None:
-        mask = np.asarray(mask)
-        if mask.dtype != np.bool_:
-            raise TypeError(
-                f"mask of {name} must be boolean, True where a pixel is valid; "
-                f"got dtype {mask.dtype}. Write e.g. mask=(mask != 0)"
-            )
-        if mask.shape != array.shape:
-            raise ValueError(f"mask of {name} has shape {mask.shape}, the image {array.shape}")
-        valid = mask
-    if isinstance(array, np.ma.MaskedArray):
+    valid = mask
+    if isinstance(array, np.ma.MaskedArray) and array.mask is not np.ma.nomask:
         unmasked = ~np.ma.getmaskarray(array)
         valid = unmasked if valid is None else valid & unmasked
-    if array.dtype.kind == "f":
-        values = compiled_type(np.asarray(array))
-        given = np.ones(array.shape, np.uint8) if valid is None else valid.astype(np.uint8)
-        usable = np.empty(array.shape, np.uint8)
-        missing, infinite = _kernels.survey(values, given, usable)
-        if infinite >= 0:
-            row, col = divmod(infinite, array.shape[1])
+    values = np.asarray(array)
+    if values.dtype.kind == "f" and not (finite := np.isfinite(values)).all():
+        known = ~np.isnan(values)
+        valid = known if valid is None else valid & known
+        infinite = np.argwhere(valid & ~finite)
+        if len(infinite):
+            row, col = infinite[0]
             raise ValueError(
-                f"{name} holds {values[row, col]} at row {row}, column {col}; "
+                f"{name} holds {values[row, col]} at row {first_row + row}, column {col}; "
                 "infinite values cannot be ranked. Set them to NaN if they mean missing data"
             )
-        return usable if missing else None
     if valid is None or valid.all():
         return None
     return valid.astype(np.uint8)
+
+
+def representable(values: np.ndarray, valid: np.ndarray | None, name: str) -> None:
+    """Refuse pixel values with which fields cannot be computed in float64.
+
+    64-bit integers beyond 2**53 would be rounded; squares and differences of floating-point values
+    beyond 1e100 overflow, and those of values all within 1e-100 of each other vanish.
+    """
+    if values.dtype.itemsize < 8:
+        return
+    seen = values if valid is None else values[valid == 1]
+    if not seen.size:
+        return
+    low, high = seen.min(), seen.max()
+    if values.dtype.kind == "f":
+        if max(-low, high) > 1e100:
+            raise ValueError(
+                f"{name} reaches from {low:.3g} to {high:.3g}; fields cannot be computed beyond "
+                "1e100. Set no-data values to NaN, or mask them"
+            )
+        if 0.0 < high - low < 1e-100:
+            raise ValueError(
+                f"{name} reaches from {low!r} to {high!r}; differences below 1e-100 vanish in "
+                "fields. Multiply the values by a power of ten"
+            )
+    elif int(low) < -(2**53) or int(high) > 2**53:
+        raise ValueError(
+            f"{name} holds integers from {low} to {high}; beyond 2**53 means and "
+            "derived fields would be rounded. Subtract an offset, or count exactly with "
+            "count_patterns at levels of your own"
+        )
 
 
 def compiled_type(array: np.ndarray) -> np.ndarray:
@@ -160,14 +230,19 @@ def level_sequence(levels: Any, name: str = "levels", *, strict: bool = True) ->
 
     They must be finite and strictly ascending, 1 to 65,535 of them.
     """
+    if isinstance(levels, np.ma.MaskedArray) and np.ma.getmaskarray(levels).any():
+        raise ValueError(f"{name} holds masked entries; give numbers only")
     if isinstance(levels, np.ndarray):
-        array = levels
+        array = np.asarray(levels)
     else:
+        ordered = hasattr(levels, "__len__") and hasattr(levels, "__getitem__")
+        if not ordered or isinstance(levels, str | bytes | dict):
+            raise TypeError(f"{name} must be a sequence of numbers; got {levels!r}")
+        given = list(levels)
         try:
-            given = list(levels)
-        except TypeError:
-            raise TypeError(f"{name} must be a sequence of numbers; got {levels!r}") from None
-        array = np.asarray(given) if given else np.empty(0)
+            array = np.asarray(given) if given else np.empty(0)
+        except ValueError as error:
+            raise ValueError(f"{name} must be one-dimensional; it is ragged: {error}") from None
         if array.ndim == 1 and array.dtype.kind == "f":
             for number, stored in zip(given, array, strict=True):
                 if isinstance(number, int | np.integer) and int(stored) != int(number):
@@ -183,6 +258,8 @@ def level_sequence(levels: Any, name: str = "levels", *, strict: bool = True) ->
         array = array.astype(np.uint64)
     elif array.dtype.kind == "i":
         array = array.astype(np.int64)
+    elif array.dtype == object and all(isinstance(number, int) for number in array.flat):
+        raise ValueError(f"{name} holds integers beyond 64 bit; no image can reach them")
     elif array.size:
         raise TypeError(f"{name} must hold integers or floats; got dtype {array.dtype}")
     if not 1 <= array.size <= MAX_LEVELS:

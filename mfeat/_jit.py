@@ -167,7 +167,8 @@ class _Announcer(event.Listener):
 
     def on_start(self, happening):
         function = getattr(happening.data.get("dispatcher"), "py_func", None)
-        if not getattr(function, "__module__", "").startswith("mfeat."):
+        # Generated functions of other packages may have no module at all.
+        if not (getattr(function, "__module__", None) or "").startswith("mfeat."):
             return
         with self._lock:
             self._started[threading.get_ident(), function.__name__] = time.perf_counter()

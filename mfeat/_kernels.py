@@ -164,26 +164,6 @@ def count_stack(index, ok, table):
 
 
 @kernel
-def survey(values, valid, usable):
-    """Write which pixels are usable: valid and not NaN; for floating-point images only.
-
-    Returns the number of unusable pixels and the flat position of the first valid infinity, or -1.
-    """
-    rows, cols = values.shape
-    missing = 0
-    infinite = -1
-    for i in range(rows):
-        for j in range(cols):
-            value = values[i, j]
-            good = valid[i, j] and not np.isnan(value)
-            usable[i, j] = good
-            missing += not good
-            if good and np.isinf(value) and infinite < 0:
-                infinite = i * cols + j
-    return missing, infinite
-
-
-@kernel
 def value_range(values, valid, low, high):
     """Write the smallest and the largest valid value of each image of a stack (n, h, w)."""
     for k in range(len(values)):
@@ -213,7 +193,7 @@ def moments(values, valid, total, rest, mean, deviation):
     Each term is cut, by adding and subtracting a power of two, into two slices so coarse that
     sums of either are exact. So the result does not depend on the order of the pixels and is the
     same, bit for bit, after rotation or reflection. What lies below the second slice is dropped:
-    at most n^2 2^-105 of the largest term in the mean of n pixels.
+    at most n^2 2^-104 of the largest term in the mean of n pixels.
     `total` and `rest` are scratch of length w + 1: sums of the slices per column, then of all.
     Source: S. M. Rump, T. Ogita and S. Oishi, Accurate floating-point summation part I, SIAM J.
     Sci. Comput. 31 (2008), 189-224, section 3 (extraction of slices).

@@ -89,20 +89,20 @@ def _crater(rng: Generator) -> Mark:
     def profile(dy: np.ndarray, dx: np.ndarray) -> np.ndarray:
         rho = np.hypot(dy * stretch, dx) / radius
         # The third power: flatter ground and a narrower rim than a scratch has.
-        return -depth * furrow(rho**3, sharpness)
+        return -depth * groove_section(rho**3, sharpness)
 
     return 2.5 * radius, profile
 
 
 def _scratch(rng: Generator) -> Mark:
-    """Draw a handling mark: a furrow with thrown-up ridges, of varying depth along its way."""
+    """Draw a handling mark: a groove with thrown-up ridges, of varying depth along its way."""
     half_length, half_width = log_uniform(rng, 500.0, 3000.0), log_uniform(rng, 10.0, 30.0)
     depth, sharpness = log_uniform(rng, 0.8, 4.5), rng.uniform(0.3, 0.6)
     waves, phase = rng.uniform(0.5, 2.5), rng.uniform(0.0, 2.0 * math.pi)
 
     def section(along: np.ndarray, across: np.ndarray) -> np.ndarray:
         pressure = (1.0 - along**4) * (1.0 + 0.4 * np.cos(math.pi * waves * along + phase))
-        return -depth * pressure * furrow(across**2, sharpness)
+        return -depth * pressure * groove_section(across**2, sharpness)
 
     return bent_line(rng, half_length, half_width, section)
 
@@ -131,7 +131,7 @@ LOCALISED: dict[str, tuple[float, float, float, Draw]] = {
 }
 
 
-def furrow(distance: np.ndarray, sharpness: float) -> np.ndarray:
+def groove_section(distance: np.ndarray, sharpness: float) -> np.ndarray:
     """Return a section 1 in the middle, 0 at distance 1, with a rim of the other sign outside."""
     return (1.0 - distance) * np.exp(-sharpness * distance**2)
 

@@ -1,6 +1,7 @@
 """The command line: it parses and delegates; everything it does can be imported.
 
-Exit codes: 0 done, 2 unusable arguments. Results go to stdout and into files, messages to stderr.
+Exit codes: 0 done, 2 unusable arguments, 3 files that cannot be written, 130 interrupted. Results
+go to stdout and into files, messages to stderr.
 """
 
 import argparse
@@ -55,8 +56,22 @@ def main(argv: Sequence[str] | None = None) -> int:
             pitch=options.pitch,
             seed=options.seed,
         )
-    except (ValueError, TypeError, OSError) as error:
-        print(f"mfeat demo: {error}", file=sys.stderr)
-        return 2
-    print(manifest)
+    except (ValueError, TypeError, FileExistsError) as error:
+        return _stopped(f"mfeat demo: {error}", 2)
+    except OSError as error:
+        return _stopped(
+            f"mfeat demo: cannot write {options.out}: {error}; nothing is left of it", 3
+        )
+    except KeyboardInterrupt:
+        return _stopped(f"mfeat demo: interrupted; nothing is left of {options.out}", 130)
+    try:
+        print(manifest, flush=True)
+    except OSError as error:
+        sys.stdout = None  # so that Python does not try to flush it again on the way out
+        return _stopped(f"mfeat demo: {manifest} is written, but stdout failed: {error}", 3)
     return 0
+
+
+def _stopped(message: str, code: int) -> int:
+    print(message, file=sys.stderr)
+    return code

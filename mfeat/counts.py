@@ -41,8 +41,9 @@ _SMALL_PIXELS = 1 << 16
 class PatternCounts:
     """Integer counts of 2x2 window statistics, one column a level; `a + b` merges them exactly.
 
-    Returned by `count_patterns`. The counts are int64 and additive: tiles that share one row or
-    column of pixels add up to the counts of the whole image, bit for bit.
+    Returned by `count_patterns`. The counts are int64 and, inside windows, additive: tiles that
+    share one row or column of pixels add up to the counts of the whole image, bit for bit. Arrays
+    are read-only.
 
     Attributes
     ----------
@@ -67,9 +68,13 @@ class PatternCounts:
     pitch: tuple[float, float] = (1.0, 1.0)
     edges: str = "inside"
 
+    def __post_init__(self):
+        for name in ("levels", "table"):
+            object.__setattr__(self, name, _checks.read_only(getattr(self, name)))
+
     @property
     def valid_fraction(self) -> float:
-        """Share of the image's 2x2 windows whose four pixels are all valid."""
+        """Share of the 2x2 windows, of the framed image if framed, with four valid pixels."""
         return self.windows / self.possible_windows
 
     def classes(self) -> dict[str, np.ndarray]:
@@ -87,25 +92,7 @@ class PatternCounts:
         >>> {name: int(number[0]) for name, number in counts.classes().items()}
         {'q0': 0, 'q1': 1, 'q2': 0, 'qd': 0, 'q3': 1, 'q4': 0}
         """
-        full = self.table[STATISTICS.index("smallest")]
-        touched = self.table[STATISTICS.index("largest")]
-        mixed = touched - full  # q1 + q2 + qd + q3
-        twice = self.crossings()
-        edges = (twice["horizontal"] + twice["vertical"]) // 2  # q1 + q2 + q3 + 2 qd
-        diagonals = twice["falling"] // 2 + twice["rising"] // 2  # q1 + 2 q2 + q3
-        qd = edges - mixed
-        q2 = diagonals + edges - 2 * mixed
-        single_or_triple = mixed - q2 - qd
-        pixels = self.table[STATISTICS.index("pixel")] - 4 * full - 2 * (q2 + qd)  # q1 + 3 q3
-        q3 = (pixels - single_or_triple) // 2
-        return {
-            "q0": self.windows - touched,
-            "q1": single_or_triple - q3,
-            "q2": q2,
-            "qd": qd,
-            "q3": q3,
-            "q4": full.copy(),
-        }
+        return classes_of(self.table, self.windows)
 
     def crossings(self) -> dict[str, np.ndarray]:
         """Return TWICE the mean number of boundary crossings per direction, as exact int64.
@@ -128,11 +115,11 @@ class PatternCounts:
     def __add__(self, other: Any) -> "PatternCounts":
         if not isinstance(other, PatternCounts):
             return NotImplemented
-        if self.levels.dtype != other.levels.dtype or not np.array_equal(self.levels, other.levels):
+        if not self._same_levels(other):
             raise ValueError(
                 "counts with different levels cannot be merged: "
-                f"{_checks.show(self.levels)} ({self.levels.dtype}) and "
-                f"{_checks.show(other.levels)} ({other.levels.dtype}); "
+                f"{_show_exactly(self.levels, other.levels)} and "
+                f"{_show_exactly(other.levels, self.levels)}; "
                 "count both images with the same `levels`"
             )
         for name in ("pitch", "edges"):
@@ -141,6 +128,12 @@ class PatternCounts:
                 raise ValueError(
                     f"counts with different {name} cannot be merged: {mine!r} and {theirs!r}"
                 )
+        if self.edges == "framed":
+            raise ValueError(
+                "framed counts cannot be merged: each has a frame of its own, so tiles would not "
+                'add up to the image. Count tiles with edges="inside"; for totals over separate '
+                "images add the functionals"
+            )
         return PatternCounts(
             levels=self.levels,
             table=self.table + other.table,
@@ -159,13 +152,19 @@ class PatternCounts:
         if not isinstance(other, PatternCounts):
             return NotImplemented
         return (
-            np.array_equal(self.levels, other.levels)
+            self._same_levels(other)
             and np.array_equal(self.table, other.table)
             and (self.windows, self.possible_windows, self.pitch, self.edges)
             == (other.windows, other.possible_windows, other.pitch, other.edges)
         )
 
     __hash__ = None
+
+    def _same_levels(self, other: "PatternCounts") -> bool:
+        """Compare levels as numbers, exactly: an integer and a float beyond 2**53 may differ."""
+        if self.levels.dtype == other.levels.dtype:
+            return np.array_equal(self.levels, other.levels)
+        return self.levels.tolist() == other.levels.tolist()
 
     def __repr__(self) -> str:
         return (
@@ -214,9 +213,10 @@ def count_patterns(
 
     Notes
     -----
-    Time grows with the number of pixels and, slightly, with the logarithm of the number of levels.
-    Memory beyond the image and the counts: some 12 MB, whatever the image's size, and with a mask
-    or a floating-point image one or two bytes a pixel for the map of valid pixels.
+    Time grows with the number of pixels: eight table updates each, whatever the number of levels.
+    From some thousand levels on the tables outgrow the processor's cache, which costs up to four
+    times as much again. Memory beyond the image and the counts: some 20 MB, whatever the image's
+    size, type, byte order and missing pixels.
 
     Examples
     --------
@@ -231,15 +231,14 @@ def count_patterns(
     levels = _checks.level_sequence(levels)
     pitch = _checks.pitch(pitch)
     _checks.choice("edges", edges, EDGES)
-    valid = _checks.valid_pixels(image, mask)
-    values = np.asarray(image)
-    [thresholds], [reach] = thresholds_for(compiled_dtype(values), levels[None, :])
-    return count_image(values, valid, levels, thresholds, reach, pitch=pitch, edges=edges)
+    mask = _checks.valid_mask(mask, image.shape)
+    [thresholds], [reach] = thresholds_for(compiled_dtype(image), levels[None, :])
+    return count_image(image, mask, levels, thresholds, reach, pitch=pitch, edges=edges)
 
 
 def count_image(
-    values: np.ndarray,
-    valid: np.ndarray | None,
+    image: np.ndarray,
+    mask: np.ndarray | None,
     levels: np.ndarray,
     thresholds: np.ndarray,
     reach: int,
@@ -251,7 +250,7 @@ def count_image(
 
     The work goes band by band; bands share one row, and the counts of bands add up exactly.
     """
-    rows, cols = values.shape
+    rows, cols = image.shape
     frame = 1 if edges == "framed" else 0
     table = np.zeros((len(STATISTICS), len(levels) + 1), dtype=np.int64)
     windows = 0
@@ -260,16 +259,18 @@ def count_image(
         stop = min(start + step + 1, rows)
         top = frame if start == 0 else 0
         bottom = frame if stop == rows else 0
-        band = _checks.compiled_type(values[start:stop])
+        valid = _checks.valid_pixels(
+            image[start:stop], None if mask is None else mask[start:stop], first_row=start
+        )
+        band = _checks.compiled_type(np.asarray(image[start:stop]))
         shape = (top + len(band) + bottom + 1, cols + 2 * frame + 1)
         index = np.zeros(shape, dtype=np.uint16)
         _index(band, thresholds[:reach], index, top, frame)
         if valid is None:
             ok, good = all_windows_ok(shape[0] - 1, shape[1] - 1)
         else:
-            around = np.pad(valid[start:stop], ((top, bottom), (frame, frame)), constant_values=1)
-            ok = np.empty(shape, dtype=np.uint8)
-            good = _kernels.windows_ok(around, ok)
+            around = np.pad(valid, ((top, bottom), (frame, frame)), constant_values=1)
+            ok, good = windows_of(around)
         _kernels.count_windows(index, ok, table)
         windows += int(good)
     return PatternCounts(
@@ -315,19 +316,34 @@ def levels_from_top(table: np.ndarray) -> np.ndarray:
 def all_windows_ok(rows: int, cols: int) -> tuple[np.ndarray, int]:
     """Return the map of counting windows of an image without missing pixels, and their number.
 
-    It must not be written to: the maps of small images are kept for the next patch.
+    It is read-only: the maps of small images are kept for the next patch.
     """
     make = _small_windows_ok if rows * cols <= _SMALL_PIXELS else _windows_ok
     return make(rows, cols), (rows - 1) * (cols - 1)
 
 
+def windows_of(valid: np.ndarray) -> tuple[np.ndarray, int]:
+    """Return the map of windows with four valid pixels (read-only) and their number."""
+    ok = np.empty((valid.shape[0] + 1, valid.shape[1] + 1), dtype=np.uint8)
+    number = _kernels.windows_ok(valid, ok)
+    return _checks.read_only(ok), int(number)
+
+
 def _windows_ok(rows: int, cols: int) -> np.ndarray:
     ok = np.zeros((rows + 1, cols + 1), dtype=np.uint8)
     ok[1:rows, 1:cols] = 1
-    return ok
+    return _checks.read_only(ok)
 
 
 _small_windows_ok = lru_cache(maxsize=64)(_windows_ok)
+
+
+def _show_exactly(levels: np.ndarray, others: np.ndarray) -> str:
+    """Show levels shortly, and the first one that differs from another's with all its digits."""
+    pairs = zip(levels.tolist(), others.tolist(), strict=False)
+    different = next((k for k, (mine, theirs) in enumerate(pairs) if mine != theirs), None)
+    detail = "" if different is None else f", levels[{different}] = {levels.tolist()[different]!r}"
+    return f"{_checks.show(levels)}{detail}"
 
 
 def compiled_dtype(values: np.ndarray) -> np.dtype:
@@ -360,10 +376,8 @@ def _up_to_float(dtype: np.dtype, levels: np.ndarray) -> np.ndarray:
     """Return the smallest value of a floating-point type that is >= each level."""
     if levels.dtype.kind != "f":
         exact = levels.astype(np.float64)
-        rounded = [int(e) != int(u) for e, u in zip(exact.flat, levels.flat, strict=True)]
-        if not any(rounded):
+        if np.abs(exact).max() <= 2.0**53:
             return _up_to_float(dtype, exact)
-        # only a 64-bit integer beyond 2**53 comes here
         too_low = np.reshape(
             [int(e) < int(u) for e, u in zip(exact.flat, levels.flat, strict=True)], levels.shape
         )
@@ -374,6 +388,28 @@ def _up_to_float(dtype: np.dtype, levels: np.ndarray) -> np.ndarray:
         nearest = levels.astype(dtype)
     too_low = nearest.astype(np.float64) < levels
     return np.where(too_low, np.nextafter(nearest, dtype.type(np.inf)), nearest)
+
+
+def classes_of(table: np.ndarray, windows: Any) -> dict[str, np.ndarray]:
+    """Return the window classes of tables (..., 8, T); see `PatternCounts.classes`."""
+    row = {name: table[..., k, :] for k, name in enumerate(STATISTICS)}
+    full, touched = row["smallest"], row["largest"]
+    mixed = touched - full  # q1 + q2 + qd + q3
+    twice = crossings_of(table)
+    edges = (twice["horizontal"] + twice["vertical"]) // 2  # q1 + q2 + q3 + 2 qd
+    diagonals = (twice["falling"] + twice["rising"]) // 2  # q1 + 2 q2 + q3
+    qd = edges - mixed
+    q2 = diagonals + edges - 2 * mixed
+    single_or_triple = mixed - q2 - qd
+    q3 = (row["pixel"] - 4 * full - 2 * (q2 + qd) - single_or_triple) // 2
+    return {
+        "q0": windows - touched,
+        "q1": single_or_triple - q3,
+        "q2": q2,
+        "qd": qd,
+        "q3": q3,
+        "q4": full.copy(),
+    }
 
 
 def crossings_of(table: np.ndarray) -> dict[str, np.ndarray]:

@@ -7,9 +7,9 @@ import numpy as np
 
 from mfeat import _checks
 from mfeat.counts import EDGES, PatternCounts, count_image
-from mfeat.fields import FAMILIES, SCALE_UNITS, Field, derive, scales
+from mfeat.fields import FAMILIES, SCALE_UNITS, Field, derive
 from mfeat.functionals import CONNECTIVITIES, CONTOUR_ESTIMATORS, area, contour, euler
-from mfeat.levels import RULES, level_values, place
+from mfeat.levels import RULES, level_values, place_levels
 
 
 @dataclass(frozen=True, eq=False)
@@ -155,36 +155,35 @@ def minkowski_curves(
     _checks.choice("contour_estimator", contour_estimator, CONTOUR_ESTIMATORS)
     _checks.choice("scale_unit", scale_unit, SCALE_UNITS)
     chosen = _field(field, scale)
+    for name, text in (("unit", unit), ("value_unit", value_unit)):
+        if not isinstance(text, str):
+            raise TypeError(f"{name} must be a string; got {text!r}")
     image = _checks.image(image)
-    valid = _checks.valid_pixels(image, mask)
+    valid = _checks.valid_pixels(image, _checks.valid_mask(mask, image.shape))
     if valid is not None and not valid.any():
         raise ValueError("image has no valid pixel: all are NaN or masked")
+    values = _checks.compiled_type(np.asarray(image))
+    _checks.representable(values, valid, "image")
 
-    stack = _checks.compiled_type(np.asarray(image))[None]
     stack_valid = None if valid is None else valid[None]
-    [(_, relief)] = derive((chosen,), stack, stack_valid, pitch, scale_unit)
-    placed = place(relief, level_rule, values_of_rule)
+    [(_, fields)] = derive((chosen,), values[None], stack_valid, pitch, scale_unit)
+    placed = place_levels(fields, level_rule, values_of_rule)
     counts = count_image(
-        relief.values[0],
-        None if stack_valid is None else relief.valid[0],
-        placed.shown[0],
+        fields.values[0],
+        None if stack_valid is None else fields.valid[0].astype(bool),
+        placed.shown[0].astype(np.float64),
         placed.thresholds[0],
         placed.reach[0],
         pitch=pitch,
         edges=edges,
     )
-    if not np.isfinite(placed.shown).all():
-        raise ValueError(
-            f"field {chosen.name} overflows float64: the pixels reach from "
-            f"{np.nanmin(stack):.3g} to {np.nanmax(stack):.3g}. Set no-data values to NaN"
-        )
     if counts.windows == 0:
         raise ValueError(
             f"field {chosen.name} has no 2x2 window of four valid pixels among its "
             f"{counts.possible_windows}; the image has too few valid pixels"
         )
     return Curves(
-        levels=placed.shown[0].astype(np.float64),
+        levels=counts.levels,
         area=area(counts),
         contour=contour(counts, estimator=contour_estimator),
         euler=euler(counts, connectivity=connectivity),
@@ -201,7 +200,9 @@ def _field(family: str, scale: float) -> Field:
         if _checks.real("scale", scale) != 0.0:
             raise ValueError(f'scale must be 0 for field "raw"; got {scale!r}. Use field="smooth"')
         return Field("raw")
-    [number] = scales("scale", (scale,), zero=family in ("slope", "curvature"))
+    number = _checks.real("scale", scale, minimum=0.0) + 0.0
+    if number == 0.0 and family in ("smooth", "band"):
+        raise ValueError(f'scale must be > 0 for field "{family}"; got {scale!r}')
     return Field(family, number)
 
 

@@ -1,6 +1,10 @@
 """The demonstration data set: simulated height maps of powder-coated panels, as files."""
 
 import csv
+import itertools
+import os
+import shutil
+import tempfile
 from pathlib import Path
 from typing import Any
 
@@ -22,13 +26,14 @@ def write_demo(
     Parameters
     ----------
     folder : path-like
-        Made if it does not exist; refused if it holds anything, so that nothing is overwritten.
+        Made if it does not exist; refused if it holds anything, so that nothing is overwritten. It
+        appears when it is complete; an interrupted run leaves nothing.
     panels : int, default 4
-        Panels of each condition.
+        Panels of each condition, up to 10,000.
     side : int, default 512
-        Side of a panel in pixels, >= 16.
+        Side of a panel in pixels, 16 to 16,384.
     pitch : float, default 10.0
-        Pixel pitch in micrometres.
+        Pixel pitch in micrometres, 0.01 to 10,000.
     seed : int, default 0
         Seed of the first panel of each condition; the others count on from it.
 
@@ -43,6 +48,8 @@ def write_demo(
     ------
     FileExistsError
         If the folder is not empty.
+    OSError
+        If it cannot be written.
     ValueError, TypeError
         For sizes that make no panel.
 
@@ -56,20 +63,37 @@ def write_demo(
     ...     print(manifest.read_text().splitlines()[1])
     heights/sound_0000.tif,sound,sound_0000,truth/sound_0000.tif,10.0,10.0,um
     """
-    panels = _checks.integer("panels", panels, minimum=1)
-    seed = _checks.integer("seed", seed, minimum=0)
-    side = _checks.integer("side", side, minimum=16)
-    pitch = _checks.real("pitch", pitch, above=0.0)
+    panels = _checks.integer("panels", panels, minimum=1, maximum=10_000)
+    seed = _checks.integer("seed", seed, minimum=0, maximum=2**63)
+    side = _checks.integer("side", side, minimum=16, maximum=16_384)
+    pitch = _checks.real("pitch", pitch, minimum=0.01, maximum=1e4)
+    if not isinstance(folder, str | os.PathLike) or not str(folder):
+        raise TypeError(f"folder must be a path; got {folder!r}")
     folder = Path(folder)
     if folder.exists() and (not folder.is_dir() or any(folder.iterdir())):
         raise FileExistsError(
             f"{folder} exists and is not an empty folder; name a new one, or empty it first"
         )
+    folder.absolute().parent.mkdir(parents=True, exist_ok=True)
+    # Written beside the folder and renamed at the end, so nothing half done bears its name.
+    unfinished = Path(tempfile.mkdtemp(prefix=f".{folder.name}-", dir=folder.absolute().parent))
+    try:
+        _write_files(unfinished, panels, side, pitch, seed)
+        unfinished.chmod(0o755)
+        unfinished.replace(folder)
+    except BaseException:
+        shutil.rmtree(unfinished, ignore_errors=True)
+        raise
+    return folder / "manifest.csv"
+
+
+def _write_files(folder: Path, panels: int, side: int, pitch: float, seed: int) -> None:
     for name in ("heights", "truth"):
-        (folder / name).mkdir(parents=True)
+        (folder / name).mkdir()
     rows = []
-    wanted = [(c, seed + k) for c in PANEL_CONDITIONS for k in range(panels)]
-    for condition, number in tqdm(wanted, "panels", disable=None):
+    wanted = itertools.product(PANEL_CONDITIONS, range(seed, seed + panels))
+    total = panels * len(PANEL_CONDITIONS)
+    for condition, number in tqdm(wanted, "panels", total, disable=None):
         panel = simulate_panel(condition, number, (side, side), pitch)
         name = f"{condition}_{number:04d}"
         tifffile.imwrite(folder / "heights" / f"{name}.tif", panel.height)
@@ -77,9 +101,7 @@ def write_demo(
         rows.append(
             (f"heights/{name}.tif", condition, name, f"truth/{name}.tif", pitch, pitch, "um")
         )
-    manifest = folder / "manifest.csv"
-    with manifest.open("w", newline="", encoding="utf-8") as stream:
+    with (folder / "manifest.csv").open("w", newline="", encoding="utf-8") as stream:
         writer = csv.writer(stream, lineterminator="\n")
         writer.writerow(MANIFEST_COLUMNS)
         writer.writerows(rows)
-    return manifest

@@ -17,7 +17,7 @@ from typing import Any, NamedTuple
 import numpy as np
 
 from mfeat import _checks, _field_kernels, _kernels
-from mfeat.levels import Relief
+from mfeat.levels import FieldStack
 
 FAMILIES = ("raw", "smooth", "band", "slope", "curvature")
 SCALE_UNITS = ("pitch", "length")
@@ -34,11 +34,14 @@ TRUNCATE = 4.0
 SMALLEST_SIGMA = 0.25
 
 #: Rounding error of derived fields, as a share of the image's half range: some hundred operations
-#: of 2**-53 each, with a wide margin.
+#: of 2**-53 each, with a wide margin. (Images far from zero bring the rounding of their pixels.)
 ROUNDING = 1e-12
 
 #: By how much a field is smaller than its image, and in which power the pitch divides it.
 _SHRINK = {"raw": 0, "smooth": 0, "band": 0, "slope": 1, "curvature": 2}
+
+#: By how much a field's stencil can multiply an error of the pixels: the sum of its weights' sizes.
+_GAIN = {"raw": 1.0, "smooth": 1.0, "band": 2.0, "slope": 2.0, "curvature": 4.0}
 
 
 class Field(NamedTuple):
@@ -67,14 +70,15 @@ def _field_name(family: str, scale: float) -> str:
 def scales(name: str, value: Any, *, zero: bool) -> tuple[float, ...]:
     """Check the scales of one family: a tuple or list of distinct numbers, in the given order."""
     if isinstance(value, str) or not isinstance(value, tuple | list | np.ndarray):
+        number = isinstance(value, int | float | np.number)
+        hint = f". For one scale write {name}=({value!r},)" if number else ""
         raise TypeError(
-            f"{name} must be a tuple of Gaussian scales, () for none; got {value!r}. "
-            f"For one scale write {name}=({value!r},)"
+            f"{name} must be a tuple of Gaussian scales, () for none; got {value!r}{hint}"
         )
     checked = []
     for position, scale in enumerate(value):
         place = f"{name}[{position}]"
-        number = _checks.real(place, scale, minimum=0.0)
+        number = _checks.real(place, scale, minimum=0.0) + 0.0  # -0.0 is 0.0 in names, too
         if number == 0.0 and not zero:
             raise ValueError(f"{place} must be > 0; got {scale!r}")
         if number in checked:
@@ -160,10 +164,10 @@ def gaussian_weights(sigma: float) -> np.ndarray:
     (5, 1.0)
     """
     if sigma == 0.0:
-        return np.ones(1)
+        return _checks.read_only(np.ones(1))
     distance = np.arange(int(TRUNCATE * sigma + 0.5) + 1)
     weights = np.exp(-0.5 * (distance / sigma) ** 2)
-    return weights / (weights[0] + 2.0 * weights[1:].sum())
+    return _checks.read_only(weights / (weights[0] + 2.0 * weights[1:].sum()))
 
 
 def derive(
@@ -172,7 +176,7 @@ def derive(
     valid: np.ndarray | None,
     pitch: tuple[float, float],
     scale_unit: str,
-) -> Iterator[tuple[Field, Relief]]:
+) -> Iterator[tuple[Field, FieldStack]]:
     """Yield each field of a stack of images, in the order of `fields`.
 
     Parameters
@@ -203,18 +207,19 @@ def derive(
     # Half of each before they are added: the sum of two large values would overflow.
     offset = low.astype(np.float64) / 2 + high.astype(np.float64) / 2
     half_range = high.astype(np.float64) / 2 - low.astype(np.float64) / 2
+    error = np.maximum(ROUNDING * half_range, 2.0**-52 * (np.abs(offset) + half_range))
+    nothing = np.zeros(len(values))
     source = _Smoothings(values, valid, missing, offset, pitch, scale_unit)
     for field in fields:
         order = _SHRINK[field.family]
-        rounding = ROUNDING * half_range / min(pitch) ** order
-        nothing = np.zeros(len(values))
+        rounding = _GAIN[field.family] * error / min(pitch) ** order
         if field.family == "raw":
-            yield field, Relief(values, valid, offset, rounding, source.centred, low == high)
+            yield field, FieldStack(values, valid, offset, rounding, source.centred, low == high)
         elif field.family == "band":
             band = source.at(field.scale) - source.at(BAND_RATIO * field.scale)
-            yield field, Relief(band, valid, nothing, rounding)
+            yield field, FieldStack(band, valid, nothing, rounding)
         elif field.family == "smooth":
-            yield field, Relief(source.at(field.scale), valid, offset, rounding)
+            yield field, FieldStack(source.at(field.scale), valid, offset, rounding)
         else:
             smaller = (len(values), shape[0] - order, shape[1] - order)
             derived, defined = np.empty(smaller), np.empty(smaller, dtype=np.uint8)
@@ -224,7 +229,7 @@ def derive(
                 else _field_kernels.curvature_stack
             )
             by_kernel(source.at(field.scale), valid, pitch[0], pitch[1], derived, defined)
-            yield field, Relief(derived, defined, nothing, rounding)
+            yield field, FieldStack(derived, defined, nothing, rounding)
 
 
 class _Smoothings:

@@ -1,4 +1,4 @@
-"""Level rules: where the levels of a field lie, and what happens on fields without relief.
+"""Level rules: where the levels of a field lie, and what happens on fields without stack.
 
 "standard": mean + v * standard deviation of the field; "rank": order statistics of the field;
 "fixed": data units; "fitted": quantiles learned over a training set. The first two follow each
@@ -26,14 +26,15 @@ RULES = ("standard", "rank", "fixed", "fitted")
 #: Range of the levels where none is given, in the rule's own units.
 DEFAULT_RANGES = {"standard": (-2.5, 2.5), "rank": (0.0, 1.0), "fitted": (0.0, 1.0)}
 
-#: Levels of rule "standard", and of rule "rank" on derived fields, lie this many standard
-#: deviations below their nominal place, so that pixels tied with a level fall on the same side of
-#: it under every gain and offset of the image.
+#: Levels lie this many standard deviations (or the rounding error of the field, if that is more)
+#: below their nominal place, so that pixels tied with a level fall on the same side of it whatever
+#: the rounding. Levels of rules "rank", "fixed" and "fitted" on raw fields stay where they are:
+#: pixels there are compared exactly.
 TIE = 1e-9
 
 
 @dataclass
-class Relief:
+class FieldStack:
     """What the level rules need to know of a stack of fields (n, h, w).
 
     Attributes
@@ -87,7 +88,7 @@ class Relief:
 
     @cached_property
     def flat(self) -> np.ndarray:
-        """Which fields have no relief."""
+        """Which fields have no stack."""
         even = self._raw_moments[1] <= self.rounding if self.constant is None else self.constant
         return even & ~self.empty if even.any() else even
 
@@ -112,19 +113,12 @@ class PlacedLevels:
     """Levels of each field of a stack, ready for counting.
 
     `thresholds` (n, T) are in the type of the pixels; of row k the first `reach[k]` are used, the
-    others lie above every possible pixel. `own` (n, T) are the levels in the units of the relief's
-    values, without `offset` (n,).
+    others lie above every possible pixel. `shown` (n, T) are the levels in data units.
     """
 
     thresholds: np.ndarray
     reach: np.ndarray
-    own: np.ndarray
-    offset: np.ndarray
-
-    @property
-    def shown(self) -> np.ndarray:
-        """The levels in data units, float64."""
-        return self.own + self.offset[:, None]
+    shown: np.ndarray
 
 
 def level_values(levels: Any, rule: str, level_range: Any = None) -> np.ndarray:
@@ -157,14 +151,20 @@ def level_values(levels: Any, rule: str, level_range: Any = None) -> np.ndarray:
         count = _checks.integer("levels", levels, minimum=1, maximum=_checks.MAX_LEVELS)
         low, high = _level_range(level_range, rule)
         if rule in ("rank", "fitted"):
-            return low + (high - low) * (np.arange(count) + 0.5) / count
-        return np.linspace(low, high, count) if count > 1 else np.array([(low + high) / 2])
+            spread = low + (high - low) * (np.arange(count) + 0.5) / count
+        else:
+            spread = np.linspace(low, high, count) if count > 1 else np.array([(low + high) / 2])
+        if (np.diff(spread) <= 0.0).any():
+            raise ValueError(
+                f"level_range ({low!r}, {high!r}) is too narrow for {count} distinct levels"
+            )
+        return spread
+    given = _checks.level_sequence(levels)
     if level_range is not None:
         raise ValueError(
             f"level_range={level_range!r} has no meaning beside explicit levels "
-            f"{_checks.show(np.asarray(levels))}; give one of the two"
+            f"{_checks.show(given)}; give one of the two"
         )
-    given = _checks.level_sequence(levels)
     values = given.astype(np.float64)
     rounded = [int(v) != int(g) for v, g in zip(values, given, strict=True)]
     if given.dtype.kind != "f" and any(rounded):
@@ -190,8 +190,8 @@ def _level_range(level_range: Any, rule: str) -> tuple[float, float]:
         return DEFAULT_RANGES[rule]
     if not isinstance(level_range, tuple | list | np.ndarray) or len(level_range) != 2:
         raise ValueError(f"level_range must be two numbers (lowest, highest); got {level_range!r}")
-    low = _checks.real("level_range[0]", level_range[0])
-    high = _checks.real("level_range[1]", level_range[1])
+    low = _checks.real("level_range[0]", level_range[0], minimum=-1e100, maximum=1e100)
+    high = _checks.real("level_range[1]", level_range[1], minimum=-1e100, maximum=1e100)
     if not low < high:
         raise ValueError(f"level_range must ascend; got ({low}, {high})")
     if rule in ("rank", "fitted") and not 0.0 <= low < high <= 1.0:
@@ -201,80 +201,86 @@ def _level_range(level_range: Any, rule: str) -> tuple[float, float]:
     return low, high
 
 
-def place(relief: Relief, rule: str, values: np.ndarray) -> PlacedLevels:
+def place_levels(stack: FieldStack, rule: str, values: np.ndarray) -> PlacedLevels:
     """Place levels, given in the units of `rule`, on each field of a stack.
 
     For rule "fitted", `values` are the learned levels in data units, as for "fixed".
     """
-    derived = relief.derived
-    offset = relief.offset if derived else np.zeros(len(relief.offset))
+    derived = stack.derived
     if rule == "standard":
-        # The pixels of a raw field keep their offset and their type, and so do its levels.
-        middle = relief.mean if derived else relief.offset + relief.mean
-        own = middle[:, None] + (values - TIE) * relief.deviation[:, None]
+        own = stack.mean[:, None] + values * stack.deviation[:, None]
     elif rule == "rank":
-        own = _order_statistics(relief, values)
-        if derived:  # rounding has blurred the ties of such a field
-            own = own - TIE * relief.deviation[:, None]
+        own = _ranked(stack, values)
     else:
-        own = values - offset[:, None]
-    thresholds, reach = thresholds_for(relief.values.dtype, own)
-    if relief.flat.any():
-        thresholds, own = np.array(thresholds), own.astype(np.float64)
-        for k in np.flatnonzero(relief.flat):
-            reach[k] = _reached_by_flat(relief, k, rule, values)
-            thresholds[k] = relief.values[k][relief.valid[k] == 1].min()
+        own = values - stack.offset[:, None] if derived else np.tile(values, (len(stack.offset), 1))
+    if derived or rule == "standard":
+        own = own - np.maximum(TIE * stack.deviation, stack.rounding)[:, None]
+    if not derived and rule == "standard":
+        own = own + stack.offset[:, None]  # the pixels kept their offset and their type
+    if rule in ("fixed", "fitted"):
+        shown = np.broadcast_to(values, own.shape)
+    else:
+        shown = own + stack.offset[:, None] if derived else own
+    thresholds, reach = thresholds_for(stack.values.dtype, own)
+    if stack.flat.any() and (derived or rule in ("standard", "rank")):
+        thresholds, shown = np.array(thresholds), np.array(shown, dtype=np.float64)
+        for k in np.flatnonzero(stack.flat):
+            reach[k] = _reached_by_flat(stack, k, rule, values)
+            thresholds[k] = stack.values[k][stack.valid[k] == 1].min()
             if rule in ("standard", "rank"):
-                level = relief.mean[k] + (0.0 if derived else relief.offset[k])
-                own[k, : reach[k]] = level
-                own[k, reach[k] :] = np.nextafter(level, np.inf)
-    return PlacedLevels(thresholds, reach, own, offset)
+                level = stack.offset[k] + stack.mean[k]
+                shown[k, : reach[k]] = level
+                shown[k, reach[k] :] = np.nextafter(level, np.inf)
+    return PlacedLevels(thresholds, reach, shown)
 
 
-def _reached_by_flat(relief: Relief, k: int, rule: str, values: np.ndarray) -> int:
+def _reached_by_flat(stack: FieldStack, k: int, rule: str, values: np.ndarray) -> int:
     """Return how many levels a flat field reaches, all its pixels being its mean."""
     if rule == "rank":
         return len(values)
     if rule == "standard":
         return int(np.count_nonzero(values <= 0.0))
-    level = relief.offset[k] + relief.mean[k] + relief.rounding[k]
+    level = stack.offset[k] + stack.mean[k] + stack.rounding[k]
     return int(np.count_nonzero(values <= level))
 
 
-def _order_statistics(relief: Relief, fractions: np.ndarray) -> np.ndarray:
-    """Return pixel values of given rank: exact, so monotone tone changes leave the counts alone.
-
-    Of n sorted valid values the one at position floor(p n) is the level of fraction p, so that a
-    fraction 1 - p of the pixels reaches it where no values are tied.
-    """
-    count = len(relief.values)
-    out = np.empty((count, len(fractions)), dtype=relief.values.dtype)
-    for k in range(count):
-        ranked = np.sort(relief.values[k][relief.valid[k] == 1])
-        if not ranked.size:  # an image without a valid pixel is marked by its caller
-            out[k] = 0
-            continue
-        positions = np.minimum((fractions * ranked.size).astype(np.int64), ranked.size - 1)
-        out[k] = ranked[positions]
+def _ranked(stack: FieldStack, fractions: np.ndarray) -> np.ndarray:
+    """Return order statistics of each field; being pixel values, they follow any tone change."""
+    out = np.zeros((len(stack.values), len(fractions)), dtype=stack.values.dtype)
+    for k in range(len(stack.values)):
+        inside = stack.values[k][stack.valid[k] == 1]
+        if inside.size:  # an image without a valid pixel is marked by its caller
+            out[k] = order_statistics(np.sort(inside), fractions)
     return out
 
 
-def pooled_quantiles(samples: list[np.ndarray], fractions: np.ndarray) -> np.ndarray:
-    """Return quantiles of pooled samples, for rule "fitted".
+def order_statistics(ranked: np.ndarray, fractions: np.ndarray) -> np.ndarray:
+    """Return from n sorted values those at positions floor(p n), by fraction p.
 
-    Source: definition 1 (the inverse of the empirical distribution) of R. J. Hyndman and Y. Fan,
-    Sample quantiles in statistical packages, The American Statistician 50 (1996), 361-365.
+    So a fraction 1 - p of the values reaches the level of p where no values are tied. The tiny
+    addition keeps p n from falling below the whole number that it means.
+
+    Examples
+    --------
+    >>> import numpy as np
+    >>> from mfeat.levels import order_statistics
+    >>> order_statistics(np.arange(100), np.array([0.0, 0.29, 0.5, 1.0]))
+    array([ 0, 29, 50, 99])
     """
-    return np.quantile(np.concatenate(samples), fractions, method="inverted_cdf")
+    positions = np.floor(fractions * len(ranked) + 1e-9).astype(np.int64)
+    return ranked[np.minimum(positions, len(ranked) - 1)]
 
 
-def sample_of(relief: Relief, k: int, size: int) -> np.ndarray:
-    """Return up to `size` evenly spaced order statistics of field k, with its offset, as float64.
+def pooled_levels(samples: list[np.ndarray], fractions: np.ndarray) -> np.ndarray:
+    """Return the levels of rule "fitted": order statistics of pooled samples."""
+    return order_statistics(np.sort(np.concatenate(samples)), fractions)
 
-    They stand for the field in the pool of `pooled_quantiles`: patches weigh alike however many
+
+def sample_of(stack: FieldStack, k: int, size: int) -> np.ndarray:
+    """Return `size` evenly spaced order statistics of field k, with its offset, as float64.
+
+    They stand for the field in the pool of `pooled_levels`: patches weigh alike however many
     pixels they have, and the memory of `fit` does not grow with the size of the patches.
     """
-    ranked = np.sort(relief.centred[k][relief.valid[k] == 1]) + relief.offset[k]
-    if len(ranked) <= size:
-        return ranked
+    ranked = np.sort(stack.centred[k][stack.valid[k] == 1]) + stack.offset[k]
     return ranked[((np.arange(size) + 0.5) * len(ranked) / size).astype(np.int64)]

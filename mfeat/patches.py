@@ -1,7 +1,7 @@
 """Cutting images into patches without copying, with positions and labels."""
 
-from collections.abc import Sequence
-from dataclasses import dataclass
+from collections.abc import Iterator
+from dataclasses import dataclass, replace
 from typing import Any, NamedTuple
 
 import numpy as np
@@ -26,10 +26,11 @@ class PatchLabels(NamedTuple):
 
 
 @dataclass(frozen=True, eq=False)
-class Patches(Sequence):
-    """Patches of one image: a sequence of 2-D views, ready for `MinkowskiCurves`.
+class Patches:
+    """Patches of one image: 2-D views by number, ready for `MinkowskiCurves`.
 
     Returned by `PatchGrid.cut`. Nothing is copied, so a change of the image shows in its patches.
+    `patches[k]` is one patch, `patches[a:b]` are some of them, and `for` goes through them all.
 
     Attributes
     ----------
@@ -59,9 +60,17 @@ class Patches(Sequence):
 
     def __getitem__(self, k: Any) -> Any:
         if isinstance(k, slice):
-            return [self[i] for i in range(*k.indices(len(self)))]
+            part = {name: getattr(self, name)[k] for name in ("positions", "valid_fractions")}
+            return replace(self, **part)
+        if isinstance(k, bool | np.bool_) or not isinstance(k, int | np.integer):
+            raise TypeError(f"patches take an integer or a slice in brackets; got {k!r}")
+        if not -len(self) <= k < len(self):
+            raise IndexError(f"patch {k} does not exist; there are {len(self)}")
         row, col = self.positions[k]
         return self.image[row : row + self.size[0], col : col + self.size[1]]
+
+    def __iter__(self) -> Iterator[np.ndarray]:
+        return (self[k] for k in range(len(self)))
 
     def __repr__(self) -> str:
         return (
@@ -101,11 +110,7 @@ class Patches(Sequence):
         PatchLabels(labels=array([0, 3]), fractions=array([1.    , 0.0625]))
         """
         _checks.choice("rule", rule, LABEL_RULES)
-        if not isinstance(background, bool | np.bool_ | int | np.integer):
-            raise TypeError(f"background must be a bool or an integer; got {background!r}")
-        masked = isinstance(label_image, np.ma.MaskedArray)
-        known = ~np.ma.getmaskarray(label_image) if masked else None
-        label_image = np.asarray(label_image)
+        label_image = _checks.as_array(label_image, "label_image")
         if label_image.dtype.kind not in "biu":
             raise TypeError(
                 "label_image must hold bool or integers; got dtype "
@@ -115,25 +120,47 @@ class Patches(Sequence):
             raise ValueError(
                 f"label_image has shape {label_image.shape}, the image {self.image.shape}"
             )
-        labels = np.empty(len(self), dtype=label_image.dtype)
+        _check_background(background, label_image.dtype)
+        known = ~np.ma.getmaskarray(label_image) if np.ma.is_masked(label_image) else None
+        valid = _checks.valid_pixels(self.image, known)
+        found, codes = np.unique(np.asarray(label_image), return_inverse=True)
+        codes = codes.reshape(label_image.shape)
+        if valid is not None:
+            codes[valid == 0] = len(found)  # counted apart, and dropped
+        return self._most_frequent(found, codes, rule, background)
+
+    def _most_frequent(
+        self, found: np.ndarray, codes: np.ndarray, rule: str, background: Any
+    ) -> PatchLabels:
+        """Return each patch's label from an image of positions in `found`, the sorted labels."""
+        labels = np.empty(len(self), dtype=found.dtype)
         fractions = np.empty(len(self))
         for k, (row, col) in enumerate(self.positions):
-            place = np.s_[row : row + self.size[0], col : col + self.size[1]]
-            valid = _checks.valid_pixels(self.image[place], known[place] if masked else None)
-            inside = label_image[place]
-            inside = inside.ravel() if valid is None else inside[valid == 1]
-            found, number = np.unique(inside, return_counts=True)
-            if rule == "any" and (found != background).any():
-                number = np.where(found == background, 0, number)
-            if len(found) == 0:
+            inside = codes[row : row + self.size[0], col : col + self.size[1]]
+            number = np.bincount(inside.ravel(), minlength=len(found) + 1)[: len(found)]
+            total = number.sum()
+            if total == 0:
                 raise ValueError(
                     f"the patch at row {row}, column {col} has no valid pixel with a label; cut "
                     "with min_valid > 0, or label more pixels"
                 )
-            best = int(np.argmax(number))
+            asked = number
+            if rule == "any" and number[found != background].any():
+                asked = np.where(found == background, 0, number)
+            best = int(np.argmax(asked))
             labels[k] = found[best]
-            fractions[k] = number[best] / len(inside)
+            fractions[k] = number[best] / total
         return PatchLabels(labels, fractions)
+
+
+def _check_background(background: Any, dtype: np.dtype) -> None:
+    if not isinstance(background, bool | np.bool_ | int | np.integer):
+        raise TypeError(f"background must be a bool or an integer; got {background!r}")
+    low, high = (0, 1) if dtype.kind == "b" else (np.iinfo(dtype).min, np.iinfo(dtype).max)
+    if not low <= background <= high:
+        raise ValueError(
+            f"background must be a label that {dtype} can hold, {low} to {high}; got {background!r}"
+        )
 
 
 class PatchGrid:
@@ -193,6 +220,7 @@ class PatchGrid:
         >>> PatchGrid(size=4, stride=3).positions((4, 8)).tolist()
         [[0, 0], [0, 3]]
         """
+        shape = _pair("shape", shape, 1)
         if min(shape[0] - self.size[0], shape[1] - self.size[1]) < 0:
             raise ValueError(
                 f"an image of {shape[0]}x{shape[1]} pixels is smaller than a patch of "
@@ -235,7 +263,7 @@ class PatchGrid:
         """
         image = _checks.image(image)
         positions = self.positions(image.shape)
-        valid = _checks.valid_pixels(image, mask)
+        valid = _checks.valid_pixels(image, _checks.valid_mask(mask, image.shape))
         if mask is not None:
             image = np.ma.MaskedArray(image, mask=(valid == 0) if valid is not None else False)
         fractions = self._valid_fractions(valid, image.shape, positions)
@@ -282,7 +310,7 @@ class PatchGrid:
 
 
 def _pair(name: str, value: Any, minimum: int) -> tuple[int, int]:
-    if isinstance(value, tuple | list):
+    if isinstance(value, tuple | list | np.ndarray) and np.ndim(value) > 0:
         if len(value) != 2:
             raise ValueError(f"{name} must be one integer or (rows, columns); got {value!r}")
         return (

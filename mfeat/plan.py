@@ -62,7 +62,7 @@ class VectorPlan:
     """All settings of a vector, checked and resolved.
 
     `level_values` maps each field's name to its levels in rule units; after `fit`, for rule
-    "fitted", `learned` maps it to the levels in data units.
+    "fitted", `learned` maps it (with channels: "channel_field") to the levels in data units.
     """
 
     fields: tuple[Field, ...]
@@ -89,6 +89,17 @@ class VectorPlan:
         if not self.location_scale:
             return ()
         return ("mean", "std") if field.family in _LOCATED else ("std",)
+
+    def levels_of(self, field: Field, channel: str | None) -> np.ndarray:
+        """Return the levels to place on a field of a channel: learned ones where there are some."""
+        if self.learned is not None:
+            return self.learned[learned_key(field, channel)]
+        return self.level_values[field.name]
+
+    @cached_property
+    def table_size(self) -> int:
+        """How many counts are kept of one patch while its vector is computed."""
+        return sum(8 * (len(self.level_values[field.name]) + 1) for field in self.fields)
 
     @cached_property
     def length(self) -> int:
@@ -148,6 +159,11 @@ class VectorPlan:
         if self.learned is not None:
             found["learned_levels"] = {k: v.tolist() for k, v in self.learned.items()}
         return found
+
+
+def learned_key(field: Field, channel: str | None) -> str:
+    """Return the key of a field's learned levels."""
+    return field.name if channel is None else f"{channel}_{field.name}"
 
 
 def canonical_sha256(settings: dict[str, Any]) -> str:

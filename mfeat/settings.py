@@ -10,7 +10,7 @@ from mfeat import _checks
 from mfeat.fields import FAMILIES, Field, scales
 from mfeat.functionals import CONNECTIVITIES, FUNCTIONALS
 from mfeat.levels import level_values
-from mfeat.plan import VectorPlan
+from mfeat.plan import VectorPlan, learned_key
 
 # Plans by their parameters: checking and resolving them again for each patch of a stream would
 # cost more than the patch.
@@ -47,7 +47,7 @@ def with_learned(
 
     Fields may be left out after `fit`; levels, pitch and new fields need another `fit`.
     """
-    for name in ("pitch", "scale_unit"):
+    for name in ("pitch", "scale_unit", "channels"):
         if getattr(plan, name) != getattr(fitted, name):
             raise ValueError(
                 f"parameters were changed after fit: {name} was {getattr(fitted, name)!r} when the "
@@ -61,7 +61,19 @@ def with_learned(
                 f"parameters were changed after fit: field {name} has the levels "
                 f"{_checks.show(wanted)} now, and had {had} when they were learned; call fit again"
             )
-    return replace(plan, learned={name: learned[name] for name in plan.level_values})
+    wanted = {
+        learned_key(field, channel): len(plan.level_values[field.name])
+        for channel in plan.channels or (None,)
+        for field in plan.fields
+    }
+    for key, count in wanted.items():
+        values = np.asarray(learned.get(key, ()), dtype=np.float64)
+        if values.shape != (count,) or not (np.diff(values) >= 0).all() or np.isnan(values).any():
+            raise ValueError(
+                f"levels_[{key!r}] must hold {count} ascending numbers; got "
+                f"{learned.get(key)!r}. Do not change levels_; call fit again"
+            )
+    return replace(plan, learned={key: learned[key] for key in wanted})
 
 
 def _resolve(estimator: Any) -> VectorPlan:

@@ -14,6 +14,9 @@ from mfeat import _checks, _kernels
 #: Pixels of a stack; bounds the memory of a worker and is small enough for the processor's cache.
 STACK_PIXELS = 1 << 18
 
+#: Counts (of all statistics, levels and fields) of a stack; bounds memory where levels are many.
+STACK_COUNTS = 1 << 19
+
 
 @dataclass(frozen=True)
 class Collected:
@@ -58,30 +61,42 @@ class Group:
 
     def stacks(self) -> list[Stack]:
         """Return the images stacked: those without missing pixels, then those with some."""
-        valid = self._valid()
         values = _checks.compiled_type(np.stack([np.asarray(image) for image in self.images]))
-        complete = np.array([v is None for v in valid])
-        if complete.all():
+        valid = self._valid(values)
+        if values.dtype.itemsize == 8:
+            self._check_range(values, valid)
+        if valid is None:
             return [Stack(np.arange(len(values)), values, None)]
-        found = []
+        complete = valid.all(axis=(1, 2))
+        parts = []
         if complete.any():
-            found.append(Stack(np.flatnonzero(complete), _part(values, complete), None))
-        present = np.stack([v for v in valid if v is not None])
-        found.append(Stack(np.flatnonzero(~complete), _part(values, ~complete), present))
-        return found
+            parts.append(Stack(np.flatnonzero(complete), _part(values, complete), None))
+        if not complete.all():
+            some = ~complete
+            parts.append(Stack(np.flatnonzero(some), _part(values, some), valid[some]))
+        return parts
 
-    def _valid(self) -> list[np.ndarray | None]:
-        first = self.images[0]
+    def _check_range(self, values: np.ndarray, valid: np.ndarray | None) -> None:
+        if valid is None and values.dtype.kind == "f":  # a quick look at all, for the usual case
+            low, high = values.min(axis=(1, 2)), values.max(axis=(1, 2))
+            relief = high - low
+            if max(-low.min(), high.max()) <= 1e100 and (relief[relief > 0.0] >= 1e-100).all():
+                return
+        for place, image in enumerate(values):
+            one = None if valid is None else valid[place]
+            _checks.representable(image, one, self.name(place))
+
+    def _valid(self, values: np.ndarray) -> np.ndarray | None:
+        """Return the valid pixels of all images as uint8, or None where every pixel is valid."""
         masked = any(isinstance(image, np.ma.MaskedArray) for image in self.images)
-        whole = not masked and (
-            first.dtype.kind != "f" or all(np.isfinite(image).all() for image in self.images)
-        )
-        if whole:
-            return [None] * len(self.images)
-        return [
-            _checks.valid_pixels(image, None, self.name(place))
-            for place, image in enumerate(self.images)
-        ]
+        if not masked and (values.dtype.kind != "f" or np.isfinite(values).all()):
+            return None
+        valid = np.ones(values.shape, dtype=np.uint8)
+        for place, image in enumerate(self.images):
+            one = _checks.valid_pixels(image, None, self.name(place))
+            if one is not None:
+                valid[place] = one
+        return valid
 
 
 def _part(values: np.ndarray, chosen: np.ndarray) -> np.ndarray:
@@ -98,6 +113,8 @@ def collect(X: Any, channels: Any) -> Collected:
                 f"X is a sparse matrix ({type(X).__name__}); patches are dense arrays: give an "
                 "array of shape (n, h, w) or a list of 2-D arrays"
             )
+        if isinstance(X, dict):  # after sparse matrices, some of which are dicts
+            raise TypeError("X is a dict; give the images in a list, e.g. list(X.values())")
         if hasattr(X, "__array__"):
             return collect(np.asarray(X), channels)
         if isinstance(X, str | bytes) or not hasattr(X, "__len__"):
@@ -135,8 +152,6 @@ def collect(X: Any, channels: Any) -> Collected:
             f"channels={tuple(channels)!r} needs X of shape (n, h, w, {number}); got {X.shape}"
         )
     _checks.image(X[0] if X.ndim == 3 else X[0, :, :, 0], "X[0]")  # type and size of them all
-    if not X.dtype.isnative:
-        X = X.astype(X.dtype.newbyteorder("="))
     if X.ndim == 3:
         return Collected([[image] for image in X], None)
     return Collected([[image[:, :, c] for c in range(number)] for image in X], tuple(channels))
@@ -146,22 +161,13 @@ def _n_channels(channels: Any) -> int:
     return 1 if channels is None else len(channels)
 
 
-def _array(patch: Any, k: int) -> np.ndarray:
-    if isinstance(patch, np.ndarray):
-        return patch
-    try:
-        return np.asarray(patch)
-    except ValueError as error:
-        raise ValueError(f"X[{k}] must be an array; it is ragged: {error}") from None
-
-
 def _from_list(X: Any, channels: Any) -> Collected:
     if len(X) == 0:
         raise ValueError("X holds no patch: the list is empty, found 0 sample(s)")
     number = _n_channels(channels)
     images = []
     for k, patch in enumerate(X):
-        patch = _array(patch, k)
+        patch = _checks.as_array(patch, f"X[{k}]")
         if channels is None:
             if patch.ndim == 3:
                 raise ValueError(
@@ -179,8 +185,12 @@ def _from_list(X: Any, channels: Any) -> Collected:
     return Collected(images, None if channels is None else tuple(channels))
 
 
-def group_patches(patches: Collected) -> list[Group]:
-    """Sort patches into groups of at most `STACK_PIXELS` pixels (or one patch)."""
+def group_patches(patches: Collected, table_size: int) -> list[Group]:
+    """Sort patches into groups that are small enough to be computed at once.
+
+    A group has at most `STACK_PIXELS` pixels and, with `table_size` counts kept of each patch,
+    `STACK_COUNTS` counts; or it is a single patch.
+    """
     growing: dict[tuple, Group] = {}
     done: list[Group] = []
     for position, channels in enumerate(patches.images):
@@ -190,7 +200,8 @@ def group_patches(patches: Collected) -> list[Group]:
             entry = growing.setdefault(key, Group(channel, name, [], []))
             entry.positions.append(position)
             entry.images.append(image)
-            if (len(entry.images) + 1) * image.size > STACK_PIXELS:
+            more = len(entry.images) + 1
+            if more * image.size > STACK_PIXELS or more * table_size > STACK_COUNTS:
                 done.append(growing.pop(key))
     return done + list(growing.values())
 

@@ -150,9 +150,10 @@ def simulate_panel(
     shape : tuple of int, default (512, 512)
         Rows and columns, 16 or more each.
     pitch : float, default 10.0
-        Side of a square pixel in micrometres, above 0.
+        Side of a square pixel in micrometres, 0.01 to 10,000.
     severity : float, default 1.0
-        Factor on every defect's height or depth, above 0; a sound panel ignores it.
+        Factor on every defect's height or depth, above 0, up to 1000; a sound panel
+        ignores it.
     nuisance : bool, default True
         Add form (cylinder or saddle), tilt, white sensor noise (0.1-0.2 um) and lost
         pixels (about 0.5-2 % at severity 1, more of them on steep flanks). Texture,
@@ -186,8 +187,8 @@ def simulate_panel(
         raise ValueError(f"condition must be one of {PANEL_CONDITIONS}; got {condition!r}")
     seed = _checked_seed(seed)
     shape = _checked_shape(shape)
-    pitch = _checks.real("pitch", pitch, above=0.0)
-    severity = _checks.real("severity", severity, above=0.0)
+    pitch = _checks.real("pitch", pitch, minimum=0.01, maximum=1e4)
+    severity = _checks.real("severity", severity, above=0.0, maximum=1e3)
     if not isinstance(nuisance, bool | np.bool_):
         raise TypeError(f"nuisance must be True or False; got {nuisance!r}")
 
@@ -229,11 +230,11 @@ def gaussian_field(
     shape : tuple of int
         Rows and columns, 16 or more and at least 8 correlation lengths each.
     correlation_length : float
-        The l of the covariance, pixels, above 0.
+        The l of the covariance, pixels, 0.1 or above.
     seed : int
         0 or above.
     std : float, default 1.0
-        Standard deviation of the field, any unit, above 0.
+        Standard deviation of the field, any unit, 1e-100 to 1e100.
 
     Returns
     -------
@@ -253,9 +254,9 @@ def gaussian_field(
     ((64, 128), True)
     """
     shape = _checked_shape(shape)
-    length = _checks.real("correlation_length", correlation_length, above=0.0)
+    length = _checks.real("correlation_length", correlation_length, minimum=0.1)
     rng = Generator(PCG64(SeedSequence(_checked_seed(seed))))
-    std = _checks.real("std", std, above=0.0)
+    std = _checks.real("std", std, minimum=1e-100, maximum=1e100)
     if min(shape) < 8.0 * length:
         raise ValueError(
             f"shape must be at least 8 correlation lengths ({8.0 * length:g} pixels) on each "

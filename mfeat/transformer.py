@@ -1,5 +1,6 @@
 """`MinkowskiCurves`: image patches in, fixed-length vectors out, as a scikit-learn transformer."""
 
+from collections.abc import Callable, Iterator
 from numbers import Integral
 from typing import Any, ClassVar
 
@@ -12,13 +13,17 @@ from sklearn.utils._param_validation import Options, StrOptions
 from mfeat import stacks
 from mfeat.fields import SCALE_UNITS
 from mfeat.functionals import CONTOUR_ESTIMATORS, FUNCTIONALS
-from mfeat.levels import RULES, pooled_quantiles
-from mfeat.plan import Feature, VectorPlan, canonical_sha256
+from mfeat.levels import RULES, pooled_levels
+from mfeat.plan import Feature, VectorPlan, canonical_sha256, learned_key
 from mfeat.settings import resolve, with_learned
 from mfeat.vector import groups_of, rows_of, samples_of
 
-#: Total number of pixel values that `fit` keeps of each field to learn levels from.
-FIT_SAMPLE = 1 << 21
+#: Number of pixel values that `fit` keeps of each field to learn levels from, or 16 a patch if that
+#: is more.
+FIT_SAMPLE = 1 << 19
+
+# Groups handed to the workers at a time: their rows wait until all of them are done.
+_GROUPS_AT_ONCE = 64
 
 
 class MinkowskiCurves(TransformerMixin, BaseEstimator):
@@ -89,7 +94,8 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
     Attributes
     ----------
     levels_ : dict of str to ndarray
-        Learned levels of each field, in data units; only after `fit` with rule "fitted".
+        Learned levels in data units by field, e.g. "smooth_2", or with channels by channel and
+        field, e.g. "red_smooth_2"; only after `fit` with rule "fitted".
 
     Notes
     -----
@@ -101,7 +107,8 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
 
     Memory beyond X and the result: about 25 MB a worker for the usual settings (patches are taken
     in groups of some 260,000 pixels), or some 80 bytes a pixel of the largest patch if that is
-    more; and some 300 bytes a patch.
+    more; and some 300 bytes a patch. `fit` with rule "fitted" keeps half a million values of each
+    field, or 16 a patch if that is more.
 
     Examples
     --------
@@ -185,7 +192,10 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
         self.n_jobs = n_jobs
 
     def fit(self, X: Any, y: Any = None) -> "MinkowskiCurves":
-        """Check the parameters and the patches; learn levels if the rule is "fitted".
+        """Check the parameters and the shapes of the patches; learn levels if the rule is "fitted".
+
+        Levels are learned from patches that `transform` would accept; what becomes of others is
+        decided by `below_min_valid`, as there.
 
         Parameters
         ----------
@@ -203,7 +213,7 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
         self.__dict__.pop("levels_", None)
         self.__dict__.pop("_fitted_plan", None)
         if plan.level_rule == "fitted":
-            self.levels_ = self._learn(plan, groups, len(patches) * patches.n_channels)
+            self.levels_ = self._learn(plan, groups, len(patches))
             self._fitted_plan = plan
         return self
 
@@ -232,17 +242,14 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
         span = plan.length
         out = np.full((len(patches), span * patches.n_channels), np.nan, dtype=self.dtype)
         groups = groups_of(plan, patches)
-        done = self._parallel(rows_of, plan, groups, float(self.min_valid))
         refused = []
+        done = self._parallel(rows_of, plan, groups, float(self.min_valid))
         for group, (rows, reasons) in zip(groups, done, strict=True):
             start = group.channel * span
             out[group.positions, start : start + span] = rows
-            refused.extend(
-                (group.positions[place], group.channel, f"{group.name(place)}: {reason}")
-                for place, reason in enumerate(reasons)
-                if reason
-            )
-        self._settle(refused, out)
+            refused.extend(_told(group, reasons))
+        self._complain(refused, len(patches))
+        out[[position for position, _, _ in refused]] = np.nan
         return out
 
     def get_feature_names_out(self, input_features: Any = None) -> np.ndarray:
@@ -312,43 +319,57 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
             )
         return with_learned(plan, self._fitted_plan, self.levels_)
 
-    def _parallel(self, work, plan: VectorPlan, groups: list, option: Any) -> list:
+    def _parallel(
+        self, work: Callable, plan: VectorPlan, groups: list[stacks.Group], option: Any
+    ) -> Iterator:
+        """Yield the work of each group, in their order, without keeping what was yielded."""
         if len(groups) == 1:  # no scheduling for a single patch in a stream
-            return [work(plan, groups[0], option)]
-        return Parallel(n_jobs=self.n_jobs, prefer="threads")(
-            delayed(work)(plan, group, option) for group in groups
-        )
+            yield work(plan, groups[0], option)
+            return
+        jobs = self.n_jobs if self.n_jobs is None else min(int(self.n_jobs), len(groups))
+        parallel = Parallel(n_jobs=jobs, prefer="threads")
+        for start in range(0, len(groups), _GROUPS_AT_ONCE):
+            some = groups[start : start + _GROUPS_AT_ONCE]
+            yield from parallel(delayed(work)(plan, group, option) for group in some)
 
     def _learn(
-        self, plan: VectorPlan, groups: list[stacks.Group], n_images: int
+        self, plan: VectorPlan, groups: list[stacks.Group], n_patches: int
     ) -> dict[str, np.ndarray]:
-        """Learn levels as quantiles of each field over all patches of all channels."""
-        size = max(16, FIT_SAMPLE // n_images)
-        found = self._parallel(samples_of, plan, groups, size)
+        """Learn levels as order statistics of each field of each channel over all patches."""
+        size = min(max(FIT_SAMPLE // n_patches, 16), 4096)
+        options = (size, float(self.min_valid))
+        pools: dict[str, list[np.ndarray]] = {}
+        refused = []
+        done = self._parallel(samples_of, plan, groups, options)
+        for group, (pool, reasons) in zip(groups, done, strict=True):
+            for key, found in pool.items():
+                pools.setdefault(key, []).extend(found)
+            refused.extend(_told(group, reasons))
+        self._complain(refused, n_patches)
         learned = {}
-        for field in plan.fields:
-            pool = [sample for part in found for sample in part[field.name] if len(sample)]
-            if not pool:
-                raise ValueError(
-                    f"no patch has a valid pixel of field {field.name}, so no level can be learned"
-                )
-            learned[field.name] = pooled_quantiles(pool, plan.level_values[field.name])
+        for channel in plan.channels or (None,):
+            for field in plan.fields:
+                key = learned_key(field, channel)
+                if not pools[key]:
+                    raise ValueError(
+                        f"no accepted patch has a valid pixel of field {key}, so no level can be "
+                        "learned"
+                    )
+                learned[key] = pooled_levels(pools[key], plan.level_values[field.name])
         return learned
 
-    def _settle(self, refused: list[tuple[int, int, str]], out: np.ndarray) -> None:
-        """Raise for refused patches, or mark their whole rows."""
-        if not refused:
+    def _complain(self, refused: list[tuple[int, int, str]], n_patches: int) -> None:
+        """Raise for refused patches unless they are to be marked."""
+        if not refused or self.below_min_valid != "error":
             return
-        if self.below_min_valid == "error":
-            shown = "; ".join(text for _, _, text in sorted(refused)[:5])
-            patches = len({position for position, _, _ in refused})
-            raise ValueError(
-                f"{patches} of {len(out)} patches have too few valid pixels. {shown}"
-                + ("; ..." if len(refused) > 5 else "")
-                + '. Leave them out, lower min_valid, or set below_min_valid="nan" to get rows of '
-                "NaN for them"
-            )
-        out[[position for position, _, _ in refused]] = np.nan
+        shown = "; ".join(text for _, _, text in sorted(refused)[:5])
+        number = len({position for position, _, _ in refused})
+        raise ValueError(
+            f"{number} of {n_patches} patches have too few valid pixels. {shown}"
+            + ("; ..." if len(refused) > 5 else "")
+            + '. Leave them out, lower min_valid, or set below_min_valid="nan" to get rows of '
+            "NaN for them"
+        )
 
     def __sklearn_tags__(self):
         tags = super().__sklearn_tags__()
@@ -358,3 +379,11 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
         tags.requires_fit = self.level_rule == "fitted"
         tags.transformer_tags.preserves_dtype = []
         return tags
+
+
+def _told(group: stacks.Group, reasons: dict[int, str]) -> list[tuple[int, int, str]]:
+    """Return position, channel and message of each refused image of a group."""
+    return [
+        (group.positions[place], group.channel, f"{group.name(place)}: {reason}")
+        for place, reason in reasons.items()
+    ]

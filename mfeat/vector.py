@@ -4,13 +4,15 @@ Everything here works on whole stacks without Python code per pixel or per level
 image the same numbers in whatever stack it comes.
 """
 
+from collections.abc import Iterator
+
 import numpy as np
 
 from mfeat import _kernels
+from mfeat._checks import read_only
 from mfeat.counts import (
     STATISTICS,
     all_windows_ok,
-    crossings_of,
     index_stack,
     levels_from_top,
 )
@@ -18,33 +20,29 @@ from mfeat.fields import Field, check_scales, derive
 from mfeat.functionals import (
     area_of,
     contour_of,
-    direction_steps,
+    crossing_densities,
     euler_of,
     per_area,
     per_window,
 )
-from mfeat.levels import PlacedLevels, Relief, place, sample_of
-from mfeat.plan import DIRECTIONS, VectorPlan
-from mfeat.stacks import Collected, Group, group_patches, valid_fractions
-
-
-def levels_of(plan: VectorPlan, field: Field) -> np.ndarray:
-    """Return the levels to place on a field: learned ones where the plan has them."""
-    return (plan.learned or plan.level_values)[field.name]
+from mfeat.levels import FieldStack, PlacedLevels, place_levels, sample_of
+from mfeat.plan import DIRECTIONS, VectorPlan, learned_key
+from mfeat.stacks import Collected, Group, Stack, group_patches, valid_fractions
 
 
 def count_stack(
-    relief: Relief, levels: PlacedLevels, missing: bool
+    fields: FieldStack, levels: PlacedLevels, missing: bool
 ) -> tuple[np.ndarray, np.ndarray]:
     """Index and count a stack of fields inside windows.
 
     Returns histograms over level indices (n, 8, T + 1) and the counting windows of each field (n,).
     """
-    count, rows, cols = relief.values.shape
-    index = index_stack(relief.values, levels.thresholds, levels.reach)
+    count, rows, cols = fields.values.shape
+    index = index_stack(fields.values, levels.thresholds, levels.reach)
     if missing:
         ok = np.empty((count, rows + 1, cols + 1), dtype=np.uint8)
-        windows = np.array([_kernels.windows_ok(relief.valid[k], ok[k]) for k in range(count)])
+        windows = np.array([_kernels.windows_ok(fields.valid[k], ok[k]) for k in range(count)])
+        ok = read_only(ok)
     else:
         whole, number = all_windows_ok(rows, cols)
         ok, windows = whole[None], np.full(count, number)
@@ -69,34 +67,33 @@ def densities(plan: VectorPlan, table: np.ndarray, windows: np.ndarray) -> np.nd
     if "euler" in names:
         found.append(per_area(euler_of(table, plan.connectivity), windows, plan.pitch))
     if plan.directional:
-        twice = crossings_of(table)
-        step = direction_steps(plan.pitch)
-        found.extend(per_window(twice[name] / (2 * step[name]), windows) for name in DIRECTIONS)
+        directed = crossing_densities(table, windows, plan.pitch)
+        found.extend(directed[name] for name in DIRECTIONS)
     return np.array(found).reshape(len(names), *table.shape[:-2], table.shape[-1])
 
 
-def vectors(plan: VectorPlan, values: np.ndarray, valid: np.ndarray | None) -> np.ndarray:
+def vectors(plan: VectorPlan, group: Group, stack: Stack) -> np.ndarray:
     """Return the feature vectors (n, features) of a stack of images, float64, as the plan says.
 
     An image in one of whose fields no window counts gets NaN for that field.
     """
-    out = np.empty((len(values), plan.length))
+    out = np.empty((len(stack.values), plan.length))
     waiting: dict[int, list] = {}  # by number of levels: functionals of many fields in one go
     functionals = len(plan.level_functionals())
     column = 0
-    for field, relief in derive(plan.fields, values, valid, plan.pitch, plan.scale_unit):
-        levels = place(relief, plan.level_rule, levels_of(plan, field))
-        table, windows = count_stack(relief, levels, valid is not None)
+    for field, fields in fields_of(plan, stack):
+        levels = place_levels(fields, plan.level_rule, plan.levels_of(field, group.channel_name))
+        table, windows = count_stack(fields, levels, stack.valid is not None)
         nothing = windows == 0
         for moment in plan.moments(field):
-            number = relief.offset + relief.mean if moment == "mean" else relief.deviation
+            number = fields.offset + fields.mean if moment == "mean" else fields.deviation
             out[:, column] = np.where(nothing, np.nan, number) if nothing.any() else number
             column += 1
         count = levels.thresholds.shape[1]
         waiting.setdefault(count, []).append((column, table, windows))
         column += count * functionals
-    for count, group in waiting.items():
-        columns, tables, windows = zip(*group, strict=True)
+    for count, parts in waiting.items():
+        columns, tables, windows = zip(*parts, strict=True)
         found = densities(plan, levels_from_top(np.stack(tables)), np.stack(windows))
         # (functional, field, image, level) to the columns of (field, functional, level)
         places = np.add.outer(columns, np.arange(functionals * count))
@@ -104,62 +101,80 @@ def vectors(plan: VectorPlan, values: np.ndarray, valid: np.ndarray | None) -> n
     return out
 
 
-def rows_of(plan: VectorPlan, group: Group, min_valid: float) -> tuple[np.ndarray, list[str]]:
-    """Return the rows of a group of images, and for each a reason to refuse it, or ''.
+def fields_of(plan: VectorPlan, stack: Stack) -> Iterator[tuple[Field, FieldStack]]:
+    """Yield the fields of a stack, in the order of the plan."""
+    return derive(plan.fields, stack.values, stack.valid, plan.pitch, plan.scale_unit)
+
+
+def refusals(stack: Stack, min_valid: float) -> dict[int, str]:
+    """Return for each image with too few valid pixels its place in the group and the reason."""
+    if stack.valid is None:
+        return {}
+    found = {}
+    for place, fraction in zip(stack.places, valid_fractions(stack.valid), strict=True):
+        if fraction == 0.0:
+            found[int(place)] = "no window of four valid pixels"
+        elif fraction < min_valid:
+            found[int(place)] = f"valid fraction {fraction:.3g} < min_valid {min_valid:g}"
+    return found
+
+
+def rows_of(plan: VectorPlan, group: Group, min_valid: float) -> tuple[np.ndarray, dict[int, str]]:
+    """Return the rows of a group of images, and by place the reason to refuse one.
 
     Raises
     ------
     ValueError
-        If a number does not fit the output type: values so large mean no-data markers.
+        If a number does not fit the output type.
     """
-    rows = np.empty((len(group.images), plan.length))
-    reasons = [""] * len(rows)
+    rows = np.empty((len(group.images), plan.length), dtype=plan.dtype)
+    refused: dict[int, str] = {}
     for stack in group.stacks():
-        with np.errstate(over="ignore", invalid="ignore"):  # checked below
-            found = vectors(plan, stack.values, stack.valid)
-        rows[stack.places] = found
-        if stack.valid is not None:
-            fractions = valid_fractions(stack.valid)
-            undefined = np.isnan(found).any(axis=1)
-            for place, fraction, bad in zip(stack.places, fractions, undefined, strict=True):
-                if fraction == 0.0:
-                    reasons[place] = "no window of four valid pixels"
-                elif fraction < min_valid:
-                    reasons[place] = f"valid fraction {fraction:.3g} < min_valid {min_valid:g}"
-                elif bad:
-                    reasons[place] = "one of its fields has no window of four valid pixels"
-    _refuse_overflow(plan, group, rows, reasons)
-    return rows, reasons
-
-
-def _refuse_overflow(plan: VectorPlan, group: Group, rows: np.ndarray, reasons: list[str]) -> None:
-    fits = np.abs(rows) <= np.finfo(plan.dtype).max
-    if fits.all():
-        return
-    for k in np.flatnonzero(~fits.all(axis=1)):
-        if not reasons[k]:
-            image = group.images[k]
-            name = plan.features()[int(np.argmin(fits[k]))].name
+        found = vectors(plan, group, stack)
+        refused |= refusals(stack, min_valid)
+        for place in stack.places[np.isnan(found).any(axis=1)].tolist():
+            refused.setdefault(place, "one of its fields has no window of four valid pixels")
+        size = np.abs(found)
+        limits = np.finfo(plan.dtype)
+        fits = (size <= limits.max) & ((size >= limits.tiny) | (size == 0.0)) | np.isnan(size)
+        if not fits.all():
+            k, column = np.argwhere(~fits)[0]
             raise ValueError(
-                f"{group.name(k)}: feature {name} does not fit {plan.dtype}; the pixels reach "
-                f"from {np.nanmin(image):.3g} to {np.nanmax(image):.3g}. Set no-data values to NaN "
-                "or mask them"
+                f"{group.name(int(stack.places[k]))}: feature {plan.features()[column].name} is "
+                f"{found[k, column]:.3g}, which {plan.dtype} cannot hold. Set no-data values to "
+                'NaN, use another unit of the pixels or the pitch, or dtype="float64"'
             )
+        rows[stack.places] = found
+    return rows, refused
 
 
-def samples_of(plan: VectorPlan, group: Group, size: int) -> dict[str, list[np.ndarray]]:
-    """Return samples of each field of the images of a group, from which levels are learned."""
-    pool: dict[str, list[np.ndarray]] = {field.name: [] for field in plan.fields}
+def samples_of(
+    plan: VectorPlan, group: Group, options: tuple[int, float]
+) -> tuple[dict[str, list[np.ndarray]], dict[int, str]]:
+    """Return samples of each field of the images of a group, from which levels are learned.
+
+    `options` are the size of a sample and `min_valid`. Images that it refuses are not sampled;
+    they are returned by place, with the reason.
+    """
+    size, min_valid = options
+    pool: dict[str, list[np.ndarray]] = {
+        learned_key(field, group.channel_name): [] for field in plan.fields
+    }
+    refused: dict[int, str] = {}
     for stack in group.stacks():
-        derived = derive(plan.fields, stack.values, stack.valid, plan.pitch, plan.scale_unit)
-        for field, relief in derived:
-            pool[field.name].extend(sample_of(relief, k, size) for k in range(len(stack.values)))
-    return pool
+        turned_away = refusals(stack, min_valid)
+        refused |= turned_away
+        kept = [k for k, place in enumerate(stack.places.tolist()) if place not in turned_away]
+        for field, fields in fields_of(plan, stack):
+            key = learned_key(field, group.channel_name)
+            with_pixels = [k for k in kept if fields.valid[k].any()]
+            pool[key].extend(sample_of(fields, k, size) for k in with_pixels)
+    return pool, refused
 
 
 def groups_of(plan: VectorPlan, patches: Collected) -> list[Group]:
     """Return the groups of patches, each large enough for every field of the plan."""
-    groups = group_patches(patches)
+    groups = group_patches(patches, plan.table_size)
     for group in groups:
         try:
             check_scales(plan.fields, group.images[0].shape, plan.pitch, plan.scale_unit)

@@ -64,10 +64,10 @@ def test_unusable_arguments_exit_with_2(arguments, message, capsys):
 @pytest.mark.parametrize(
     ("option", "value", "message"),
     [
-        ("--panels", "0", "panels must be >= 1; got 0"),
-        ("--side", "8", "side must be >= 16; got 8"),
-        ("--pitch", "-1", "pitch must be a finite number > 0; got -1.0"),
-        ("--seed", "-1", "seed must be >= 0; got -1"),
+        ("--panels", "0", "panels must be >= 1 and <= 10000; got 0"),
+        ("--side", "8", "side must be >= 16 and <= 16384; got 8"),
+        ("--pitch", "-1", "pitch must be a finite number >= 0.01; got -1.0"),
+        ("--seed", "-1", "seed must be >= 0 and <= 9223372036854775808; got -1"),
     ],
 )
 def test_unusable_values_exit_with_2_and_write_nothing(option, value, message, tmp_path, capsys):

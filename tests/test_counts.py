@@ -191,6 +191,10 @@ def test_nan_masked_arrays_and_masks_mean_the_same():
     assert count_patterns(np.ma.MaskedArray(image, missing), levels) == wanted
     half = np.ma.MaskedArray(image, missing & (np.arange(15) < 8))
     assert count_patterns(half, levels, mask=~(missing & (np.arange(15) >= 8))) == wanted
+    # a mask that is itself masked is False there; masked rows stay masked
+    doubtful = np.ma.MaskedArray(np.ones(image.shape, bool), missing)
+    assert count_patterns(image, levels, mask=doubtful) == wanted
+    assert count_patterns(list(np.ma.MaskedArray(image, missing)), levels) == wanted
     # what lies under the mask has no say, not even infinity
     wild = np.where(missing, np.inf, image)
     assert count_patterns(wild, levels, mask=~missing) == wanted
@@ -274,14 +278,22 @@ def test_merging_refuses_what_does_not_belong_together():
     counts = count_patterns(image, [1, 2])
     with pytest.raises(ValueError, match=r"different levels.*\[1, 2\].*\[1, 3\]"):
         counts + count_patterns(image, [1, 3])
-    with pytest.raises(ValueError, match=r"different levels.*int64.*float64"):
-        counts + count_patterns(image, [1.0, 2.0])
+    with pytest.raises(ValueError, match=r"levels\[1\] = 2.0000000001"):
+        counts + count_patterns(image, [1, 2.0000000001])
+    assert counts + count_patterns(image, [1.0, 2.0]) == counts + counts  # equal as numbers
+    large = [count_patterns(image, levels) for levels in ([2**53 + 1], [2.0**53])]
+    assert large[0] != large[1]
     with pytest.raises(ValueError, match=r"different pitch.*\(1.0, 1.0\) and \(2.0, 2.0\)"):
         counts + count_patterns(image, [1, 2], pitch=2.0)
     with pytest.raises(ValueError, match=r"different edges.*'inside' and 'framed'"):
         counts + count_patterns(image, [1, 2], edges="framed")
+    framed = count_patterns(image, [1], edges="framed")
+    with pytest.raises(ValueError, match=r'framed counts cannot be merged.*edges="inside"'):
+        framed + framed
     with pytest.raises(TypeError):
         counts + 1
+    with pytest.raises(ValueError, match="read-only"):
+        counts.table[0] = 1
     assert (counts == 3) is False
     assert repr(counts) == (
         "PatternCounts(2 levels [1, 2], windows=6 of 6, pitch=(1.0, 1.0), edges='inside')"
@@ -300,6 +312,7 @@ OK = np.zeros((3, 3))
         (ValueError, r"at least 2x2.*\(0, 5\)", np.zeros((0, 5)), [0], {}),
         (ValueError, r"ragged", [[1, 2], [3]], [0], {}),
         (TypeError, r"dtype complex128", np.zeros((3, 3), complex), [0], {}),
+        (TypeError, r"image must be an array of numbers; got dict", {1: 2}, [0], {}),
         (TypeError, r"dtype object", np.zeros((3, 3), object), [0], {}),
         (TypeError, r"dtype <U1", np.array([["a", "b"], ["c", "d"]]), [0], {}),
         (
@@ -336,6 +349,21 @@ OK = np.zeros((3, 3))
             {"mask": np.ones((3, 3), np.uint8)},
         ),
         (ValueError, r"pitch must be a finite number > 0; got 0", OK, [0], {"pitch": 0}),
+        (ValueError, r"pitch must be from 1e-60 to 1e60; got 1e-170", OK, [0], {"pitch": 1e-170}),
+        (
+            ValueError,
+            r"pitch must be a finite number > 0; got 1000.*characters",
+            OK,
+            [0],
+            {"pitch": 10**400},
+        ),
+        (
+            ValueError,
+            r"mask of image must be an array; it is ragged",
+            OK,
+            [0],
+            {"mask": [[True], [True, False]]},
+        ),
         (
             ValueError,
             r"pitch\[1\] must be a finite number > 0; got -1",

@@ -450,7 +450,7 @@ def first(copy, tmp_path_factory):
     return report
 
 
-KERNELS_USED = {"survey", "index_by_comparison", "windows_ok", "count_windows"}
+KERNELS_USED = {"index_by_comparison", "windows_ok", "count_windows"}
 
 
 def test_the_first_process_compiles_and_writes(first):

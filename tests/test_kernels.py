@@ -372,37 +372,7 @@ def test_the_watched_array_notices_writes_through_views():
     assert Watched.written == 2  # by hand: one assignment and one update
 
 
-# Surveys of images
-
-
-@pytest.mark.parametrize("dtype", ["float32", "float64"])
-def test_survey_counts_what_is_unusable(dtype):
-    rng = np.random.default_rng(7)
-    for shape in [(1, 1), (1, 7), (7, 1), (17, 21)]:
-        values = rng.standard_normal(shape).astype(dtype)
-        values[rng.random(shape) < 0.4] = np.nan
-        valid = (rng.random(shape) < 0.7).astype(np.uint8)
-        usable = np.full(shape, 9, dtype=np.uint8)
-        missing, infinite = _kernels.survey(_checks.read_only(values), valid, usable)
-        expected = naive.valid_pixels(values, valid)
-        assert np.array_equal(usable, expected)
-        assert missing == values.size - expected.sum()
-        assert infinite == -1
-
-
-@pytest.mark.parametrize("sign", [1, -1])
-def test_survey_finds_the_first_valid_infinity(sign):
-    values = np.zeros((3, 4))
-    values[0, 1] = values[1, 2] = values[2, 0] = sign * np.inf
-    values[0, 0] = np.nan
-    valid = np.ones((3, 4), dtype=np.uint8)
-    usable = np.empty((3, 4), dtype=np.uint8)
-    assert _kernels.survey(_checks.read_only(values), valid, usable) == (1, 1)  # row 0, column 1
-    valid[0, 1] = 0
-    assert _kernels.survey(_checks.read_only(values), valid, usable) == (2, 6)  # row 1, column 2
-    valid[1, 2] = valid[2, 0] = 0
-    assert _kernels.survey(_checks.read_only(values), valid, usable) == (4, -1)  # all are masked
-    assert usable.sum() == 8  # by hand: 12 pixels, 1 NaN and 3 masked
+# Ranges and moments of images
 
 
 @pytest.mark.parametrize("dtype", TYPES)

@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 
 from mfeat import count_patterns, minkowski_curves
-from mfeat.levels import level_values, pooled_quantiles
+from mfeat.levels import level_values, order_statistics, pooled_levels
 
 
 def curves(image, **options):
@@ -36,13 +36,22 @@ def test_rank_levels_are_order_statistics():
     assert ends.levels.tolist() == [0, 399]
 
 
-def test_rank_keeps_64_bit_integers_exact():
-    base = 2**62
+@pytest.mark.parametrize("base", [2**53, -(2**53) - 5, 2**62])
+@pytest.mark.parametrize("rule", ["standard", "rank"])
+def test_integers_that_floats_would_round_are_refused(base, rule):
     image = (base + np.random.default_rng(2).permutation(64)).reshape(8, 8)
-    small = (image - base).astype(np.uint8)
-    for name in ("area", "contour", "euler"):
-        got = getattr(curves(image, level_rule="rank"), name)
-        assert np.array_equal(got, getattr(curves(small, level_rule="rank"), name))
+    with pytest.raises(ValueError, match=r"integers from .* beyond 2\*\*53 .*count_patterns"):
+        curves(image, level_rule=rule)
+    # what a mask hides does not count
+    hidden = np.where(image == image.min(), 0, image)
+    assert curves(image - base, mask=hidden != 0).valid_fraction < 1.0
+
+
+def test_rank_positions_are_floor_of_p_n():
+    # by hand, on 0..99: .29 * 100 is 28.999999999999996 in binary
+    ranked = np.arange(100)
+    fractions = np.array([0.0, 0.25, 0.29, 0.57, 0.58, 0.999, 1.0])
+    assert order_statistics(ranked, fractions).tolist() == [0, 25, 29, 57, 58, 99, 99]
 
 
 def test_fixed_levels_and_explicit_sequences():
@@ -83,11 +92,11 @@ def test_constant_images_have_the_documented_step(value, dtype):
     assert ranked.contour.tolist() == ranked.euler.tolist() == [0.0] * 5
 
 
-@pytest.mark.parametrize("value", [2**63 - 1, -(2**63), 2**62 + 1])
-def test_constant_images_of_huge_integers(value):
-    image = np.full((4, 4), value, dtype=np.int64)
-    assert curves(image, levels=5).area.tolist() == [1.0, 1.0, 1.0, 0.0, 0.0]
-    assert curves(image, levels=3, level_rule="rank").area.tolist() == [1.0] * 3
+def test_a_constant_image_meets_fixed_levels_exactly():
+    # 2**53 - 1 against levels half a unit around it: no tolerance on raw pixels
+    image = np.full((5, 5), 2**53 - 1)
+    levels = [2.0**53 - 2, 2.0**53 - 1, 2.0**53]
+    assert curves(image, levels=levels).area.tolist() == [1.0, 1.0, 0.0]
 
 
 @pytest.mark.parametrize(
@@ -137,11 +146,38 @@ def test_ties_with_a_level_survive_gain_and_offset():
         assert np.array_equal(got.contour, wanted.contour)
 
 
-def test_pooled_quantiles_are_observed_values():
-    # Hyndman and Fan (1996), definition 1, by hand: the smallest value whose distribution
-    # function reaches p
+def test_pooled_levels_are_observed_values():
+    # by hand: sorted pool 1 2 3 4, positions floor(4 p), at most 3
     pool = [np.array([3.0, 1.0]), np.array([2.0, 4.0])]
-    assert pooled_quantiles(pool, np.array([0.0, 0.25, 0.26, 0.5, 1.0])).tolist() == [1, 1, 2, 2, 4]
+    assert pooled_levels(pool, np.array([0.0, 0.25, 0.49, 0.5, 1.0])).tolist() == [1, 2, 2, 3, 4]
+
+
+@pytest.mark.parametrize("rule", ["fixed", "standard", "rank"])
+@pytest.mark.parametrize("value", [0.7, 200.0, 255.0])
+def test_plateaus_of_smoothed_fields_fall_on_one_side_of_a_level(rule, value):
+    # far from the noise a plateau keeps its value up to rounding, which must not decide
+    areas = set()
+    for seed in range(8):
+        image = value * np.random.default_rng(seed).random((64, 64))
+        image[20:] = value
+        if rule == "fixed":
+            got = curves(image, levels=[value], field="smooth", scale=1.0)
+        else:
+            levels = [0.9] if rule == "rank" else [0.0]
+            got = curves(image, levels=levels, level_rule=rule, field="smooth", scale=1.0)
+        areas.add(bool(got.area[0] > 0.55))
+    assert areas == {True}
+
+
+def test_levels_of_derived_fields_are_shown_as_given():
+    image = 1e4 + np.random.default_rng(5).random((20, 31))
+    levels = [1e4 + 0.1, 1e4 + 0.45, 1e4 + 0.7]
+    left, right = (
+        curves(part, levels=levels, field="smooth", scale=1)
+        for part in (image[:, :16], image[:, 15:])
+    )
+    assert left.levels.tolist() == levels
+    assert (left.counts + right.counts).windows == 19 * 30
 
 
 @pytest.mark.parametrize(
@@ -153,6 +189,16 @@ def test_pooled_quantiles_are_observed_values():
         (ValueError, r"levels must be >= 1 and <= 65535; got 0", (0, "standard")),
         (ValueError, r"levels must be >= 1 and <= 65535; got 65536", (65536, "rank")),
         (ValueError, r'"fixed" needs level_range', (3, "fixed")),
+        (
+            ValueError,
+            r"too narrow for 10 distinct levels",
+            (10, "fixed", (1.0, np.nextafter(1.0, 2.0))),
+        ),
+        (TypeError, r"levels must be a sequence of numbers; got None", (None, "fixed", (0, 1))),
+        (TypeError, r"levels must be a sequence of numbers; got \{1, 2\}", ({1, 2}, "fixed")),
+        (ValueError, r"one-dimensional; it is ragged", ([1, [2, 3]], "fixed")),
+        (ValueError, r"levels holds masked entries", (np.ma.array([1, 2], mask=[0, 1]), "fixed")),
+        (ValueError, r"integers beyond 64 bit", ([2**64], "fixed")),
         (ValueError, r"level_range must ascend; got \(2.0, 1.0\)", (3, "fixed", (2, 1))),
         (ValueError, r"level_range must be two numbers", (3, "fixed", (1, 2, 3))),
         (ValueError, r"level_range\[1\] must be a finite", (3, "fixed", (1, np.inf))),

@@ -99,7 +99,7 @@ LAYERS = {
     "_jit": set(),
     "_kernels": {"_jit"},
     "_field_kernels": {"_jit"},
-    "_checks": {"_kernels"},
+    "_checks": set(),
     "counts": {"_checks", "_kernels"},
     "functionals": {"_checks", "counts"},
     "levels": {"_checks", "_kernels", "counts"},
@@ -107,7 +107,9 @@ LAYERS = {
     "plan": {"_checks", "fields", "functionals", "levels"},
     "settings": {"_checks", "fields", "functionals", "levels", "plan"},
     "stacks": {"_checks", "_kernels"},
-    "vector": {"_kernels", "counts", "fields", "functionals", "levels", "plan", "stacks"},
+    "vector": {
+        *["_checks", "_kernels", "counts", "fields", "functionals", "levels", "plan", "stacks"]
+    },
     "curves": {"_checks", "counts", "fields", "functionals", "levels"},
     "transformer": {"fields", "functionals", "levels", "plan", "settings", "stacks", "vector"},
     "patches": {"_checks", "_kernels"},

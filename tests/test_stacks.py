@@ -49,13 +49,20 @@ def test_channels_are_views_of_the_last_axis():
                 assert np.shares_memory(collected.images[k][c], X)
 
 
-def test_bytes_are_swapped_to_native_order():
+def test_bytes_are_swapped_where_they_are_computed():
     X = np.arange(40.0).reshape(2, 4, 5)
     for given_X in (X.astype(">f8"), list(X.astype(">f8"))):
-        for k, images in enumerate(stacks.collect(given_X, None).images):
-            assert images[0].dtype == np.dtype("=f8")
-            assert images[0].dtype.isnative
-            np.testing.assert_array_equal(images[0], X[k])
+        [group] = stacks.group_patches(stacks.collect(given_X, None), 1)
+        [stack] = group.stacks()
+        assert stack.values.dtype.isnative
+        np.testing.assert_array_equal(stack.values, X)
+
+
+@pytest.mark.parametrize(("table_size", "sizes"), [(1, [7]), (30, [3, 3, 1]), (1000, [1] * 7)])
+def test_groups_are_bounded_by_their_tables_too(monkeypatch, table_size, sizes):
+    monkeypatch.setattr(stacks, "STACK_COUNTS", 100)
+    groups = stacks.group_patches(stacks.collect(numbered([(4, 5)] * 7), None), table_size)
+    assert [len(group.positions) for group in groups] == sizes
 
 
 def test_masks_stay_with_their_patches():
@@ -90,7 +97,7 @@ def test_a_ragged_patch_is_named():
 
 def test_groups_are_of_one_shape_and_type_in_the_order_of_x():
     patches = [*numbered(MIXED_SHAPES), np.full((4, 5), 6, dtype=np.uint8)]
-    groups = stacks.group_patches(stacks.collect(patches, None))
+    groups = stacks.group_patches(stacks.collect(patches, None), 1)
     # by hand: three shapes of float64, and the one patch of uint8
     assert sorted(group.positions for group in groups) == [[0, 2, 5], [1, 4], [3], [6]]
     assert (places_in(groups, 7) == 1).all()
@@ -99,7 +106,7 @@ def test_groups_are_of_one_shape_and_type_in_the_order_of_x():
 def test_channels_are_grouped_apart():
     X = np.stack([np.arange(3), 100 + np.arange(3)], axis=-1)[:, None, None, :]
     X = np.broadcast_to(X, (3, 4, 4, 2))
-    groups = stacks.group_patches(stacks.collect(X, ("a", "b")))
+    groups = stacks.group_patches(stacks.collect(X, ("a", "b")), 1)
     found = [(group.channel, group.positions) for group in groups]
     assert found == [(0, [0, 1, 2]), (1, [0, 1, 2])]
     assert (places_in(groups, 3, 2) == 1).all()
@@ -118,7 +125,7 @@ def test_channels_are_grouped_apart():
 )
 def test_groups_are_bounded(monkeypatch, limit, sizes):
     monkeypatch.setattr(stacks, "STACK_PIXELS", limit)
-    groups = stacks.group_patches(stacks.collect(numbered([(4, 5)] * 7), None))
+    groups = stacks.group_patches(stacks.collect(numbered([(4, 5)] * 7), None), 1)
     assert [len(group.positions) for group in groups] == sizes
     assert [position for group in groups for position in group.positions] == list(range(7))
 
@@ -132,7 +139,7 @@ def test_grouping_loses_and_doubles_nothing(shapes, limit):
     patches = stacks.collect(numbered(shapes, np.int16), None)
     with pytest.MonkeyPatch.context() as patch:
         patch.setattr(stacks, "STACK_PIXELS", limit)
-        groups = stacks.group_patches(patches)
+        groups = stacks.group_patches(patches, 1)
     assert (places_in(groups, len(shapes)) == 1).all()
     for group in groups:
         assert group.positions == sorted(group.positions)
@@ -145,7 +152,7 @@ def test_grouping_loses_and_doubles_nothing(shapes, limit):
 
 
 def the_group(patches):
-    [group] = stacks.group_patches(stacks.collect(patches, None))
+    [group] = stacks.group_patches(stacks.collect(patches, None), 1)
     return group
 
 

@@ -408,8 +408,8 @@ def test_boolean_discs_are_discs_and_reproducible():
         ({"shape": 64}, ValueError, r"shape must be two integers.*got 64"),
         ({"shape": "64"}, ValueError, r"shape must be two integers"),
         ({"shape": (64.0, 64)}, TypeError, r"shape\[0\] must be an integer; got 64\.0"),
-        ({"pitch": 0.0}, ValueError, r"pitch must be a finite number > 0; got 0\.0"),
-        ({"pitch": math.nan}, ValueError, r"pitch must be a finite number > 0; got nan"),
+        ({"pitch": 0.0}, ValueError, r"pitch must be a finite number >= 0\.01; got 0\.0"),
+        ({"pitch": math.nan}, ValueError, r"pitch must be a finite number >= 0\.01; got nan"),
         ({"pitch": "10"}, TypeError, r"pitch must be a number; got '10'"),
         ({"severity": -1.0}, ValueError, r"severity must be a finite number > 0; got -1\.0"),
         ({"severity": math.inf}, ValueError, r"severity must be a finite number > 0; got inf"),
@@ -425,9 +425,13 @@ def test_bad_panel_arguments(options, error, message):
 @pytest.mark.parametrize(
     ("options", "error", "message"),
     [
-        ({"correlation_length": 0}, ValueError, r"correlation_length must be a finite number > 0"),
+        (
+            {"correlation_length": 0},
+            ValueError,
+            r"correlation_length must be .* >= 0\.1",
+        ),
         ({"correlation_length": None}, TypeError, r"correlation_length .* got None"),
-        ({"std": math.nan}, ValueError, r"std must be a finite number > 0; got nan"),
+        ({"std": math.nan}, ValueError, r"std must be a finite number >= 1e-100; got nan"),
         ({"seed": False}, TypeError, r"seed must be an integer; got False"),
         ({"shape": (8, 8)}, ValueError, r"shape\[0\] must be >= 16; got 8"),
         (

@@ -146,14 +146,15 @@ def test_masked_integers(dtype):
     )
 
 
-def test_integers_beyond_float64_are_ranked_exactly():
-    # 2^53 and 2^53 + 1 are one float64; on the raw field they stay two levels of grey
-    X = np.full((1, 8, 8), 2**53, dtype=np.int64)
-    X[0, 2:5, 2:6] += 1
-    expected = raw(level_rule="rank").transform(X - 2**53)
-    far = raw(level_rule="rank").transform(X)
-    same = [k for k, f in enumerate(raw().feature_table()) if f.functional not in ("mean", "std")]
-    np.testing.assert_array_equal(far[:, same], expected[:, same])
+def test_integers_beyond_float64_are_refused():
+    # means and derived fields are float64: 2^53 + 1 would become 2^53
+    X = np.full((2, 8, 8), 2**53, dtype=np.int64)
+    assert np.isfinite(raw().transform(X)).all()
+    X[1, 2:5, 2:6] += 1
+    with pytest.raises(ValueError, match=r"X\[1\] holds integers from .*beyond 2\*\*53"):
+        raw(level_rule="rank").transform(X)
+    with pytest.raises(ValueError, match=r"X\[0\] holds integers"):
+        raw().transform(X[1:].astype(np.uint64))
 
 
 def test_lists_of_unequal_sizes():
@@ -630,9 +631,9 @@ def test_grid_search_in_a_cached_pipeline(tmp_path, monkeypatch):
     computed = []
     compute = vector.vectors
 
-    def counted(plan, values, valid):
-        computed.append(len(values))
-        return compute(plan, values, valid)
+    def counted(plan, group, stack):
+        computed.append(len(stack.values))
+        return compute(plan, group, stack)
 
     monkeypatch.setattr(vector, "vectors", counted)
     grid = {
@@ -715,11 +716,11 @@ def test_learned_levels_are_quantiles_of_the_training_pixels():
     fitted = raw(level_rule="fitted", levels=[0.0, 0.25, 0.5, 1.0]).fit(X)
     pooled = np.sort(X.ravel())
     n = pooled.size
-    # definition 1 of Hyndman and Fan (1996): the ceil(n p)-th of the sorted values, at least the
-    # first. Values pass through centring, hence the tolerance.
-    expected = [pooled[0], pooled[n // 4 - 1], pooled[n // 2 - 1], pooled[-1]]
+    # by hand: sorted values at floor(n p), at most the last; each patch stands for itself by its
+    # evenly spaced order statistics, here 4096 of them from 80 pixels or so, hence the tolerance
+    expected = [pooled[0], pooled[n // 4], pooled[n // 2], pooled[-1]]
     assert n % 4 == 0
-    np.testing.assert_allclose(fitted.levels_["raw"], expected, rtol=1e-13)
+    np.testing.assert_allclose(fitted.levels_["raw"], expected, atol=0.02)
     fixed = raw(level_rule="fixed", levels=fitted.levels_["raw"])
     np.testing.assert_array_equal(fitted.transform(X), fixed.transform(X))
 
@@ -749,10 +750,55 @@ def test_patches_weigh_alike_in_learned_levels(monkeypatch):
     assert levels.tolist() == [0.0, 0.5, 1.0]
 
 
-def test_learned_levels_serve_all_channels():
-    X4 = np.stack([np.zeros((2, 8, 8)), np.ones((2, 8, 8))], axis=-1)
-    fitted = raw(level_rule="fitted", levels=[0.25, 0.75], channels=("a", "b")).fit(X4)
-    assert fitted.levels_["raw"].tolist() == [0.0, 1.0]
+def test_levels_are_learned_channel_by_channel():
+    # channels of other units share no level
+    X4 = np.stack([noise(4, (8, 8)), 200.0 + 0.1 * noise(4, (8, 8), seed=1)], axis=-1)
+    fitted = raw(level_rule="fitted", levels=5, channels=("a", "b")).fit(X4)
+    assert sorted(fitted.levels_) == ["a_raw", "b_raw"]
+    for channel, name in enumerate("ab"):
+        alone = raw(level_rule="fitted", levels=5).fit(X4[..., channel])
+        np.testing.assert_array_equal(fitted.levels_[f"{name}_raw"], alone.levels_["raw"])
+        half = fitted.transform(X4).shape[1] // 2
+        got = fitted.transform(X4)[:, channel * half : (channel + 1) * half]
+        np.testing.assert_array_equal(got, alone.transform(X4[..., channel]))
+
+
+def test_a_small_patch_weighs_as_much_as_a_large_one():
+    # two small patches of zeros outvote one large patch of ones
+    X = [np.zeros((16, 16)), np.zeros((16, 16)), np.ones((64, 64))]
+    assert raw(level_rule="fitted", levels=[0.5, 0.9]).fit(X).levels_["raw"].tolist() == [0.0, 1.0]
+
+
+def test_levels_are_not_learned_from_refused_patches():
+    X = [np.full((30, 30), np.nan), noise(1, (16, 16))[0]]
+    X[0][:5, :5] = 1000.0
+    with pytest.raises(ValueError, match=r"1 of 2 patches .* X\[0\]: valid fraction"):
+        raw(level_rule="fitted").fit(X)
+    lenient = raw(level_rule="fitted", below_min_valid="nan").fit(X)
+    alone = raw(level_rule="fitted").fit(X[1:])
+    np.testing.assert_array_equal(lenient.levels_["raw"], alone.levels_["raw"])
+
+
+@pytest.mark.parametrize(
+    "spoilt", [[0.0], [2.0, 1.0, 3.0, 4.0], [0.0, np.nan, 1.0, 2.0], None], ids=str
+)
+def test_learned_levels_that_somebody_changed_are_refused(spoilt):
+    fitted = raw(level_rule="fitted", levels=4).fit(noise())
+    if spoilt is None:
+        del fitted.levels_["raw"]
+    else:
+        fitted.levels_["raw"] = np.array(spoilt)
+    with pytest.raises(ValueError, match=r"levels_\['raw'\] must hold 4 ascending numbers"):
+        fitted.transform(noise())
+
+
+def test_refitting_on_other_units_changes_nothing():
+    # a plateau of saturated pixels keeps its side of a learned level in grey values and in 0..1
+    image = np.minimum(255.0, 40.0 * np.abs(noise(6, (40, 40))) + 180.0).round()
+    options = {"level_rule": "fitted", "smooth": (1,), "levels": 6, "location_scale": False}
+    one = raw(**options).fit_transform(image)
+    other = raw(**options).fit_transform(image / 255.0)
+    np.testing.assert_allclose(one, other, atol=1e-9)
 
 
 def test_fit_without_learning_forgets_earlier_levels():
@@ -879,11 +925,15 @@ def test_values_under_the_mask_do_not_matter():
 
 
 def test_nothing_to_learn_from_is_an_error():
-    with pytest.raises(ValueError, match="no patch has a valid pixel of field raw"):
-        raw(level_rule="fitted").fit(np.full((3, 8, 8), np.nan))
+    empty = np.full((3, 8, 8), np.nan)
+    with pytest.raises(ValueError, match=r"3 of 3 patches have too few valid pixels. X\[0\]"):
+        raw(level_rule="fitted").fit(empty)
+    with pytest.raises(ValueError, match="no accepted patch has a valid pixel of field raw"):
+        raw(level_rule="fitted", below_min_valid="nan").fit(empty)
     # an empty patch beside others does not spoil their levels
-    beside = raw(level_rule="fitted").fit(half_missing()).levels_["raw"]
-    alone = raw(level_rule="fitted").fit(half_missing()[:5]).levels_["raw"]
+    lenient = raw(level_rule="fitted", below_min_valid="nan", min_valid=0.0)
+    beside = lenient.fit(half_missing()).levels_["raw"]
+    alone = lenient.fit(half_missing()[:5]).levels_["raw"]
     np.testing.assert_array_equal(beside, alone)
 
 
@@ -1072,12 +1122,12 @@ SPOILT[1, 4, 5] = -np.inf
         ([X[0], [[1, 2], [3]]], ValueError, r"X\[1\] must be an array; it is ragged"),
         (X.astype(object), TypeError, r"X\[0\] must hold bool, integers .* got dtype object"),
         (X.astype(complex), TypeError, r"X\[0\] must hold .* got dtype complex128"),
-        (X.astype(np.longdouble), TypeError, r"X\[0\] must hold .* got dtype .*\.astype"),
+        (X.astype(np.longdouble), TypeError, r"X\[0\] must hold .* got dtype .*plain numbers"),
         (X.astype(str), TypeError, r"X\[0\] must hold .* got dtype <U"),
         (X.astype("M8[s]"), TypeError, r"X\[0\] must hold .* got dtype datetime64"),
         ([X[0], X[1].astype(complex)], TypeError, r"X\[1\] must hold .* got dtype complex128"),
         ([X[0], None], TypeError, r"X\[1\] must hold .* got dtype object"),
-        (["a.png", "b.png"], TypeError, r"X\[0\] must hold .* got dtype <U"),
+        (["a.png", "b.png"], TypeError, r"X\[0\] must be an array of numbers; got str"),
         ("a.png", TypeError, "X must be an array of shape .* got str"),
         (None, TypeError, "X must be an array of shape .* got NoneType"),
         (iter(X), TypeError, "X must be an array of shape .* got .*iterator"),
@@ -1207,7 +1257,7 @@ BAD_PARAMETERS = [
     ({"levels": 2.5}, "levels must be an integer; got 2.5"),
     ({"levels": True}, "levels must be an integer; got True"),
     ({"levels": np.nan}, "levels must be an integer; got nan"),
-    ({"levels": "16"}, "levels must hold integers or floats; got dtype <U1"),
+    ({"levels": "16"}, "levels must be a sequence of numbers; got '16'"),
     ({"levels": None}, "levels must be a sequence of numbers; got None"),
     ({"levels": {"rwa": 3}}, r"levels has unknown field families \['rwa'\]; known are \['raw'"),
     ({"levels": {"slope": 3}}, "levels is a dict without an entry for 'raw'"),
@@ -1217,7 +1267,7 @@ BAD_PARAMETERS = [
     ({"level_rule": "fixed"}, r'level_rule "fixed" needs level_range=\(lowest, highest\)'),
     ({"level_range": (1, -1)}, r"level_range must ascend; got \(1.0, -1.0\)"),
     ({"level_range": (1, 1)}, r"level_range must ascend; got \(1.0, 1.0\)"),
-    ({"level_range": (0, np.nan)}, r"level_range\[1\] must be a finite number; got nan"),
+    ({"level_range": (0, np.nan)}, r"level_range\[1\] must be a finite number .*; got nan"),
     ({"level_range": (0, 1, 2)}, r"level_range must be two numbers \(lowest, highest\)"),
     ({"level_range": 2.5}, "level_range must be two numbers .*; got 2.5"),
     ({"level_rule": "rank", "level_range": (0, 1.5)}, 'level_range of rule "rank" holds frac'),
@@ -1290,25 +1340,21 @@ def test_integer_levels_that_floats_cannot_hold_are_refused():
 
 @pytest.mark.parametrize("marker", [-1.797e308, 1e300])
 def test_no_data_markers_are_not_taken_for_heights(marker):
-    # values that overflow the output type, as undeclared no-data markers do
     spoilt = noise(3, (8, 8))
     spoilt[1, 2, 3] = marker
-    with pytest.raises(
-        ValueError,
-        match=r"X\[1\]: feature raw_mean does not fit float32; the .*"
-        r"Set no-data values to NaN",
-    ):
-        raw(dtype="float32").transform(spoilt)
+    with pytest.raises(ValueError, match=r"X\[1\] reaches from .* Set no-data values to NaN"):
+        raw().transform(spoilt)
     spoilt[1, 2, 3] = np.nan
     assert np.isfinite(raw(min_valid=0.0).transform(spoilt)).all()
 
 
-def test_derived_fields_that_overflow_are_refused():
-    wild = noise(2, (8, 8)) * 1e300
-    with pytest.raises(ValueError, match=r"X\[0\]: feature .* does not fit float64"):
-        raw(dtype="float64", curvature=(0,), pitch=1e-5).transform(wild)
-    with pytest.raises(ValueError, match="field curvature_0 overflows float64"):
-        minkowski_curves(wild[0], field="curvature", pitch=1e-5)
+@pytest.mark.parametrize("factor", [1e60, 1e-60])
+def test_numbers_that_the_output_cannot_hold_are_refused(factor):
+    # neither infinity nor zero stands in for them
+    X = noise(2, (8, 8)) * factor
+    with pytest.raises(ValueError, match=r"X\[0\]: feature raw_mean is .*float32 cannot hold"):
+        raw(dtype="float32").transform(X)
+    assert np.isfinite(raw(dtype="float64").transform(X)).all()
 
 
 def test_messages_name_the_channel():
