@@ -175,7 +175,8 @@ class _Announcer(event.Listener):
             if self._spent > _ANNOUNCE_AFTER and not self._said:
                 self._said = True
                 _log.warning(
-                    "compiling kernels for this processor, once: some 10 to 20 seconds (%s)",
+                    "compiling kernels that are not cached yet: 10 to 20 seconds the first time, a "
+                    "second or two for a new type of image (%s)",
                     f"kept in {_FOLDER}" if _FOLDER else "no cache folder could be written",
                 )
 

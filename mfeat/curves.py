@@ -71,6 +71,7 @@ def minkowski_curves(
     field: str = "raw",
     scale: float = 0.0,
     scale_unit: str = "pitch",
+    remove_tilt: bool = False,
     contour_estimator: str = "crofton-4",
     unit: str = "px",
     value_unit: str = "",
@@ -106,6 +107,8 @@ def minkowski_curves(
         Gaussian scale of the field; must be 0 for "raw" and > 0 for "smooth" and "band".
     scale_unit : {"pitch", "length"}, default "pitch"
         Whether `scale` counts pitches or is a length in `unit`.
+    remove_tilt : bool, default False
+        Whether the image's least-squares plane is levelled first, about its mean.
     contour_estimator : {"crofton-4", "crofton-2", "pixel-edge", "duda"}, default "crofton-4"
         See `mfeat.functionals.contour`.
     unit : str, default "px"
@@ -158,6 +161,8 @@ def minkowski_curves(
     for name, text in (("unit", unit), ("value_unit", value_unit)):
         if not isinstance(text, str):
             raise TypeError(f"{name} must be a string; got {text!r}")
+    if not isinstance(remove_tilt, bool | np.bool_):
+        raise TypeError(f"remove_tilt must be True or False; got {remove_tilt!r}")
     image = _checks.image(image)
     valid = _checks.valid_pixels(image, _checks.valid_mask(mask, image.shape))
     if valid is not None and not valid.any():
@@ -166,7 +171,7 @@ def minkowski_curves(
     _checks.representable(values, valid, "image")
 
     stack_valid = None if valid is None else valid[None]
-    [(_, fields)] = derive((chosen,), values[None], stack_valid, pitch, scale_unit)
+    [(_, fields)] = derive((chosen,), values[None], stack_valid, pitch, scale_unit, remove_tilt)
     placed = place_levels(fields, level_rule, values_of_rule)
     counts = count_image(
         fields.values[0],

@@ -176,6 +176,7 @@ def derive(
     valid: np.ndarray | None,
     pitch: tuple[float, float],
     scale_unit: str,
+    remove_tilt: bool,
 ) -> Iterator[tuple[Field, FieldStack]]:
     """Yield each field of a stack of images, in the order of `fields`.
 
@@ -189,6 +190,8 @@ def derive(
         pixels are smoothed by normalised convolution, those without by plain convolution.
     pitch : (float, float)
     scale_unit : {"pitch", "length"}
+    remove_tilt : bool
+        Whether each image's least-squares plane is levelled first, about its mean.
 
     Notes
     -----
@@ -209,11 +212,13 @@ def derive(
     half_range = high.astype(np.float64) / 2 - low.astype(np.float64) / 2
     error = np.maximum(ROUNDING * half_range, 2.0**-52 * (np.abs(offset) + half_range))
     nothing = np.zeros(len(values))
-    source = _Smoothings(values, valid, missing, offset, pitch, scale_unit)
+    source = _Smoothings(values, valid, missing, offset, pitch, scale_unit, remove_tilt)
     for field in fields:
         order = _SHRINK[field.family]
         rounding = _GAIN[field.family] * error / min(pitch) ** order
-        if field.family == "raw":
+        if field.family == "raw" and remove_tilt:
+            yield field, FieldStack(source.centred(), valid, offset, rounding)
+        elif field.family == "raw":
             yield field, FieldStack(values, valid, offset, rounding, source.centred, low == high)
         elif field.family == "band":
             band = source.at(field.scale) - source.at(BAND_RATIO * field.scale)
@@ -235,21 +240,27 @@ def derive(
 class _Smoothings:
     """Gaussian smoothings of one stack, each computed once and shared between the families."""
 
-    def __init__(self, values, valid, missing, offset, pitch, scale_unit):
+    def __init__(self, values, valid, missing, offset, pitch, scale_unit, remove_tilt):
         self._values = values
         self._valid = valid
         self._missing = missing
         self._offset = offset
         self._pitch = pitch
         self._scale_unit = scale_unit
+        self._remove_tilt = remove_tilt
         self._done: dict[float, np.ndarray] = {}
 
     def centred(self) -> np.ndarray:
-        """Return the images minus their offsets, float64, zero where pixels are missing."""
+        """Return the images minus their offsets, float64, zero where pixels are missing.
+
+        They are levelled if that is asked for.
+        """
         if 0.0 not in self._done:
             centred = self._values - self._offset[:, None, None]
             if self._missing:
                 centred[self._valid == 0] = 0.0
+            if self._remove_tilt:
+                level(centred, self._valid)
             self._done[0.0] = centred
         return self._done[0.0]
 
@@ -273,3 +284,31 @@ class _Smoothings:
         out = np.empty_like(stack)
         _field_kernels.smooth_stack(stack, along_rows, along_columns, padded, half, out)
         return out
+
+
+def level(images: np.ndarray, valid: np.ndarray) -> None:
+    """Subtract the slopes of each image's least-squares plane in place; its mean stays.
+
+    Least squares by normal equations; source: A. M. Legendre, Nouvelles methodes pour la
+    determination des orbites des cometes (1805), from memory. Images (n, h, w) are zero where they
+    are missing, and stay so. Where the valid pixels do not span a plane, the least steep of the
+    best ones is taken.
+    """
+    y, x = (np.arange(side) - (side - 1) / 2 for side in images.shape[1:])
+    in_rows, in_columns = valid.sum(axis=2, dtype=float), valid.sum(axis=1, dtype=float)
+    count = np.maximum(in_rows.sum(axis=1), 1.0)
+    mean_y, mean_x = in_rows @ y / count, in_columns @ x / count
+    # moments about the centre of the valid pixels, where the constant separates from the slopes
+    yy = in_rows @ y**2 - count * mean_y**2
+    xx = in_columns @ x**2 - count * mean_x**2
+    xy = np.einsum("nij,i,j->n", valid, y, x, optimize=True) - count * mean_y * mean_x
+    total = images.sum(axis=(1, 2))
+    yz = images.sum(axis=2) @ y - mean_y * total
+    xz = images.sum(axis=1) @ x - mean_x * total
+    matrix = np.stack([yy, xy, xy, xx], axis=-1).reshape(-1, 2, 2)
+    slopes = np.linalg.pinv(matrix, hermitian=True) @ np.stack([yz, xz], axis=-1)[:, :, None]
+    for image, where, (down, across), my, mx in zip(
+        images, valid, slopes[:, :, 0], mean_y, mean_x, strict=True
+    ):
+        image -= np.add.outer(down * (y - my), across * (x - mx))
+        image[where == 0] = 0.0

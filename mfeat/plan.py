@@ -75,6 +75,7 @@ class VectorPlan:
     contour_estimator: str
     pitch: tuple[float, float]
     scale_unit: str
+    remove_tilt: bool
     dtype: np.dtype
     channels: tuple[str, ...] | None = None
     learned: dict[str, np.ndarray] | None = None
@@ -153,6 +154,7 @@ class VectorPlan:
             "contour_estimator": self.contour_estimator,
             "pitch": list(self.pitch),
             "scale_unit": self.scale_unit,
+            "remove_tilt": self.remove_tilt,
             "dtype": str(self.dtype),
             "channels": None if self.channels is None else list(self.channels),
         }

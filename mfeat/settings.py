@@ -47,7 +47,7 @@ def with_learned(
 
     Fields may be left out after `fit`; levels, pitch and new fields need another `fit`.
     """
-    for name in ("pitch", "scale_unit", "channels"):
+    for name in ("pitch", "scale_unit", "remove_tilt", "channels"):
         if getattr(plan, name) != getattr(fitted, name):
             raise ValueError(
                 f"parameters were changed after fit: {name} was {getattr(fitted, name)!r} when the "
@@ -102,6 +102,7 @@ def _resolve(estimator: Any) -> VectorPlan:
         contour_estimator=estimator.contour_estimator,
         pitch=_checks.pitch(estimator.pitch),
         scale_unit=estimator.scale_unit,
+        remove_tilt=bool(estimator.remove_tilt),
         dtype=np.dtype(estimator.dtype),
         channels=_channels(estimator.channels),
     )

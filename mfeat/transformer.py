@@ -60,6 +60,10 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
         length.
     curvature : tuple of float, default ()
         Scales at which minus half the Laplacian is taken, in data units per length^2.
+    remove_tilt : bool, default False
+        Whether each patch's least-squares plane is levelled before fields are taken, about its
+        mean. For height maps: tilt and coarse form otherwise enter the raw and smoothed fields
+        fully, slope through its magnitude, and bands and curvature through the patch's border.
     location_scale : bool, default True
         Whether the standard deviation of each field, and the mean of raw and slope fields, are
         features.
@@ -134,6 +138,7 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
         "band": "no_validation",
         "slope": "no_validation",
         "curvature": "no_validation",
+        "remove_tilt": ["boolean"],
         "location_scale": ["boolean"],
         "directional": ["boolean"],
         "connectivity": [StrOptions({"mean"}), Options(Integral, {4, 8})],
@@ -158,6 +163,7 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
         band=(1, 2),
         slope=(0, 2),
         curvature=(),
+        remove_tilt=False,
         location_scale=True,
         directional=False,
         connectivity="mean",
@@ -179,6 +185,7 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
         self.band = band
         self.slope = slope
         self.curvature = curvature
+        self.remove_tilt = remove_tilt
         self.location_scale = location_scale
         self.directional = directional
         self.connectivity = connectivity

@@ -103,7 +103,9 @@ def vectors(plan: VectorPlan, group: Group, stack: Stack) -> np.ndarray:
 
 def fields_of(plan: VectorPlan, stack: Stack) -> Iterator[tuple[Field, FieldStack]]:
     """Yield the fields of a stack, in the order of the plan."""
-    return derive(plan.fields, stack.values, stack.valid, plan.pitch, plan.scale_unit)
+    return derive(
+        plan.fields, stack.values, stack.valid, plan.pitch, plan.scale_unit, plan.remove_tilt
+    )
 
 
 def refusals(stack: Stack, min_valid: float) -> dict[int, str]:

@@ -9,7 +9,9 @@ from mfeat import minkowski_curves
 from mfeat.fields import Field, derive, gaussian_weights, scales, sigma_pixels
 
 
-def field_of(image, family, scale, *, valid=None, pitch=(1.0, 1.0), scale_unit="pitch"):
+def field_of(
+    image, family, scale, *, valid=None, pitch=(1.0, 1.0), scale_unit="pitch", remove_tilt=False
+):
     """Return one field of one image with its offset, NaN where it is not valid."""
     stack_valid = None if valid is None else valid[None].astype(np.uint8)
     [(_, relief)] = derive(
@@ -18,6 +20,7 @@ def field_of(image, family, scale, *, valid=None, pitch=(1.0, 1.0), scale_unit="
         stack_valid,
         pitch,
         scale_unit,
+        remove_tilt,
     )
     values = relief.centred[0] + relief.offset[0]
     return np.where(relief.valid[0] == 1, values, np.nan)
@@ -142,6 +145,39 @@ def test_values_beyond_computation_are_refused():
     expected = minkowski_curves(tiny, 5, field="curvature")
     got = minkowski_curves(tiny * 1e-90, 5, field="curvature", pitch=1e50)
     assert np.array_equal(got.area, expected.area)
+
+
+@pytest.mark.parametrize("missing", [0.0, 0.3])
+def test_levelling_removes_the_least_squares_plane_and_keeps_the_mean(image, missing):
+    # numpy.linalg.lstsq on the valid pixels
+    valid = np.random.default_rng(5).random(image.shape) >= missing
+    y, x = np.indices(image.shape)
+    tilted = image + 0.7 * y - 1.3 * x + 50.0
+    got = field_of(np.where(valid, tilted, 0.0), "raw", 0, valid=valid, remove_tilt=True)
+    basis = np.stack([np.ones(valid.sum()), y[valid], x[valid]], axis=1)
+    plane = basis @ np.linalg.lstsq(basis, tilted[valid], rcond=None)[0]
+    expected = tilted[valid] - plane + tilted[valid].mean()
+    assert got[valid] == pytest.approx(expected, abs=1e-9)
+    assert np.array_equal(np.isnan(got), ~valid)
+
+
+def test_levelling_a_plane_leaves_a_flat_field():
+    y, x = np.mgrid[:20, :30]
+    for family, scale in (("raw", 0.0), ("smooth", 2.0), ("slope", 1.0), ("band", 1.0)):
+        got = minkowski_curves(
+            0.3 * y - 2.0 * x + 7.0, 5, field=family, scale=scale, remove_tilt=True
+        )
+        assert got.area.tolist() == [1.0, 1.0, 1.0, 0.0, 0.0], family
+        assert not got.contour.any()
+
+
+def test_levelling_where_pixels_lie_on_one_line():
+    # a plane is not determined; the least steep one is taken, nothing blows up
+    image = np.full((6, 9), np.nan)
+    image[2:4] = np.arange(9.0)
+    valid = np.isfinite(image)
+    got = field_of(np.where(valid, image, 0.0), "raw", 0, valid=valid, remove_tilt=True)
+    assert got[valid] == pytest.approx(4.0)
 
 
 def test_kernel_weights():

@@ -141,6 +141,19 @@ def test_law_5_monotone_tone_changes_leave_rank_curves_of_the_raw_field(patches,
         assert not close(standard, vectors(changed), 1e-3)
 
 
+@pytest.mark.parametrize("rule", ["standard", "rank"])
+def test_tilt_does_not_matter_once_it_is_removed(patches, rule):
+    y, x = np.mgrid[:64, :64]
+    tilted = patches + 0.8 * (y - 31.5) - 0.5 * (x - 31.5)  # about the middle: the mean stays
+    options = {"level_rule": rule, "remove_tilt": True}
+    one, other = vectors(patches, **options), vectors(tilted, **options)
+    assert close(one, other, 1e-7)
+    # the other side: it does matter before, to bands as well, through the border of the patch
+    one, other = vectors(patches, level_rule=rule), vectors(tilted, level_rule=rule)
+    for family in ("raw", "smooth", "band", "slope"):
+        assert not close(select(one, family=(family,)), other, 1e-2), family
+
+
 def test_fixed_levels_do_follow_gain_and_offset(patches):
     options = {"level_rule": "fixed", "level_range": (-50.0, 250.0)}
     one = vectors(patches.astype(float), **options)
