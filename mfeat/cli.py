@@ -56,7 +56,7 @@ def main(argv: Sequence[str] | None = None) -> int:
             pitch=options.pitch,
             seed=options.seed,
         )
-    except (ValueError, TypeError, FileExistsError) as error:
+    except (ValueError, TypeError, FileExistsError, NotADirectoryError) as error:
         return _stopped(f"mfeat demo: {error}", 2)
     except OSError as error:
         return _stopped(

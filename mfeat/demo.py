@@ -46,8 +46,8 @@ def write_demo(
 
     Raises
     ------
-    FileExistsError
-        If the folder is not empty.
+    FileExistsError, NotADirectoryError
+        If the folder is not empty, or lies below a file.
     OSError
         If it cannot be written.
     ValueError, TypeError
@@ -74,9 +74,12 @@ def write_demo(
         raise FileExistsError(
             f"{folder} exists and is not an empty folder; name a new one, or empty it first"
         )
-    folder.absolute().parent.mkdir(parents=True, exist_ok=True)
+    parent = folder.absolute().parent
+    if any(above.exists() and not above.is_dir() for above in (parent, *parent.parents)):
+        raise NotADirectoryError(f"{folder} lies below a file; name a folder")
+    parent.mkdir(parents=True, exist_ok=True)
     # Written beside the folder and renamed at the end, so nothing half done bears its name.
-    unfinished = Path(tempfile.mkdtemp(prefix=f".{folder.name}-", dir=folder.absolute().parent))
+    unfinished = Path(tempfile.mkdtemp(prefix=f".{folder.name}-", dir=parent))
     try:
         _write_files(unfinished, panels, side, pitch, seed)
         unfinished.chmod(0o755)

@@ -23,7 +23,7 @@ from mfeat.vector import groups_of, rows_of, samples_of
 FIT_SAMPLE = 1 << 19
 
 # Groups handed to the workers at a time: their rows wait until all of them are done.
-_GROUPS_AT_ONCE = 64
+_GROUPS_AT_ONCE = 32
 
 
 class MinkowskiCurves(TransformerMixin, BaseEstimator):
@@ -109,10 +109,10 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
 
     Apart from rule "fitted", nothing is learned, and `transform` works without `fit`.
 
-    Memory beyond X and the result: about 25 MB a worker for the usual settings (patches are taken
-    in groups of some 260,000 pixels), or some 80 bytes a pixel of the largest patch if that is
-    more; and some 300 bytes a patch. `fit` with rule "fitted" keeps half a million values of each
-    field, or 16 a patch if that is more.
+    Memory beyond X and the result: about 40 MB a worker (patches are taken in groups of some
+    260,000 pixels, fewer where levels are many), or some 80 bytes a pixel of the largest patch if
+    that is more; and some 300 bytes a patch. `fit` with rule "fitted" keeps half a million values
+    of each field, or 16 a patch if that is more.
 
     Examples
     --------

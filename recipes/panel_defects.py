@@ -165,7 +165,8 @@ def draw(path: Path, images, labels, groups, shares, vectors, names, table) -> N
     right.set(
         xlabel="found",
         ylabel="true",
-        title=f"{len(labels)} patches, {len(np.unique(groups))} panels, none on both sides",
+        title=f"{len(labels)} patches of {len(np.unique(groups))} panels,\n"
+        "no panel in both training and test",
     )
     figure.savefig(path, dpi=110)
     plt.close(figure)

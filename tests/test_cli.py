@@ -1,6 +1,7 @@
 """The command line: exit codes, streams, and that it only delegates."""
 
 import csv
+import re
 import subprocess
 import sys
 
@@ -9,6 +10,7 @@ import pytest
 import tifffile
 
 import mfeat
+from mfeat import demo
 from mfeat.cli import main
 from mfeat.demo import MANIFEST_COLUMNS, write_demo
 from mfeat.surfaces import PANEL_CONDITIONS, simulate_panel
@@ -43,6 +45,58 @@ def test_nothing_is_overwritten(tmp_path, capsys):
     assert [path.name for path in tmp_path.iterdir()] == ["mine.txt"]
     with pytest.raises(FileExistsError, match="not an empty folder"):
         write_demo(tmp_path)
+
+
+@pytest.mark.parametrize(
+    ("failure", "code", "message"),
+    [
+        (OSError(28, "No space left on device"), 3, "cannot write .*: .*No space left"),
+        (KeyboardInterrupt(), 130, "interrupted; nothing is left of"),
+    ],
+)
+def test_a_run_that_stops_leaves_nothing(failure, code, message, tmp_path, capsys, monkeypatch):
+    write, written = tifffile.imwrite, []
+
+    def failing(path, *arguments, **options):
+        if len(written) == 5:
+            raise failure
+        written.append(path)
+        write(path, *arguments, **options)
+
+    monkeypatch.setattr(demo.tifffile, "imwrite", failing)
+    assert main(["demo", "--out", str(tmp_path / "new"), "--panels", "1", "--side", "16"]) == code
+    out, err = capsys.readouterr()
+    assert out == ""
+    assert re.search(message, err)
+    assert len(written) == 5
+    assert list(tmp_path.iterdir()) == []
+    # and the same command goes through once the cause is gone
+    monkeypatch.undo()
+    assert main(["demo", "--out", str(tmp_path / "new"), "--panels", "1", "--side", "16"]) == 0
+
+
+def test_a_folder_below_a_file_is_told_apart(tmp_path, capsys):
+    (tmp_path / "file").write_text("")
+    assert main(["demo", "--out", str(tmp_path / "file" / "x"), "--side", "16"]) == 2
+    assert "lies below a file; name a folder" in capsys.readouterr().err
+
+
+def test_a_reader_that_goes_away_is_no_crash(tmp_path, capsys, monkeypatch):
+    class Gone:
+        def write(self, text):
+            raise BrokenPipeError(32, "Broken pipe")
+
+        flush = write
+
+    monkeypatch.setattr("sys.stdout", Gone())
+    assert main(["demo", "--out", str(tmp_path / "new"), "--panels", "1", "--side", "16"]) == 3
+    assert "is written, but stdout failed" in capsys.readouterr().err
+
+
+def test_folders_are_paths():
+    for wrong in (None, 3, b"folder", ""):
+        with pytest.raises(TypeError, match="folder must be a path; got"):
+            write_demo(wrong)
 
 
 @pytest.mark.parametrize(

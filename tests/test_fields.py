@@ -6,6 +6,7 @@ import pytest
 from scipy import ndimage
 
 from mfeat import minkowski_curves
+from mfeat.counts import all_windows_ok
 from mfeat.fields import Field, derive, gaussian_weights, scales, sigma_pixels
 
 
@@ -178,6 +179,18 @@ def test_levelling_where_pixels_lie_on_one_line():
     valid = np.isfinite(image)
     got = field_of(np.where(valid, image, 0.0), "raw", 0, valid=valid, remove_tilt=True)
     assert got[valid] == pytest.approx(4.0)
+
+
+def test_shared_arrays_cannot_be_spoilt():
+    for array in (gaussian_weights(1.25), gaussian_weights(0.0), all_windows_ok(8, 9)[0]):
+        with pytest.raises(ValueError, match="read-only"):
+            array[:] = 3
+
+
+def test_a_negative_zero_scale_is_named_like_zero():
+    # names may not depend on what was asked for before
+    [minus] = scales("slope", (-0.0,), zero=True)
+    assert Field("slope", minus).name == Field("slope", 0.0).name == "slope_0"
 
 
 def test_kernel_weights():

@@ -26,18 +26,22 @@ def image():
     return np.random.default_rng(0).integers(0, 200, (3000, 2000)).astype(np.uint16)
 
 
-def test_counting_takes_bands_whatever_the_size(image):
+@pytest.mark.parametrize("dtype", ["uint8", "uint16", ">u2", "float16", "float32", "float64"])
+def test_counting_takes_bands_whatever_the_size_and_type(image, dtype):
+    given = image.astype(dtype)
     levels = np.arange(1, 33)
-    small, large = (peak_of(lambda x=x: count_patterns(x, levels)) for x in (image[:1500], image))
-    assert large < 13 * MB
-    assert large < small + 0.1 * MB
+    half, whole = (peak_of(lambda x=x: count_patterns(x, levels)) for x in (given[:1500], given))
+    assert whole < 21 * MB
+    assert whole < half + 0.1 * MB
+    assert peak_of(lambda: count_patterns(given.T, levels)) < 21 * MB
 
 
-def test_counting_with_missing_pixels_keeps_a_map_of_them(image):
+def test_counting_with_missing_pixels_takes_bands_too(image):
     levels = np.arange(1, 33)
-    assert peak_of(lambda: count_patterns(image, levels, image > 20)) < 13 * MB + 2.1 * image.size
-    heights = image.astype(np.float32)
-    assert peak_of(lambda: count_patterns(heights, levels)) < 13 * MB + 2.1 * image.size
+    mask = image > 20
+    assert peak_of(lambda: count_patterns(image, levels, mask)) < 21 * MB
+    holes = np.where(mask, image.astype(np.float32), np.nan)
+    assert peak_of(lambda: count_patterns(holes, levels)) < 21 * MB
 
 
 @pytest.mark.parametrize(("field", "scale"), [("raw", 0), ("band", 2), ("curvature", 2)])
@@ -58,7 +62,7 @@ def test_a_worker_takes_groups_whatever_the_number_of_patches(image, missing):
     small, large = (
         peak_of(lambda n=n: transformer.transform(patches[:n])) - 4 * 395 * n for n in (128, 960)
     )
-    assert large < 25 * MB
+    assert large < 40 * MB
     # a few hundred bytes a patch for its view of X; nothing of its pixels
     assert large < small + 500 * (960 - 128) + 3 * MB
 
@@ -66,3 +70,19 @@ def test_a_worker_takes_groups_whatever_the_number_of_patches(image, missing):
 def test_a_large_patch_takes_some_bytes_a_pixel(image):
     patch = image[None, :1500, :1500]
     assert peak_of(lambda: MinkowskiCurves().transform(patch)) < 80 * patch.size
+
+
+@pytest.mark.parametrize(
+    ("shape", "options"), [((8000, 8, 8), {"smooth": (1, 2)}), ((600, 16, 16), {"levels": 500})]
+)
+def test_small_patches_and_many_levels_stay_within_the_bound(image, shape, options):
+    patches = image.ravel()[: np.prod(shape)].reshape(shape)
+    transformer = MinkowskiCurves(**options)
+    peak = peak_of(lambda: transformer.transform(patches)) - transformer.transform(patches).nbytes
+    assert peak < 60 * MB
+
+
+def test_learning_levels_keeps_a_bounded_sample(image):
+    # half a million values of each of the eight fields, sorted once
+    patches = image[:2048, :1920].reshape(32, 64, 30, 64).swapaxes(1, 2).reshape(-1, 64, 64)
+    assert peak_of(lambda: MinkowskiCurves(level_rule="fitted").fit(patches)) < 80 * MB

@@ -9,6 +9,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from mfeat import MinkowskiCurves, PatchGrid
+from mfeat.patches import Patches
 
 IMAGE = np.arange(10 * 13).reshape(10, 13)
 
@@ -382,3 +383,30 @@ def test_a_patch_without_valid_pixels_has_no_label():
     patches = PatchGrid(4).cut(image)
     with pytest.raises(ValueError, match="the patch at row 4, column 0 has no valid pixel"):
         patches.label(np.zeros(image.shape, dtype=int))
+
+
+def test_slices_are_patches_too():
+    patches = PatchGrid(size=4).cut(np.arange(64.0).reshape(8, 8))
+    part = patches[1:3]
+    assert isinstance(part, Patches)
+    assert part.positions.tolist() == [[0, 4], [4, 0]]
+    assert part.label(np.eye(8, dtype=int)).labels.tolist() == [0, 0]
+    assert len(list(part)) == len(part) == 2
+    for wrong in (True, 1.0, "a", np.array([0, 1])):
+        with pytest.raises(TypeError, match="an integer or a slice in brackets; got"):
+            patches[wrong]
+
+
+@pytest.mark.parametrize(
+    ("background", "dtype"), [(300, "uint8"), (-1, "uint8"), (5, "bool"), (2**70, "int64")]
+)
+def test_a_background_that_no_pixel_can_have_is_refused(background, dtype):
+    patches = PatchGrid(size=4).cut(np.zeros((8, 8)))
+    with pytest.raises(ValueError, match=r"background must be a label that .* can hold"):
+        patches.label(np.zeros((8, 8), dtype), "any", background=background)
+
+
+@pytest.mark.parametrize("shape", [(4,), 4.5, None, "ab", (4, 4, 4), (4.0, 4.0)])
+def test_shapes_are_two_integers(shape):
+    with pytest.raises((TypeError, ValueError), match=r"shape(\[0\])? must be"):
+        PatchGrid(size=2).positions(shape)
