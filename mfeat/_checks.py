@@ -170,7 +170,7 @@ def representable(values: np.ndarray, valid: np.ndarray | None, name: str) -> No
     """Refuse pixel values with which fields cannot be computed in float64.
 
     64-bit integers beyond 2**53 would be rounded; squares and differences of floating-point values
-    beyond 1e100 overflow, and those of values all within 1e-100 of each other vanish.
+    beyond 1e75 overflow, and those of values all within 1e-75 of each other vanish.
     """
     if values.dtype.itemsize < 8:
         return
@@ -179,14 +179,14 @@ def representable(values: np.ndarray, valid: np.ndarray | None, name: str) -> No
         return
     low, high = seen.min(), seen.max()
     if values.dtype.kind == "f":
-        if max(-low, high) > 1e100:
+        if max(-low, high) > 1e75:
             raise ValueError(
                 f"{name} reaches from {low:.3g} to {high:.3g}; fields cannot be computed beyond "
-                "1e100. Set no-data values to NaN, or mask them"
+                "1e75. Set no-data values to NaN, or mask them"
             )
-        if 0.0 < high - low < 1e-100:
+        if 0.0 < high - low < 1e-75:
             raise ValueError(
-                f"{name} reaches from {low!r} to {high!r}; differences below 1e-100 vanish in "
+                f"{name} reaches from {low!r} to {high!r}; differences below 1e-75 vanish in "
                 "fields. Multiply the values by a power of ten"
             )
     elif int(low) < -(2**53) or int(high) > 2**53:

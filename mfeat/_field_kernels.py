@@ -108,7 +108,7 @@ def slope_stack(images, valid, pitch_rows, pitch_cols, slope, slope_valid):
                 d = images[k, i + 1, j + 1]
                 across = ((b - a) + (d - c)) / (2.0 * pitch_cols)
                 down = ((c - a) + (d - b)) / (2.0 * pitch_rows)
-                slope[k, i, j] = np.hypot(across, down)
+                slope[k, i, j] = np.sqrt(across * across + down * down)
                 slope_valid[k, i, j] = (
                     valid[k, i, j]
                     & valid[k, i, j + 1]

@@ -61,6 +61,14 @@ class FieldStack:
     raw: Callable[[], np.ndarray] | None = None
     constant: np.ndarray | None = None
 
+    @classmethod
+    def join(cls, parts: "list[FieldStack]") -> "FieldStack":
+        """Return several stacks of derived fields of one size as one, in their order."""
+        if len(parts) == 1:
+            return parts[0]
+        names = ("values", "valid", "offset", "rounding")
+        return cls(*(np.concatenate([getattr(part, name) for part in parts]) for name in names))
+
     @property
     def derived(self) -> bool:
         """Whether the values are computed, and without their offset."""
@@ -204,28 +212,30 @@ def _level_range(level_range: Any, rule: str) -> tuple[float, float]:
 def place_levels(stack: FieldStack, rule: str, values: np.ndarray) -> PlacedLevels:
     """Place levels, given in the units of `rule`, on each field of a stack.
 
-    For rule "fitted", `values` are the learned levels in data units, as for "fixed".
+    `values` are the same for all fields (T,), or of each its own (n, T). For rule "fitted" they
+    are the learned levels in data units, as for "fixed".
     """
     derived = stack.derived
+    values = np.broadcast_to(values, (len(stack.offset), values.shape[-1]))
     if rule == "standard":
         own = stack.mean[:, None] + values * stack.deviation[:, None]
     elif rule == "rank":
         own = _ranked(stack, values)
     else:
-        own = values - stack.offset[:, None] if derived else np.tile(values, (len(stack.offset), 1))
+        own = values - stack.offset[:, None] if derived else values
     if derived or rule == "standard":
         own = own - np.maximum(TIE * stack.deviation, stack.rounding)[:, None]
     if not derived and rule == "standard":
         own = own + stack.offset[:, None]  # the pixels kept their offset and their type
     if rule in ("fixed", "fitted"):
-        shown = np.broadcast_to(values, own.shape)
+        shown = values
     else:
         shown = own + stack.offset[:, None] if derived else own
     thresholds, reach = thresholds_for(stack.values.dtype, own)
     if stack.flat.any() and (derived or rule in ("standard", "rank")):
         thresholds, shown = np.array(thresholds), np.array(shown, dtype=np.float64)
         for k in np.flatnonzero(stack.flat):
-            reach[k] = _reached_by_flat(stack, k, rule, values)
+            reach[k] = _reached_by_flat(stack, k, rule, values[k])
             thresholds[k] = stack.values[k][stack.valid[k] == 1].min()
             if rule in ("standard", "rank"):
                 level = stack.offset[k] + stack.mean[k]
@@ -246,11 +256,11 @@ def _reached_by_flat(stack: FieldStack, k: int, rule: str, values: np.ndarray) -
 
 def _ranked(stack: FieldStack, fractions: np.ndarray) -> np.ndarray:
     """Return order statistics of each field; being pixel values, they follow any tone change."""
-    out = np.zeros((len(stack.values), len(fractions)), dtype=stack.values.dtype)
+    out = np.zeros(fractions.shape, dtype=stack.values.dtype)
     for k in range(len(stack.values)):
         inside = stack.values[k][stack.valid[k] == 1]
         if inside.size:  # an image without a valid pixel is marked by its caller
-            out[k] = order_statistics(np.sort(inside), fractions)
+            out[k] = order_statistics(np.sort(inside), fractions[k])
     return out
 
 

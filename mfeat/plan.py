@@ -103,6 +103,17 @@ class VectorPlan:
         return sum(8 * (len(self.level_values[field.name]) + 1) for field in self.fields)
 
     @cached_property
+    def columns(self) -> dict[Field, int]:
+        """Where the numbers of each field start."""
+        per_level = len(self.level_functionals())
+        found, column = {}, 0
+        for field in self.fields:
+            found[field] = column
+            count = len(self.level_values[field.name])
+            column += len(self.moments(field)) + per_level * count
+        return found
+
+    @cached_property
     def length(self) -> int:
         """How many numbers the vector of one channel has."""
         per_level = len(self.level_functionals())

@@ -80,7 +80,7 @@ class Group:
         if valid is None and values.dtype.kind == "f":  # a quick look at all, for the usual case
             low, high = values.min(axis=(1, 2)), values.max(axis=(1, 2))
             relief = high - low
-            if max(-low.min(), high.max()) <= 1e100 and (relief[relief > 0.0] >= 1e-100).all():
+            if max(-low.min(), high.max()) <= 1e75 and (relief[relief > 0.0] >= 1e-75).all():
                 return
         for place, image in enumerate(values):
             one = None if valid is None else valid[place]

@@ -29,6 +29,9 @@ from mfeat.levels import FieldStack, PlacedLevels, place_levels, sample_of
 from mfeat.plan import DIRECTIONS, VectorPlan, learned_key
 from mfeat.stacks import Collected, Group, Stack, group_patches, valid_fractions
 
+#: Derived fields of up to this many pixels are joined and worked on together.
+JOIN_PIXELS = 1 << 15
+
 
 def count_stack(
     fields: FieldStack, levels: PlacedLevels, missing: bool
@@ -77,28 +80,50 @@ def vectors(plan: VectorPlan, group: Group, stack: Stack) -> np.ndarray:
 
     An image in one of whose fields no window counts gets NaN for that field.
     """
-    out = np.empty((len(stack.values), plan.length))
+    count = len(stack.values)
+    out = np.empty((count, plan.length))
     waiting: dict[int, list] = {}  # by number of levels: functionals of many fields in one go
-    functionals = len(plan.level_functionals())
-    column = 0
-    for field, fields in fields_of(plan, stack):
-        levels = place_levels(fields, plan.level_rule, plan.levels_of(field, group.channel_name))
+    for names, fields in _joined(plan, group, stack):
+        values = np.stack([plan.levels_of(field, group.channel_name) for field in names])
+        levels = place_levels(fields, plan.level_rule, np.repeat(values, count, axis=0))
         table, windows = count_stack(fields, levels, stack.valid is not None)
-        nothing = windows == 0
-        for moment in plan.moments(field):
-            number = fields.offset + fields.mean if moment == "mean" else fields.deviation
-            out[:, column] = np.where(nothing, np.nan, number) if nothing.any() else number
-            column += 1
-        count = levels.thresholds.shape[1]
-        waiting.setdefault(count, []).append((column, table, windows))
-        column += count * functionals
-    for count, parts in waiting.items():
+        for k, field in enumerate(names):
+            own = slice(k * count, (k + 1) * count)
+            column = plan.columns[field]
+            for moment in plan.moments(field):
+                number = fields.deviation if moment == "std" else fields.offset + fields.mean
+                out[:, column] = number[own]
+                if stack.valid is not None:
+                    out[windows[own] == 0, column] = np.nan
+                column += 1
+            part = (column, table[own], windows[own])
+            waiting.setdefault(values.shape[1], []).append(part)
+    for number, parts in waiting.items():
         columns, tables, windows = zip(*parts, strict=True)
         found = densities(plan, levels_from_top(np.stack(tables)), np.stack(windows))
         # (functional, field, image, level) to the columns of (field, functional, level)
-        places = np.add.outer(columns, np.arange(functionals * count))
-        out[:, places.ravel()] = found.transpose(2, 1, 0, 3).reshape(len(out), -1)
+        places = np.add.outer(columns, np.arange(len(found) * number))
+        out[:, places.ravel()] = found.transpose(2, 1, 0, 3).reshape(count, -1)
     return out
+
+
+def _joined(
+    plan: VectorPlan, group: Group, stack: Stack
+) -> Iterator[tuple[list[Field], FieldStack]]:
+    """Yield the fields of a stack; few pixels of equal size and number of levels as one stack.
+
+    It makes no difference to any value. For one patch, calls cost more than pixels, and this saves
+    two calls of three.
+    """
+    alike: dict[tuple, list[tuple[Field, FieldStack]]] = {}
+    for field, fields in fields_of(plan, stack):
+        if fields.derived and fields.values.size <= JOIN_PIXELS:
+            number = len(plan.levels_of(field, group.channel_name))
+            alike.setdefault((fields.values.shape, number), []).append((field, fields))
+        else:
+            yield [field], fields
+    for parts in alike.values():
+        yield [field for field, _ in parts], FieldStack.join([fields for _, fields in parts])
 
 
 def fields_of(plan: VectorPlan, stack: Stack) -> Iterator[tuple[Field, FieldStack]]:

@@ -134,17 +134,17 @@ def test_large_offsets_lose_no_digits(image):
 
 def test_values_beyond_computation_are_refused():
     # squares, differences over the pitch and their moments would overflow, or vanish
-    for large in (1e101, 1e308):
+    for large in (1e76, 1e308):
         image = np.array([[large, -large, large]] * 3)
-        with pytest.raises(ValueError, match=r"image reaches from .*beyond 1e100"):
+        with pytest.raises(ValueError, match=r"image reaches from .*beyond 1e75"):
             minkowski_curves(image, levels=[0.0])
-    with pytest.raises(ValueError, match=r"differences below 1e-100 vanish.*power of ten"):
+    with pytest.raises(ValueError, match=r"differences below 1e-75 vanish.*power of ten"):
         minkowski_curves(np.array([[1e-170, 0.0, 2e-170]] * 3), field="slope")
-    near = minkowski_curves(np.array([[1e99, -1e99, 1e99]] * 3), field="slope", pitch=1e-59)
+    near = minkowski_curves(np.array([[1e75, -1e75, 1e75]] * 3), field="slope", pitch=1e-59)
     assert np.isfinite(near.levels).all()
     tiny = np.random.default_rng(4).random((9, 9))
     expected = minkowski_curves(tiny, 5, field="curvature")
-    got = minkowski_curves(tiny * 1e-90, 5, field="curvature", pitch=1e50)
+    got = minkowski_curves(tiny * 1e-74, 5, field="curvature", pitch=1e59)
     assert np.array_equal(got.area, expected.area)
 
 

@@ -1381,3 +1381,20 @@ def test_curves_and_vectors_agree_to_the_bit():
         for functional in ("area", "contour", "euler"):
             values = [row[f"{field}_{functional}_{k:02d}"] for k in range(6)]
             assert getattr(curves, functional).tolist() == values, (field, functional)
+
+
+@pytest.mark.parametrize("rule", ["standard", "rank", "fitted"])
+def test_joining_fields_changes_no_bit(monkeypatch, rule):
+    # the fast way for few pixels against field by field; missing pixels and a flat patch included
+    X = noise(5, (12, 13))
+    X[1, 2:4, 3] = np.nan
+    X[2] = 7.0
+    options = {"smooth": (1, 2), "band": (1,), "slope": (0, 1), "curvature": (1,)}
+    whole = MinkowskiCurves(
+        levels={"raw": 5, "smooth": 5, "band": 4, "slope": 5, "curvature": 4},
+        level_rule=rule, dtype="float64", min_valid=0.0, **options,
+    ).fit(X)  # fmt: skip
+    monkeypatch.setattr(vector, "JOIN_PIXELS", 0)
+    apart = whole.transform(X)
+    monkeypatch.setattr(vector, "JOIN_PIXELS", 10**9)
+    np.testing.assert_array_equal(whole.transform(X), apart)
