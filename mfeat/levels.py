@@ -1,4 +1,4 @@
-"""Level rules: where the levels of a field lie, and what happens on fields without stack.
+"""Level rules: where the levels of a field lie, and what happens on fields without relief.
 
 "standard": mean + v * standard deviation of the field; "rank": order statistics of the field;
 "fixed": data units; "fitted": quantiles learned over a training set. The first two follow each
@@ -96,7 +96,7 @@ class FieldStack:
 
     @cached_property
     def flat(self) -> np.ndarray:
-        """Which fields have no stack."""
+        """Which fields have no relief."""
         even = self._raw_moments[1] <= self.rounding if self.constant is None else self.constant
         return even & ~self.empty if even.any() else even
 
@@ -174,12 +174,14 @@ def level_values(levels: Any, rule: str, level_range: Any = None) -> np.ndarray:
             f"{_checks.show(given)}; give one of the two"
         )
     values = given.astype(np.float64)
-    rounded = [int(v) != int(g) for v, g in zip(values, given, strict=True)]
-    if given.dtype.kind != "f" and any(rounded):
-        raise ValueError(
-            f"levels[{rounded.index(True)}] = {given[rounded.index(True)]} is beyond 2**53 and "
-            "would be rounded; count_patterns takes such levels exactly"
-        )
+    if given.dtype.kind != "f":
+        rounded = [int(v) != int(g) for v, g in zip(values, given, strict=True)]
+        if any(rounded):
+            first = rounded.index(True)
+            raise ValueError(
+                f"levels[{first}] = {given[first]} is beyond 2**53 and would be rounded; "
+                "count_patterns takes such levels exactly"
+            )
     if rule in ("rank", "fitted") and (values[0] < 0.0 or values[-1] > 1.0):
         raise ValueError(
             f'levels of rule "{rule}" are fractions of the pixels, from 0 to 1; '
