@@ -179,7 +179,7 @@ def test_law_7_missing_pixels_never_enter_a_count(patches):
     values = patches.astype(float)
     one = vectors(np.where(missing, np.nan, values), min_valid=0.0)
     two = vectors(np.ma.MaskedArray(np.where(missing, 1e9, values), missing), min_valid=0.0)
-    three = vectors(np.ma.MaskedArray(np.where(missing, -4, patches), missing), min_valid=0.0)
+    three = vectors(np.ma.MaskedArray(np.where(missing, 4, patches), missing), min_valid=0.0)
     assert identical(one, two)
     assert close(one, three)
     assert all(np.isfinite(column).all() for column in one.values())
