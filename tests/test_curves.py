@@ -181,6 +181,16 @@ def test_framed_curves_count_isolated_objects():
         (ValueError, r"edges must be one of", (8,), {"edges": "open"}),
         (ValueError, r"pitch must be a finite number > 0; got 0", (8,), {"pitch": 0.0}),
         (ValueError, r"pitch must be a finite number > 0; got nan", (8,), {"pitch": np.nan}),
+        (TypeError, r"unit must be a string; got None", (8,), {"unit": None}),
+        (TypeError, r"value_unit must be a string; got 1", (8,), {"value_unit": 1}),
+        (TypeError, r"remove_tilt must be True or False; got 1", (8,), {"remove_tilt": 1}),
+        (ValueError, r"pitch must be one number or .*got 0 numbers", (8,), {"pitch": []}),
+        (
+            ValueError,
+            r"level_range\[1\] must be <= 1e\+100; got 1e\+200",
+            (8, "fixed"),
+            {"level_range": (0, 1e200)},
+        ),
         (ValueError, r"mask of image has shape", (8,), {"mask": np.ones((2, 2), bool)}),
     ],
 )
@@ -198,3 +208,9 @@ def test_images_without_data_are_refused():
         minkowski_curves(lonely)
     with pytest.raises(ValueError, match=r"holds inf at row 2, column 3"):
         minkowski_curves(np.where(np.arange(20).reshape(4, 5) == 13, np.inf, 0.0))
+
+
+def test_a_zero_dimensional_pitch_is_a_number():
+    image = np.random.default_rng(5).random((12, 12))
+    expected = minkowski_curves(image, 5, pitch=0.5)
+    assert np.array_equal(minkowski_curves(image, 5, pitch=np.array(0.5)).euler, expected.euler)

@@ -1113,6 +1113,7 @@ SPOILT[1, 4, 5] = -np.inf
     [
         (X[0], ValueError, r"shape \(n, h, w\).* 2 dimensions, shape \(8, 8\).*X\[np.newaxis\]"),
         (X[0, 0], ValueError, "got an array with 1 dimensions"),
+        ({"a": X[0]}, TypeError, r"X is a dict; give the images in a list"),
         (X[None, None], ValueError, "got an array with 5 dimensions"),
         (X[:0], ValueError, r"X holds no patch: found 0 sample\(s\)"),
         ([], ValueError, "X holds no patch: the list is empty"),
