@@ -59,11 +59,9 @@ def main(argv: Sequence[str] | None = None) -> int:
     except (ValueError, TypeError, FileExistsError, NotADirectoryError) as error:
         return _stopped(f"mfeat demo: {error}", 2)
     except OSError as error:
-        return _stopped(
-            f"mfeat demo: cannot write {options.out}: {error}; nothing is left of it", 3
-        )
+        return _stopped(f"mfeat demo: no file is left in {options.out}: {error}", 3)
     except KeyboardInterrupt:
-        return _stopped(f"mfeat demo: interrupted; nothing is left of {options.out}", 130)
+        return _stopped(f"mfeat demo: interrupted; no file is left in {options.out}", 130)
     try:
         print(manifest, flush=True)
     except OSError as error:

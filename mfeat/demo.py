@@ -14,6 +14,8 @@ from tqdm import tqdm
 from mfeat import _checks
 from mfeat.surfaces import PANEL_CONDITIONS, simulate_panel
 
+MANIFEST = "manifest.csv"
+
 #: Columns of the manifest. Paths are relative to its folder; the pitch is in `unit`.
 MANIFEST_COLUMNS = ("path", "label", "group", "truth", "pitch_x", "pitch_y", "unit")
 
@@ -26,8 +28,8 @@ def write_demo(
     Parameters
     ----------
     folder : path-like
-        Made if it does not exist; refused if it holds anything, so that nothing is overwritten. It
-        appears when it is complete; an interrupted run leaves nothing.
+        Made if it does not exist; refused if it holds anything, so that nothing is overwritten.
+        The files appear when all are complete; an interrupted run leaves none of them.
     panels : int, default 4
         Panels of each condition, up to 10,000.
     side : int, default 512
@@ -78,16 +80,22 @@ def write_demo(
     if any(above.exists() and not above.is_dir() for above in (parent, *parent.parents)):
         raise NotADirectoryError(f"{folder} lies below a file; name a folder")
     parent.mkdir(parents=True, exist_ok=True)
-    # Written beside the folder and renamed at the end, so nothing half done bears its name.
-    unfinished = Path(tempfile.mkdtemp(prefix=f".{folder.name}-", dir=parent))
+    # Written aside and renamed at the end, so nothing half done bears its final name.
+    existing = folder.is_dir()
+    target = folder.resolve() if existing else folder
+    aside = Path(tempfile.mkdtemp(prefix=".unfinished-", dir=target if existing else parent))
     try:
-        _write_files(unfinished, panels, side, pitch, seed)
-        unfinished.chmod(0o755)
-        unfinished.replace(folder)
-    except BaseException:
-        shutil.rmtree(unfinished, ignore_errors=True)
-        raise
-    return folder / "manifest.csv"
+        work = aside / "demo"
+        work.mkdir()
+        _write_files(work, panels, side, pitch, seed)
+        if existing:  # a folder of the user's keeps its place and its permissions
+            for name in ("heights", "truth", MANIFEST):
+                (work / name).rename(target / name)
+        else:
+            work.rename(target)
+    finally:
+        shutil.rmtree(aside, ignore_errors=True)
+    return folder / MANIFEST
 
 
 def _write_files(folder: Path, panels: int, side: int, pitch: float, seed: int) -> None:
@@ -104,7 +112,7 @@ def _write_files(folder: Path, panels: int, side: int, pitch: float, seed: int) 
         rows.append(
             (f"heights/{name}.tif", condition, name, f"truth/{name}.tif", pitch, pitch, "um")
         )
-    with (folder / "manifest.csv").open("w", newline="", encoding="utf-8") as stream:
+    with (folder / MANIFEST).open("w", newline="", encoding="utf-8") as stream:
         writer = csv.writer(stream, lineterminator="\n")
         writer.writerow(MANIFEST_COLUMNS)
         writer.writerows(rows)

@@ -41,7 +41,7 @@ ROUNDING = 1e-12
 _SHRINK = {"raw": 0, "smooth": 0, "band": 0, "slope": 1, "curvature": 2}
 
 #: By how much a field's stencil can multiply an error of the pixels: the sum of its weights' sizes.
-_GAIN = {"raw": 1.0, "smooth": 1.0, "band": 2.0, "slope": 2.0, "curvature": 4.0}
+_GAIN = {"raw": 1.0, "smooth": 1.0, "band": 2.0, "slope": 2.0 * math.sqrt(2.0), "curvature": 4.0}
 
 
 class Field(NamedTuple):
@@ -210,7 +210,9 @@ def derive(
     # Half of each before they are added: the sum of two large values would overflow.
     offset = low.astype(np.float64) / 2 + high.astype(np.float64) / 2
     half_range = high.astype(np.float64) / 2 - low.astype(np.float64) / 2
-    error = np.maximum(ROUNDING * half_range, 2.0**-52 * (np.abs(offset) + half_range))
+    error = ROUNDING * half_range
+    if values.dtype.kind == "f":  # integers are exact, however far from zero
+        error = np.maximum(error, 2.0**-52 * (np.abs(offset) + half_range))
     nothing = np.zeros(len(values))
     source = _Smoothings(values, valid, missing, offset, pitch, scale_unit, remove_tilt)
     for field in fields:
@@ -303,8 +305,9 @@ def level(images: np.ndarray, valid: np.ndarray) -> None:
     xx = in_columns @ x**2 - count * mean_x**2
     xy = np.einsum("nij,i,j->n", valid, y, x, optimize=True) - count * mean_y * mean_x
     total = images.sum(axis=(1, 2))
-    yz = images.sum(axis=2) @ y - mean_y * total
-    xz = images.sum(axis=1) @ x - mean_x * total
+    # not a matrix product: its last bit would depend on the number of images
+    yz = (images.sum(axis=2) * y).sum(axis=1) - mean_y * total
+    xz = (images.sum(axis=1) * x).sum(axis=1) - mean_x * total
     matrix = np.stack([yy, xy, xy, xx], axis=-1).reshape(-1, 2, 2)
     slopes = np.linalg.pinv(matrix, hermitian=True) @ np.stack([yz, xz], axis=-1)[:, :, None]
     for image, where, (down, across), my, mx in zip(

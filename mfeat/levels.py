@@ -29,7 +29,7 @@ DEFAULT_RANGES = {"standard": (-2.5, 2.5), "rank": (0.0, 1.0), "fitted": (0.0, 1
 #: Levels lie this many standard deviations (or the rounding error of the field, if that is more)
 #: below their nominal place, so that pixels tied with a level fall on the same side of it whatever
 #: the rounding. Levels of rules "rank", "fixed" and "fitted" on raw fields stay where they are:
-#: pixels there are compared exactly.
+#: pixels there are compared exactly (unless their tilt is removed, which makes a derived field).
 TIE = 1e-9
 
 
@@ -289,10 +289,12 @@ def pooled_levels(samples: list[np.ndarray], fractions: np.ndarray) -> np.ndarra
 
 
 def sample_of(stack: FieldStack, k: int, size: int) -> np.ndarray:
-    """Return `size` evenly spaced order statistics of field k, with its offset, as float64.
+    """Return `size` evenly spaced order statistics of field k, in data units, as float64.
 
     They stand for the field in the pool of `pooled_levels`: patches weigh alike however many
     pixels they have, and the memory of `fit` does not grow with the size of the patches.
     """
-    ranked = np.sort(stack.centred[k][stack.valid[k] == 1]) + stack.offset[k]
+    ranked = np.sort(stack.values[k][stack.valid[k] == 1]).astype(np.float64)
+    if stack.derived:  # raw pixels kept their offset, and levels on them must be pixel values
+        ranked += stack.offset[k]
     return ranked[((np.arange(size) + 0.5) * len(ranked) / size).astype(np.int64)]

@@ -43,9 +43,9 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
         gives either one per field family, e.g. ``{"raw": 32, "slope": 8}``.
     level_rule : {"standard", "rank", "fixed", "fitted"}, default "standard"
         "standard": standard deviations of each patch's field from its mean; gain and offset of the
-        image do not matter. "rank": fractions of the field's pixels; on the raw field no monotone
-        tone change matters. "fixed": data units of the field. "fitted": quantiles of the field over
-        the training patches, learned in `fit`.
+        image do not matter. "rank": fractions of the field's pixels; on the raw field (tilt not
+        removed) no monotone tone change matters. "fixed": data units of the field. "fitted":
+        quantiles of the field over the training patches, learned in `fit`.
     level_range : (float, float) or dict, optional
         Range of a number of levels in the units of the rule; default (-2.5, 2.5) for "standard",
         (0, 1) for "rank" and "fitted"; required for "fixed". A dict gives one per field family.
@@ -87,7 +87,8 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
         Smallest share of 2x2 windows with four valid pixels that a patch may have, 0 to 1. In any
         case each field needs at least one such window.
     below_min_valid : {"error", "nan"}, default "error"
-        What becomes of a patch below it: a ValueError that lists all such patches, or a row of NaN.
+        What becomes of a patch below it: a ValueError that lists all such patches, or a row of
+        NaN. Infinite pixels, and values too large or too fine to compute with, always raise.
     dtype : {"float32", "float64"}, default "float32"
         Type of the output.
     n_jobs : int, optional
@@ -109,10 +110,11 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
 
     Apart from rule "fitted", nothing is learned, and `transform` works without `fit`.
 
-    Memory beyond X and the result: about 40 MB a worker (patches are taken in groups of some
-    260,000 pixels, fewer where levels are many), or some 80 bytes a pixel of the largest patch if
-    that is more; and some 300 bytes a patch. `fit` with rule "fitted" keeps half a million values
-    of each field, or 16 a patch if that is more.
+    Memory beyond X and the result, with the default settings: about 40 MB a worker (patches are
+    taken in groups of some 260,000 pixels, fewer where levels are many), or some 80 bytes a pixel
+    of the largest patch if that is more, and some 400 bytes a patch (1000 if it is masked). Each
+    further scale adds 8 bytes a pixel of a group, each level and field some hundred bytes. `fit`
+    with rule "fitted" keeps half a million values of each field, or 16 a patch if that is more.
 
     Examples
     --------
@@ -345,24 +347,28 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
         """Learn levels as order statistics of each field of each channel over all patches."""
         size = min(max(FIT_SAMPLE // n_patches, 16), 4096)
         options = (size, float(self.min_valid))
-        pools: dict[str, list[np.ndarray]] = {}
+        pools: dict[str, dict[int, np.ndarray]] = {}  # samples by key and position
         refused = []
         done = self._parallel(samples_of, plan, groups, options)
         for group, (pool, reasons) in zip(groups, done, strict=True):
             for key, found in pool.items():
-                pools.setdefault(key, []).extend(found)
+                by_position = {group.positions[place]: one for place, one in found.items()}
+                pools.setdefault(key, {}).update(by_position)
             refused.extend(_told(group, reasons))
         self._complain(refused, n_patches)
+        turned_away = {position for position, _, _ in refused}  # in any channel or field
         learned = {}
         for channel in plan.channels or (None,):
             for field in plan.fields:
                 key = learned_key(field, channel)
-                if not pools[key]:
+                accepted = [
+                    one for position, one in pools[key].items() if position not in turned_away
+                ]
+                if not accepted:
                     raise ValueError(
-                        f"no accepted patch has a valid pixel of field {key}, so no level can be "
-                        "learned"
+                        f"no patch is accepted, so no level of field {key} can be learned"
                     )
-                learned[key] = pooled_levels(pools[key], plan.level_values[field.name])
+                learned[key] = pooled_levels(accepted, plan.level_values[field.name])
         return learned
 
     def _complain(self, refused: list[tuple[int, int, str]], n_patches: int) -> None:

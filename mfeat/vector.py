@@ -32,6 +32,8 @@ from mfeat.stacks import Collected, Group, Stack, group_patches, valid_fractions
 #: Derived fields of up to this many pixels are joined and worked on together.
 JOIN_PIXELS = 1 << 15
 
+NO_WINDOW = "one of its fields has no window of four valid pixels"
+
 
 def count_stack(
     fields: FieldStack, levels: PlacedLevels, missing: bool
@@ -160,7 +162,9 @@ def rows_of(plan: VectorPlan, group: Group, min_valid: float) -> tuple[np.ndarra
         found = vectors(plan, group, stack)
         refused |= refusals(stack, min_valid)
         for place in stack.places[np.isnan(found).any(axis=1)].tolist():
-            refused.setdefault(place, "one of its fields has no window of four valid pixels")
+            refused.setdefault(place, NO_WINDOW)
+        unwanted = np.isin(stack.places, list(refused))
+        found[unwanted] = np.nan
         size = np.abs(found)
         limits = np.finfo(plan.dtype)
         fits = (size <= limits.max) & ((size >= limits.tiny) | (size == 0.0)) | np.isnan(size)
@@ -177,25 +181,28 @@ def rows_of(plan: VectorPlan, group: Group, min_valid: float) -> tuple[np.ndarra
 
 def samples_of(
     plan: VectorPlan, group: Group, options: tuple[int, float]
-) -> tuple[dict[str, list[np.ndarray]], dict[int, str]]:
+) -> tuple[dict[str, dict[int, np.ndarray]], dict[int, str]]:
     """Return samples of each field of the images of a group, from which levels are learned.
 
-    `options` are the size of a sample and `min_valid`. Images that it refuses are not sampled;
-    they are returned by place, with the reason.
+    `options` are the size of a sample and `min_valid`. Samples are by key of the learned levels and
+    place in the group. Images that `rows_of` would refuse are not sampled; they are returned by
+    place, with the reason.
     """
     size, min_valid = options
-    pool: dict[str, list[np.ndarray]] = {
-        learned_key(field, group.channel_name): [] for field in plan.fields
+    pool: dict[str, dict[int, np.ndarray]] = {
+        learned_key(field, group.channel_name): {} for field in plan.fields
     }
     refused: dict[int, str] = {}
     for stack in group.stacks():
-        turned_away = refusals(stack, min_valid)
-        refused |= turned_away
-        kept = [k for k, place in enumerate(stack.places.tolist()) if place not in turned_away]
+        refused |= refusals(stack, min_valid)
         for field, fields in fields_of(plan, stack):
-            key = learned_key(field, group.channel_name)
-            with_pixels = [k for k in kept if fields.valid[k].any()]
-            pool[key].extend(sample_of(fields, k, size) for k in with_pixels)
+            if stack.valid is not None:
+                for place in stack.places[valid_fractions(fields.valid) == 0.0].tolist():
+                    refused.setdefault(place, NO_WINDOW)
+            samples = pool[learned_key(field, group.channel_name)]
+            for k, place in enumerate(stack.places.tolist()):
+                if place not in refused:
+                    samples[place] = sample_of(fields, k, size)
     return pool, refused
 
 

@@ -2,8 +2,10 @@
 
 import csv
 import re
+import shutil
 import subprocess
 import sys
+from pathlib import Path
 
 import numpy as np
 import pytest
@@ -50,8 +52,8 @@ def test_nothing_is_overwritten(tmp_path, capsys):
 @pytest.mark.parametrize(
     ("failure", "code", "message"),
     [
-        (OSError(28, "No space left on device"), 3, "cannot write .*: .*No space left"),
-        (KeyboardInterrupt(), 130, "interrupted; nothing is left of"),
+        (OSError(28, "No space left on device"), 3, "no file is left in .*No space left"),
+        (KeyboardInterrupt(), 130, "interrupted; no file is left in"),
     ],
 )
 def test_a_run_that_stops_leaves_nothing(failure, code, message, tmp_path, capsys, monkeypatch):
@@ -73,6 +75,20 @@ def test_a_run_that_stops_leaves_nothing(failure, code, message, tmp_path, capsy
     # and the same command goes through once the cause is gone
     monkeypatch.undo()
     assert main(["demo", "--out", str(tmp_path / "new"), "--panels", "1", "--side", "16"]) == 0
+
+
+def test_an_empty_folder_is_filled_where_it_stands(tmp_path, capsys, monkeypatch):
+    (tmp_path / "real").mkdir(mode=0o700)
+    (tmp_path / "link").symlink_to(tmp_path / "real")
+    monkeypatch.chdir(tmp_path / "real")
+    for out in (str(tmp_path / "link"), "."):
+        assert main(["demo", "--out", out, "--panels", "1", "--side", "16"]) == 0
+        found = sorted(path.name for path in (tmp_path / "real").iterdir())
+        assert found == ["heights", "manifest.csv", "truth"]
+        assert (tmp_path / "real").stat().st_mode & 0o777 == 0o700
+        shutil.rmtree("heights")
+        shutil.rmtree("truth")
+        Path("manifest.csv").unlink()
 
 
 def test_a_folder_below_a_file_is_told_apart(tmp_path, capsys):

@@ -928,7 +928,7 @@ def test_nothing_to_learn_from_is_an_error():
     empty = np.full((3, 8, 8), np.nan)
     with pytest.raises(ValueError, match=r"3 of 3 patches have too few valid pixels. X\[0\]"):
         raw(level_rule="fitted").fit(empty)
-    with pytest.raises(ValueError, match="no accepted patch has a valid pixel of field raw"):
+    with pytest.raises(ValueError, match="no patch is accepted, so no level of field raw"):
         raw(level_rule="fitted", below_min_valid="nan").fit(empty)
     # an empty patch beside others does not spoil their levels
     lenient = raw(level_rule="fitted", below_min_valid="nan", min_valid=0.0)
@@ -1399,3 +1399,59 @@ def test_joining_fields_changes_no_bit(monkeypatch, rule):
     apart = whole.transform(X)
     monkeypatch.setattr(vector, "JOIN_PIXELS", 10**9)
     np.testing.assert_array_equal(whole.transform(X), apart)
+
+
+def test_learned_raw_levels_are_pixel_values():
+    # two grey values, floats that change when an offset is taken off and put back
+    for seed in range(20):
+        rng = np.random.default_rng(seed)
+        low, high = np.sort(rng.normal(size=2))
+        X = np.where(rng.random((3, 16, 16)) < 0.5, low, high)
+        fitted = raw(level_rule="fitted", levels=[0.25, 0.75], location_scale=False).fit(X)
+        assert set(fitted.levels_["raw"]) <= {low, high}
+        areas = fitted.transform(X)[:, 0]
+        assert (areas == 1.0).all()  # every pixel reaches the lower value
+
+
+def test_levelled_vectors_do_not_depend_on_the_batch():
+    X = noise(23, (100, 7)) + np.arange(7.0)
+    options = {"remove_tilt": True, "slope": (0,), "smooth": (1,)}
+    together = raw(**options).transform(X)
+    apart = np.concatenate([raw(**options).transform(X[k : k + 1]) for k in range(len(X))])
+    np.testing.assert_array_equal(together, apart)
+
+
+def test_levels_are_not_learned_from_what_transform_refuses():
+    # two valid rows: windows of the raw field, none of the curvature; or refused in one channel
+    X = noise(4, (8, 8))
+    X[3, 2:] = np.nan
+    X[3, :2] += 1000.0
+    options = {"level_rule": "fitted", "below_min_valid": "nan", "min_valid": 0.0}
+    fitted = raw(curvature=(0,), **options).fit(X)
+    assert np.isnan(fitted.transform(X)[3]).all()
+    assert fitted.levels_["raw"].max() < 100.0
+    with pytest.raises(ValueError, match=r"X\[3\]: one of its fields has no window"):
+        raw(curvature=(0,), level_rule="fitted", min_valid=0.0).fit(X)
+    pair = np.stack([noise(4, (8, 8)), noise(4, (8, 8))], axis=-1)
+    pair[3, ..., 0] += 1000.0
+    pair[3, ..., 1] = np.nan
+    fitted = raw(channels=("a", "b"), **options).fit(pair)
+    assert fitted.levels_["a_raw"].max() < 100.0
+
+
+def test_a_refused_patch_is_marked_whatever_it_holds():
+    X = noise(3, (8, 8))
+    X[2] = np.nan
+    X[2, :3, :3] = 1e60
+    X[2, 0, 0] = -1e60
+    found = raw(below_min_valid="nan", dtype="float32").transform(X)
+    assert np.isnan(found[2]).all()
+    assert np.isfinite(found[:2]).all()
+
+
+def test_integers_far_from_zero_are_exact():
+    # law 5 for integers: an offset of 2**45 changes no curve
+    X = np.random.default_rng(6).integers(0, 11, (3, 20, 20))
+    options = {"smooth": (1,), "slope": (0,), "location_scale": False}
+    near, far = raw(**options).transform(X), raw(**options).transform(X + 2**45)
+    np.testing.assert_allclose(near, far, atol=1e-12)
