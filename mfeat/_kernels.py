@@ -156,11 +156,72 @@ def count_windows(index, ok, table):
 
 
 @kernel
+def count_complete(index, table):
+    """Do the work of `count_windows` where all windows of the image count; `table` must be zero.
+
+    Each pixel and pair is counted once and without a weight, at the window whose top left corner it
+    starts from; one update less a pixel, and no weights to read. Then the weights of inner pixels
+    (four windows) and inner pairs (two) follow for the whole table at once, and the border, where
+    they are smaller, is set right.
+    """
+    pixel = table[_PIXEL]
+    diagonal = table[_DIAGONAL]
+    horizontal = table[_H]
+    vertical = table[_V]
+    falling = table[_D]
+    rising = table[_A]
+    largest = table[_MAX]
+    smallest = table[_MIN]
+    rows = index.shape[0] - 1
+    cols = index.shape[1] - 1
+    for i in range(rows - 1):
+        upper, lower = index[i], index[i + 1]
+        a, c = upper[0], lower[0]
+        for j in range(cols - 1):
+            b, d = upper[j + 1], lower[j + 1]
+            ad = max(a, d)
+            bc = max(b, c)
+            pixel[a] += 1
+            horizontal[max(a, b)] += 1
+            vertical[max(a, c)] += 1
+            falling[ad] += 1
+            rising[bc] += 1
+            largest[max(ad, bc)] += 1
+            smallest[min(min(a, d), min(b, c))] += 1
+            a, c = b, d
+    for k in range(table.shape[1]):
+        diagonal[k] = 2 * pixel[k]
+        pixel[k] *= 4
+        horizontal[k] *= 2
+        vertical[k] *= 2
+    for i in range(rows):
+        inner = 0 < i < rows - 1
+        for j in range(0, cols, cols - 1 if inner else 1):
+            starts = np.int64(i < rows - 1 and j < cols - 1)  # a window starts here: counted above
+            ends = np.int64(i > 0 and j > 0)
+            windows = (2 if inner else 1) * (2 if 0 < j < cols - 1 else 1)
+            pixel[index[i, j]] += windows - 4 * starts
+            diagonal[index[i, j]] += ends - starts
+    for j in range(cols - 1):
+        horizontal[max(index[0, j], index[0, j + 1])] -= 1
+        horizontal[max(index[rows - 1, j], index[rows - 1, j + 1])] += 1
+    for i in range(rows - 1):
+        vertical[max(index[i, 0], index[i + 1, 0])] -= 1
+        vertical[max(index[i, cols - 1], index[i + 1, cols - 1])] += 1
+
+
+@kernel
 def count_stack(index, ok, table):
-    """Count a stack: index (n, h + 1, w + 1), ok likewise or (1, ...), table (n, 8, T + 1)."""
-    shared = len(ok) == 1
+    """Count a stack: index (n, h + 1, w + 1), ok likewise, table (n, 8, T + 1)."""
     for k in range(len(index)):
-        count_windows(index[k], ok[0 if shared else k], table[k])
+        count_windows(index[k], ok[k], table[k])
+
+
+@kernel
+def count_complete_stack(index, table):
+    """Count a stack of images all of whose windows count; `table` must be zero."""
+    for k in range(len(index)):
+        count_complete(index[k], table[k])
 
 
 @kernel

@@ -6,7 +6,6 @@ foreground at every level at once. Everything downstream is a weighted sum of th
 """
 
 from dataclasses import dataclass, field
-from functools import lru_cache
 from typing import Any
 
 import numpy as np
@@ -33,8 +32,6 @@ FEW_LEVELS = 24
 
 #: Pixels of an image indexed and counted at a time; bounds the memory of `count_patterns`.
 BAND_PIXELS = 1 << 20
-
-_SMALL_PIXELS = 1 << 16
 
 
 @dataclass(frozen=True, eq=False)
@@ -267,12 +264,15 @@ def count_image(
         index = np.zeros(shape, dtype=np.uint16)
         _index(band, thresholds[:reach], index, top, frame)
         if valid is None:
-            ok, good = all_windows_ok(shape[0] - 1, shape[1] - 1)
+            of_band = np.zeros_like(table)
+            _kernels.count_complete(index, of_band)
+            table += of_band
+            windows += (shape[0] - 2) * (shape[1] - 2)
         else:
             around = np.pad(valid, ((top, bottom), (frame, frame)), constant_values=1)
             ok, good = windows_of(around)
-        _kernels.count_windows(index, ok, table)
-        windows += int(good)
+            _kernels.count_windows(index, ok, table)
+            windows += good
     return PatternCounts(
         levels=levels,
         table=levels_from_top(table),
@@ -313,29 +313,11 @@ def levels_from_top(table: np.ndarray) -> np.ndarray:
     return np.cumsum(table[..., :0:-1], axis=-1)[..., ::-1]
 
 
-def all_windows_ok(rows: int, cols: int) -> tuple[np.ndarray, int]:
-    """Return the map of counting windows of an image without missing pixels, and their number.
-
-    It is read-only: the maps of small images are kept for the next patch.
-    """
-    make = _small_windows_ok if rows * cols <= _SMALL_PIXELS else _windows_ok
-    return make(rows, cols), (rows - 1) * (cols - 1)
-
-
 def windows_of(valid: np.ndarray) -> tuple[np.ndarray, int]:
     """Return the map of windows with four valid pixels (read-only) and their number."""
     ok = np.empty((valid.shape[0] + 1, valid.shape[1] + 1), dtype=np.uint8)
     number = _kernels.windows_ok(valid, ok)
     return _checks.read_only(ok), int(number)
-
-
-def _windows_ok(rows: int, cols: int) -> np.ndarray:
-    ok = np.zeros((rows + 1, cols + 1), dtype=np.uint8)
-    ok[1:rows, 1:cols] = 1
-    return _checks.read_only(ok)
-
-
-_small_windows_ok = lru_cache(maxsize=64)(_windows_ok)
 
 
 def _show_exactly(levels: np.ndarray, others: np.ndarray) -> str:

@@ -12,7 +12,6 @@ from mfeat import _kernels
 from mfeat._checks import read_only
 from mfeat.counts import (
     STATISTICS,
-    all_windows_ok,
     index_stack,
     levels_from_top,
 )
@@ -44,15 +43,13 @@ def count_stack(
     """
     count, rows, cols = fields.values.shape
     index = index_stack(fields.values, levels.thresholds, levels.reach)
-    if missing:
-        ok = np.empty((count, rows + 1, cols + 1), dtype=np.uint8)
-        windows = np.array([_kernels.windows_ok(fields.valid[k], ok[k]) for k in range(count)])
-        ok = read_only(ok)
-    else:
-        whole, number = all_windows_ok(rows, cols)
-        ok, windows = whole[None], np.full(count, number)
     table = np.zeros((count, len(STATISTICS), levels.thresholds.shape[1] + 1), dtype=np.int64)
-    _kernels.count_stack(index, ok, table)
+    if not missing:
+        _kernels.count_complete_stack(index, table)
+        return table, np.full(count, (rows - 1) * (cols - 1))
+    ok = np.empty((count, rows + 1, cols + 1), dtype=np.uint8)
+    windows = np.array([_kernels.windows_ok(fields.valid[k], ok[k]) for k in range(count)])
+    _kernels.count_stack(index, read_only(ok), table)
     return table, windows
 
 

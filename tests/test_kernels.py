@@ -23,7 +23,7 @@ from hypothesis import strategies as st
 from hypothesis.extra import numpy as st_numpy
 
 from mfeat import _checks, _field_kernels, _kernels
-from mfeat.counts import STATISTICS, all_windows_ok
+from mfeat.counts import STATISTICS
 from mfeat.fields import gaussian_weights
 
 #: Set in the child processes only, which therefore start none themselves.
@@ -58,7 +58,7 @@ def test_the_mode_is_the_one_asked_for():
 @pytest.mark.skipif(MODE == "", reason="outside an array without bounds checks: undefined")
 def test_a_place_outside_an_array_is_noticed():
     index = np.full((3, 3), 9, dtype=np.uint16)  # the table has one column, for index 0
-    ok, _ = all_windows_ok(2, 2)
+    ok = whole_ok(2, 2)
     with pytest.raises(IndexError, match="out of bounds"):
         _kernels.count_windows(index, ok, np.zeros((8, 1), dtype=np.int64))
 
@@ -223,10 +223,13 @@ def test_windows_of_four_valid_pixels_count(shape, share):
     total = _kernels.windows_ok(valid, ok)
     assert np.array_equal(ok, naive_ok(valid))
     assert total == naive.valid_windows(valid)
-    whole, number = all_windows_ok(*shape)
     if share == 1.0:
-        assert np.array_equal(ok, whole)
-        assert total == number
+        assert total == (shape[0] - 1) * (shape[1] - 1)
+
+
+def whole_ok(rows, cols):
+    """The map of windows of an image without missing pixels."""
+    return naive_ok(np.ones((rows, cols), dtype=np.uint8))
 
 
 def naive_table(index, ok, levels):
@@ -294,7 +297,7 @@ def test_counts_of_any_windows(data):
 def test_counts_of_one_window_by_hand():
     """By hand: the window 1 4 / 2 3 has the pairs 14, 23 across, 12, 43 down, 13 and 42 oblique."""
     index = np.array([[1, 4, 0], [2, 3, 0], [0, 0, 0]], dtype=np.uint16)
-    ok, _ = all_windows_ok(2, 2)
+    ok = whole_ok(2, 2)
     table = np.zeros((8, 5), dtype=np.int64)
     _kernels.count_windows(index, ok, table)
     assert dict(zip(STATISTICS, table.tolist(), strict=True)) == {
@@ -309,16 +312,37 @@ def test_counts_of_one_window_by_hand():
     }
 
 
-@pytest.mark.parametrize("shared", [True, False])
-def test_stacks_are_counted_image_by_image(shared):
+def test_stacks_are_counted_image_by_image():
     rng = np.random.default_rng(5)
     index = rng.integers(0, 5, (4, 6, 8), dtype=np.uint16)
-    ok = np.stack([random_ok((5, 7), 0.6, rng) for _ in range(1 if shared else 4)])
-    table = np.zeros((4, 8, 5), dtype=np.int64)
+    ok = np.stack([random_ok((5, 7), 0.6, rng) for _ in range(4)])
+    table, complete = np.zeros((2, 4, 8, 5), dtype=np.int64)
     _kernels.count_stack(index, ok, table)
+    _kernels.count_complete_stack(index, complete)
     for k in range(4):
-        expected = naive_table(index[k], ok[0 if shared else k], 4)
+        expected = naive_table(index[k], ok[k], 4)
         assert table[k].tolist() == [expected[name] for name in STATISTICS]
+        expected = naive_table(index[k], whole_ok(5, 7), 4)
+        assert complete[k].tolist() == [expected[name] for name in STATISTICS]
+
+
+@pytest.mark.parametrize("shape", [(2, 2), (2, 9), (9, 2), (3, 3), (3, 8), (17, 12), (64, 63)])
+@pytest.mark.parametrize("levels", [1, 3, 40, 70_000 // 2])
+def test_complete_images_are_counted_as_with_weights(shape, levels):
+    # the fast path against the weighted kernel, and against the naive reference where it is small
+    rng = np.random.default_rng(shape[0])
+    kinds = (
+        rng.integers(0, levels, (shape[0] + 1, shape[1] + 1), dtype=np.uint16, endpoint=True),
+        np.full((shape[0] + 1, shape[1] + 1), levels, dtype=np.uint16),
+    )
+    for index in kinds:
+        table, expected = np.zeros((2, 8, levels + 1), dtype=np.int64)
+        _kernels.count_complete(index, table)
+        _kernels.count_windows(index, whole_ok(*shape), expected)
+        assert np.array_equal(table, expected)
+        if levels == 3:
+            by_hand = naive_table(index, whole_ok(*shape), levels)
+            assert table.tolist() == [by_hand[name] for name in STATISTICS]
 
 
 class Watched(np.ndarray):
@@ -336,12 +360,11 @@ class Watched(np.ndarray):
         return super().__getitem__(key)
 
 
-def watched_accesses(index, ok, levels):
+def watched_accesses(kernel, *arrays, levels):
     """Writes to and reads from the table in one count of an image."""
     table = np.zeros((8, levels + 1), dtype=np.int64).view(Watched)
     Watched.written = Watched.read = 0
-    python_form = getattr(_kernels.count_windows, "py_func", _kernels.count_windows)
-    python_form(index, ok, table)
+    getattr(kernel, "py_func", kernel)(*arrays, table)
     return Watched.written, Watched.read
 
 
@@ -351,7 +374,7 @@ def test_counting_costs_the_same_at_any_number_of_levels(levels):
     rng = np.random.default_rng(6)
     rows, cols = 6, 9
     shape = (rows + 1, cols + 1)
-    whole, _ = all_windows_ok(rows, cols)
+    whole = whole_ok(rows, cols)
     images = [
         np.zeros(shape, dtype=np.uint16),
         np.full(shape, levels, dtype=np.uint16),
@@ -359,9 +382,14 @@ def test_counting_costs_the_same_at_any_number_of_levels(levels):
     ]
     for index in images:
         for ok in (whole, random_ok((rows, cols), 0.5, rng)):
-            written, read = watched_accesses(index, ok, levels)
+            written, read = watched_accesses(_kernels.count_windows, index, ok, levels=levels)
             assert written == 8 * rows * cols
             assert read == written + 8  # and its eight rows are looked up once
+        written, _ = watched_accesses(_kernels.count_complete, index, levels=levels)
+        # by hand: seven a window; pixel and diagonal of each border pixel, two rows and columns of
+        # pairs; and four entries of each column of the table, once an image
+        border = 2 * 2 * (rows + cols - 2) + 2 * (rows - 1) + 2 * (cols - 1)
+        assert written == 7 * (rows - 1) * (cols - 1) + border + 4 * (levels + 1)
 
 
 def test_the_watched_array_notices_writes_through_views():
