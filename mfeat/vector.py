@@ -160,8 +160,8 @@ def rows_of(plan: VectorPlan, group: Group, min_valid: float) -> tuple[np.ndarra
         refused |= refusals(stack, min_valid)
         for place in stack.places[np.isnan(found).any(axis=1)].tolist():
             refused.setdefault(place, NO_WINDOW)
-        unwanted = np.isin(stack.places, list(refused))
-        found[unwanted] = np.nan
+        if refused:
+            found[np.isin(stack.places, list(refused))] = np.nan
         size = np.abs(found)
         limits = np.finfo(plan.dtype)
         fits = (size <= limits.max) & ((size >= limits.tiny) | (size == 0.0)) | np.isnan(size)

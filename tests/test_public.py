@@ -171,6 +171,18 @@ def test_readme_opens_with_the_job_and_two_lines():
     assert text.index("turns image patches") < text.index(lines[0]) < text.index(lines[1])
 
 
+def test_the_examples_of_the_readme_run():
+    text = (ROOT / "README.md").read_text(encoding="utf-8")
+    blocks = re.findall(r"```python\n(.*?)```", text, re.S)
+    assert len(blocks) >= 3
+    names = {"MinkowskiCurves": mfeat.MinkowskiCurves}
+    for block in blocks:
+        exec(compile(block, "README.md", "exec"), names)
+    assert names["upper"] + names["lower"] == names["count_patterns"](
+        names["image"], [80, 120, 160]
+    )
+
+
 @pytest.mark.parametrize("command", [["check", "."], ["format", "--check", "."]])
 def test_the_code_is_lint_free_and_formatted(command):
     run = subprocess.run(
