@@ -211,10 +211,9 @@ def count_patterns(
     Notes
     -----
     Time grows with the number of pixels: seven table updates each, eight where pixels are missing,
-    whatever the number of levels.
-    From some thousand levels on the tables outgrow the processor's cache, which costs up to four
-    times as much again. Memory beyond the image and the counts: some 20 MB, whatever the image's
-    size, type, byte order and missing pixels.
+    whatever the number of levels. From some thousand levels on the tables outgrow the processor's
+    cache, which costs up to four times as much again. Memory beyond the image and the counts: some
+    20 MB, whatever the image's size, type, byte order and missing pixels.
 
     Examples
     --------

@@ -79,9 +79,10 @@ class Group:
     def _check_range(self, values: np.ndarray, valid: np.ndarray | None) -> None:
         if valid is None and values.dtype.kind == "f":  # a quick look at all, for the usual case
             low, high = values.min(axis=(1, 2)), values.max(axis=(1, 2))
-            relief = high - low
-            if max(-low.min(), high.max()) <= 1e75 and (relief[relief > 0.0] >= 1e-75).all():
-                return
+            if max(-low.min(), high.max()) <= 1e75:
+                relief = high - low
+                if (relief[relief > 0.0] >= 1e-75).all():
+                    return
         for place, image in enumerate(values):
             one = None if valid is None else valid[place]
             _checks.representable(image, one, self.name(place))

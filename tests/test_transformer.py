@@ -1347,6 +1347,10 @@ def test_no_data_markers_are_not_taken_for_heights(marker):
     spoilt[1, 2, 3] = marker
     with pytest.raises(ValueError, match=r"X\[1\] reaches from .* Set no-data values to NaN"):
         raw().transform(spoilt)
+    both = spoilt.copy()
+    both[1, 0, 0] = -marker  # their difference overflows
+    with pytest.raises(ValueError, match=r"X\[1\] reaches from"):
+        raw().transform(both)
     spoilt[1, 2, 3] = np.nan
     assert np.isfinite(raw(min_valid=0.0).transform(spoilt)).all()
 
