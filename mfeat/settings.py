@@ -83,14 +83,19 @@ def _resolve(estimator: Any) -> VectorPlan:
         raise ValueError(f"min_valid must be from 0 to 1; got {estimator.min_valid!r}")
     _check_jobs(estimator.n_jobs)
     fields = _fields(estimator)
-    per_family = {
-        family: level_values(
-            _of_family("levels", estimator.levels, family),
-            estimator.level_rule,
-            _of_family("level_range", estimator.level_range, family),
-        )
-        for family in dict.fromkeys(field.family for field in fields)
-    }
+    families = dict.fromkeys(field.family for field in fields)
+    if isinstance(estimator.levels, dict) or isinstance(estimator.level_range, dict):
+        per_family = {
+            family: level_values(
+                _of_family("levels", estimator.levels, family),
+                estimator.level_rule,
+                _of_family("level_range", estimator.level_range, family),
+            )
+            for family in families
+        }
+    else:  # one array for all, by which `vector` knows that they are alike
+        shared = level_values(estimator.levels, estimator.level_rule, estimator.level_range)
+        per_family = dict.fromkeys(families, shared)
     plan = VectorPlan(
         fields=fields,
         functionals=_functionals(estimator.functionals),

@@ -83,8 +83,11 @@ def vectors(plan: VectorPlan, group: Group, stack: Stack) -> np.ndarray:
     out = np.empty((count, plan.length))
     waiting: dict[int, list] = {}  # by number of levels: functionals of many fields in one go
     for names, fields in _joined(plan, group, stack):
-        values = np.stack([plan.levels_of(field, group.channel_name) for field in names])
-        levels = place_levels(fields, plan.level_rule, np.repeat(values, count, axis=0))
+        own_levels = [plan.levels_of(field, group.channel_name) for field in names]
+        values = own_levels[0]
+        if any(other is not values for other in own_levels):
+            values = np.repeat(np.stack(own_levels), count, axis=0)
+        levels = place_levels(fields, plan.level_rule, values)
         table, windows = count_stack(fields, levels, stack.valid is not None)
         for k, field in enumerate(names):
             own = slice(k * count, (k + 1) * count)
@@ -96,7 +99,7 @@ def vectors(plan: VectorPlan, group: Group, stack: Stack) -> np.ndarray:
                     out[windows[own] == 0, column] = np.nan
                 column += 1
             part = (column, table[own], windows[own])
-            waiting.setdefault(values.shape[1], []).append(part)
+            waiting.setdefault(values.shape[-1], []).append(part)
     for number, parts in waiting.items():
         columns, tables, windows = zip(*parts, strict=True)
         found = densities(plan, levels_from_top(np.stack(tables)), np.stack(windows))
