@@ -1,15 +1,20 @@
 """Checks of what users pass in, and the one wording of each complaint."""
 
 import math
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from typing import Any
 
 import numpy as np
+
+from mfeat import _kernels
 
 #: Largest number of levels: level indices are 16-bit, and index 0 means "below every level".
 MAX_LEVELS = 65_535
 
 _FLOATS = (np.float16, np.float32, np.float64)
+
+# Between these, squares and differences of pixels over a pitch neither overflow nor vanish.
+_LARGEST, _FINEST = 1e75, 1e-75
 
 
 def choice(name: str, value: Any, known: Sequence[Any]) -> Any:
@@ -166,34 +171,48 @@ def valid_pixels(
     return valid.astype(np.uint8)
 
 
-def representable(values: np.ndarray, valid: np.ndarray | None, name: str) -> None:
-    """Refuse pixel values with which fields cannot be computed in float64.
+def value_ranges(values: np.ndarray, valid: np.ndarray | None) -> tuple[np.ndarray, np.ndarray]:
+    """Return the smallest and largest valid value of each image of a stack; 0 where none is."""
+    if valid is None:
+        return values.min(axis=(1, 2)), values.max(axis=(1, 2))
+    low, high = np.zeros((2, len(values)), values.dtype)
+    _kernels.value_range(values, valid, low, high)
+    return low, high
+
+
+def representable(
+    values: np.ndarray, valid: np.ndarray | None, name_of: Callable[[int], str]
+) -> None:
+    """Refuse a stack of images with which fields cannot be computed in float64.
 
     64-bit integers beyond 2**53 would be rounded; squares and differences of floating-point values
-    beyond 1e75 overflow, and those of values all within 1e-75 of each other vanish.
+    beyond 1e75 overflow, and those of values all within 1e-75 of each other vanish. `name_of` tells
+    how messages call an image.
     """
     if values.dtype.itemsize < 8:
         return
-    seen = values if valid is None else values[valid == 1]
-    if not seen.size:
-        return
-    low, high = seen.min(), seen.max()
-    if values.dtype.kind == "f":
-        if max(-low, high) > 1e75:
+    low, high = value_ranges(values, valid)
+    whole = values.dtype.kind != "f"
+    limit = 2**53 if whole else _LARGEST
+    large = (high > limit) | (low < -limit if values.dtype.kind != "u" else False)
+    if large.any():
+        k = int(np.argmax(large))
+        if whole:
             raise ValueError(
-                f"{name} reaches from {low:.3g} to {high:.3g}; fields cannot be computed beyond "
-                "1e75. Set no-data values to NaN, or mask them"
+                f"{name_of(k)} holds integers from {low[k]} to {high[k]}; beyond 2**53 means and "
+                "derived fields would be rounded. Subtract an offset, or count exactly with "
+                "count_patterns at levels of your own"
             )
-        if 0.0 < high - low < 1e-75:
-            raise ValueError(
-                f"{name} reaches from {low!r} to {high!r}; differences below 1e-75 vanish in "
-                "fields. Multiply the values by a power of ten"
-            )
-    elif int(low) < -(2**53) or int(high) > 2**53:
         raise ValueError(
-            f"{name} holds integers from {low} to {high}; beyond 2**53 means and "
-            "derived fields would be rounded. Subtract an offset, or count exactly with "
-            "count_patterns at levels of your own"
+            f"{name_of(k)} reaches from {low[k]:.3g} to {high[k]:.3g}; fields cannot be computed "
+            "beyond 1e75. Set no-data values to NaN, or mask them"
+        )
+    fine = (low < high) & (high - low < _FINEST)
+    if not whole and fine.any():
+        k = int(np.argmax(fine))
+        raise ValueError(
+            f"{name_of(k)} reaches from {low[k]!r} to {high[k]!r}; differences below {_FINEST:g} "
+            "vanish in fields. Multiply the values by a power of ten"
         )
 
 
@@ -225,7 +244,7 @@ def read_only(array: np.ndarray) -> np.ndarray:
     return view
 
 
-def level_sequence(levels: Any, name: str = "levels", *, strict: bool = True) -> np.ndarray:
+def level_sequence(levels: Any, name: str = "levels") -> np.ndarray:
     """Return explicit levels as a 1-D int64, uint64 or float64 array; no value is changed.
 
     They must be finite and strictly ascending, 1 to 65,535 of them.
@@ -267,7 +286,7 @@ def level_sequence(levels: Any, name: str = "levels", *, strict: bool = True) ->
     bad = np.flatnonzero(~np.isfinite(array))
     if bad.size:
         raise ValueError(f"{name} must be finite; {name}[{bad[0]}] is {array[bad[0]]}")
-    unordered = np.flatnonzero(array[1:] <= array[:-1] if strict else array[1:] < array[:-1])
+    unordered = np.flatnonzero(array[1:] <= array[:-1])
     if unordered.size:
         at = unordered[0]
         raise ValueError(

@@ -167,11 +167,10 @@ def minkowski_curves(
     valid = _checks.valid_pixels(image, _checks.valid_mask(mask, image.shape))
     if valid is not None and not valid.any():
         raise ValueError("image has no valid pixel: all are NaN or masked")
-    values = _checks.compiled_type(np.asarray(image))
-    _checks.representable(values, valid, "image")
-
+    values = _checks.compiled_type(np.asarray(image))[None]
     stack_valid = None if valid is None else valid[None]
-    [(_, fields)] = derive((chosen,), values[None], stack_valid, pitch, scale_unit, remove_tilt)
+    _checks.representable(values, stack_valid, lambda _: "image")
+    [(_, fields)] = derive((chosen,), values, stack_valid, pitch, scale_unit, remove_tilt)
     placed = place_levels(fields, level_rule, values_of_rule)
     counts = count_image(
         fields.values[0],

@@ -16,7 +16,7 @@ from typing import Any, NamedTuple
 
 import numpy as np
 
-from mfeat import _checks, _field_kernels, _kernels
+from mfeat import _checks, _field_kernels
 from mfeat.levels import FieldStack
 
 FAMILIES = ("raw", "smooth", "band", "slope", "curvature")
@@ -200,13 +200,9 @@ def derive(
     shape = values.shape[1:]
     check_scales(fields, shape, pitch, scale_unit)
     missing = valid is not None
+    low, high = _checks.value_ranges(values, valid)
     if valid is None:
         valid = np.ones(values.shape, dtype=np.uint8)
-    if missing:
-        low, high = np.zeros((2, len(values)), values.dtype)
-        _kernels.value_range(values, valid, low, high)
-    else:
-        low, high = values.min(axis=(1, 2)), values.max(axis=(1, 2))
     # Half of each before they are added: the sum of two large values would overflow.
     offset = low.astype(np.float64) / 2 + high.astype(np.float64) / 2
     half_range = high.astype(np.float64) / 2 - low.astype(np.float64) / 2

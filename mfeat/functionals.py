@@ -159,7 +159,7 @@ def area(counts: PatternCounts, kind: str | None = None) -> np.ndarray:
     >>> area(count_patterns(square, levels=[1], pitch=0.5, edges="framed"))
     array([2.25])
     """
-    return _scaled(counts, area_of(counts.table), kind, power=2)
+    return _scaled(counts, area_of(counts.table), kind, in_windows=True)
 
 
 def contour(
@@ -274,15 +274,15 @@ def per_area(total: np.ndarray, windows: np.ndarray, pitch: tuple[float, float])
 
 
 def _scaled(
-    counts: PatternCounts, total: np.ndarray, kind: str | None, power: int = 0
+    counts: PatternCounts, total: np.ndarray, kind: str | None, in_windows: bool = False
 ) -> np.ndarray:
-    """Return a total as it is or as a density; area comes in windows (power 2 of the length)."""
+    """Return a total as it is or as a density; area comes in windows, the others in units."""
     if kind is None:
         kind = "total" if counts.edges == "framed" else "density"
     _checks.choice("kind", kind, KINDS)
     dy, dx = counts.pitch
     if kind == "total":
-        return total * (dy * dx) if power == 2 else total
+        return total * (dy * dx) if in_windows else total
     if counts.edges == "framed":
         raise ValueError(
             'a density of framed counts is biased for textures; count with edges="inside", or ask '
@@ -290,7 +290,7 @@ def _scaled(
         )
     _require_windows(counts)
     windows = np.array(counts.windows)
-    return per_window(total, windows) if power == 2 else per_area(total, windows, counts.pitch)
+    return per_window(total, windows) if in_windows else per_area(total, windows, counts.pitch)
 
 
 def _require_windows(counts: PatternCounts) -> None:

@@ -111,7 +111,7 @@ class FieldStack:
     @cached_property
     def _moments(self) -> tuple[np.ndarray, np.ndarray]:
         mean, deviation = self._raw_moments
-        if np.isnan(mean).any():  # an empty field; or one that overflowed, which stays NaN
+        if np.isnan(mean).any():  # some field is empty
             mean, deviation = np.where(self.empty, 0.0, (mean, deviation))
         return mean, np.where(self.flat, 0.0, deviation)
 

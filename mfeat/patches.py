@@ -6,7 +6,8 @@ from typing import Any, NamedTuple
 
 import numpy as np
 
-from mfeat import _checks, _kernels
+from mfeat import _checks
+from mfeat.counts import windows_of
 
 EDGE_RULES = ("drop", "shift")
 LABEL_RULES = ("majority", "any")
@@ -200,9 +201,7 @@ class PatchGrid:
     ):
         self.size = _pair("size", size, 2)
         self.stride = self.size if stride is None else _pair("stride", stride, 1)
-        self.min_valid = _checks.real("min_valid", min_valid, minimum=0.0)
-        if self.min_valid > 1.0:
-            raise ValueError(f"min_valid must be <= 1; got {min_valid!r}")
+        self.min_valid = _checks.real("min_valid", min_valid, minimum=0.0, maximum=1.0)
         self.edge = _checks.choice("edge", edge, EDGE_RULES)
 
     def __repr__(self) -> str:
@@ -289,8 +288,7 @@ class PatchGrid:
         """Return valid windows of each patch over its windows, from sums over rectangles."""
         if valid is None:
             return np.ones(len(positions))
-        ok = np.empty((shape[0] + 1, shape[1] + 1), dtype=np.uint8)
-        _kernels.windows_ok(valid, ok)
+        ok, _ = windows_of(valid)
         # sums[i, j]: counting windows whose lower right pixel lies above row i, left of column j
         sums = np.zeros((shape[0] + 1, shape[1] + 1), dtype=np.int64)
         np.cumsum(np.cumsum(ok[:-1, :-1], axis=0, dtype=np.int64), axis=1, out=sums[1:, 1:])

@@ -63,8 +63,7 @@ class Group:
         """Return the images stacked: those without missing pixels, then those with some."""
         values = _checks.compiled_type(np.stack([np.asarray(image) for image in self.images]))
         valid = self._valid(values)
-        if values.dtype.itemsize == 8:
-            self._check_range(values, valid)
+        _checks.representable(values, valid, self.name)
         if valid is None:
             return [Stack(np.arange(len(values)), values, None)]
         complete = valid.all(axis=(1, 2))
@@ -75,17 +74,6 @@ class Group:
             some = ~complete
             parts.append(Stack(np.flatnonzero(some), _part(values, some), valid[some]))
         return parts
-
-    def _check_range(self, values: np.ndarray, valid: np.ndarray | None) -> None:
-        if valid is None and values.dtype.kind == "f":  # a quick look at all, for the usual case
-            low, high = values.min(axis=(1, 2)), values.max(axis=(1, 2))
-            if max(-low.min(), high.max()) <= 1e75:
-                relief = high - low
-                if (relief[relief > 0.0] >= 1e-75).all():
-                    return
-        for place, image in enumerate(values):
-            one = None if valid is None else valid[place]
-            _checks.representable(image, one, self.name(place))
 
     def _valid(self, values: np.ndarray) -> np.ndarray | None:
         """Return the valid pixels of all images as uint8, or None where every pixel is valid."""
