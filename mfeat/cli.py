@@ -1,16 +1,33 @@
 """The command line: it parses and delegates; everything it does can be imported.
 
-Exit codes: 0 done, 2 unusable arguments, 3 files that cannot be written, 130 interrupted. Results
-go to stdout and into files, messages to stderr.
+Exit codes: 0 done, 1 done with rejects under ``--strict``, 2 unusable arguments, 3 files that
+cannot be written or have changed, 130 interrupted. Results go to stdout and into files, messages to
+stderr.
 """
 
 import argparse
 import logging
 import sys
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from pathlib import Path
+from typing import Any
 
-from mfeat import __version__, demo
+from mfeat import MinkowskiCurves, __version__, demo, dump
+from mfeat.dump import BACKENDS, RejectsFound
+from mfeat.estimate import estimate
+from mfeat.images import MAX_PIXELS
+from mfeat.options import (
+    KEYS,
+    LABELS_FROM,
+    REGIONS,
+    dump_settings,
+    feature_value,
+    read_settings,
+    with_features,
+)
+from mfeat.parts import InputChanged
+from mfeat.patches import EDGE_RULES, LABEL_RULES
+from mfeat.storage import OutputInUse
 
 
 def build_parser() -> argparse.ArgumentParser:
@@ -34,7 +51,108 @@ def build_parser() -> argparse.ArgumentParser:
     write.add_argument("--side", type=int, default=512, help="side in pixels (default 512)")
     write.add_argument("--pitch", type=float, default=10.0, help="pitch in um (default 10)")
     write.add_argument("--seed", type=int, default=0, help="seed of the first panel (default 0)")
+    write.set_defaults(work=_demo)
+    _add_dump(commands)
     return parser
+
+
+def _add_dump(commands: Any) -> None:
+    table = commands.add_parser(
+        "dump",
+        help="turn a folder, glob or manifest of images into a Parquet feature table",
+        description="Turn images into a feature table of Parquet parts; prints its folder. An "
+        "interrupted run goes on when the same command is given again.",
+    )
+    table.add_argument(
+        "source",
+        metavar="SOURCE",
+        help="a folder, a quoted pattern such as 'scans/**/*.tif', an image, or a manifest (CSV or "
+        "Parquet) with a column path and optional columns label, group, mask, row, col, height, "
+        "width, pitch_x, pitch_y, unit, truth; others go into the table",
+    )
+    table.add_argument("--out", metavar="DIR", help="folder or URI of the table")
+    what = table.add_argument_group("what to compute")
+    what.add_argument(
+        "--size", type=_sides, metavar="N", help="side of a patch, or ROWSxCOLUMNS (default 64)"
+    )
+    what.add_argument(
+        "--stride", type=_sides, metavar="N", help="step from patch to patch (default: size)"
+    )
+    what.add_argument(
+        "--edge",
+        choices=EDGE_RULES,
+        help="drop what the grid does not reach, or shift the last patches (default drop)",
+    )
+    what.add_argument(
+        "--regions",
+        choices=REGIONS,
+        help="a region of the manifest is one patch, or has a grid inside (default patch)",
+    )
+    what.add_argument("--label-from", choices=LABELS_FROM, help="where labels come from")
+    what.add_argument(
+        "--truth-rule",
+        choices=LABEL_RULES,
+        help="label of a patch from an image of labels (default majority)",
+    )
+    what.add_argument(
+        "--channel",
+        type=_channel,
+        metavar="NAME",
+        help="luminance, red, green, blue, or a number (default luminance)",
+    )
+    what.add_argument(
+        "--missing-value",
+        type=float,
+        metavar="V",
+        help="pixels of this value are missing, as NaN are",
+    )
+    what.add_argument(
+        "--max-pixels",
+        type=int,
+        metavar="N",
+        help=f"reject images that need more pixels decoded at once (default {MAX_PIXELS})",
+    )
+    what.add_argument(
+        "--set",
+        action="append",
+        default=[],
+        metavar="NAME=VALUE",
+        dest="features",
+        help="a parameter of MinkowskiCurves, e.g. --set levels=32 --set 'smooth=[1, 2]'",
+    )
+    what.add_argument(
+        "--settings",
+        metavar="FILE.toml",
+        help=f"a file with {', '.join(KEYS)} and a table [features]; flags go before it",
+    )
+    how = table.add_argument_group("how to run")
+    how.add_argument("--jobs", type=int, metavar="N", help="workers (default: all processors)")
+    how.add_argument("--backend", choices=BACKENDS, help="threads or processes (default threads)")
+    how.add_argument(
+        "--cluster", metavar="ADDRESS", help="a Dask scheduler, whose workers see the same files"
+    )
+    how.add_argument(
+        "--dry-run",
+        action="store_true",
+        help="write nothing; print the plan, with size and time from a sample, and the settings "
+        "as TOML",
+    )
+    how.add_argument("--strict", action="store_true", help="exit with 1 if anything was rejected")
+    how.add_argument(
+        "--fresh",
+        action="store_true",
+        help="start anew; the old table stays until the new one is complete",
+    )
+    table.set_defaults(work=_dump)
+
+
+def _sides(text: str) -> int | tuple[int, ...]:
+    numbers = tuple(int(part) for part in text.split("x"))
+    return numbers[0] if len(numbers) == 1 else numbers
+
+
+def _channel(text: str) -> str | int:
+    return int(text) if text.isdigit() else text
 
 
 def main(argv: Sequence[str] | None = None) -> int:
@@ -47,27 +165,87 @@ def main(argv: Sequence[str] | None = None) -> int:
     2
     """
     logging.basicConfig(stream=sys.stderr, format="mfeat: %(message)s", level=logging.WARNING)
-    options = build_parser().parse_args(argv)
-    try:
-        manifest = demo.write_demo(
-            options.out,
-            options.panels,
-            side=options.side,
-            pitch=options.pitch,
-            seed=options.seed,
+    # What a decoder remarks on damaged files is in the reasons of the rejects.
+    logging.getLogger("tifffile").setLevel(logging.CRITICAL)
+    parser = build_parser()
+    options = parser.parse_args(argv)
+    if options.command == "dump" and options.out is None and not options.dry_run:
+        parser.error("dump needs --out DIR, unless with --dry-run")
+    return options.work(options)
+
+
+def _demo(options: argparse.Namespace) -> int:
+    def write() -> str:
+        return str(
+            demo.write_demo(
+                options.out,
+                options.panels,
+                side=options.side,
+                pitch=options.pitch,
+                seed=options.seed,
+            )
         )
-    except (ValueError, TypeError, FileExistsError, NotADirectoryError) as error:
-        return _stopped(f"mfeat demo: {error}", 2)
-    except OSError as error:
-        return _stopped(f"mfeat demo: no file is left in {options.out}: {error}", 3)
-    except KeyboardInterrupt:
-        return _stopped(f"mfeat demo: interrupted; no file is left in {options.out}", 130)
+
+    return _run("demo", write, "is written", f"no file is left in {options.out}")
+
+
+def _dump(options: argparse.Namespace) -> int:
+    def run() -> str:
+        arguments = _dump_arguments(options)
+        how = {name: arguments.pop(name) for name in ("jobs", "backend") if name in arguments}
+        how["cluster"] = options.cluster
+        if options.dry_run:
+            found = estimate(
+                options.source, dump_settings(**arguments), out=options.out or "", **how
+            )
+            lines = "".join(f"# {line}\n" for line in str(found).splitlines())
+            return f"{lines}\n{found.settings.toml()}".rstrip()
+        summary = dump(options.source, options.out, fresh=options.fresh, **arguments, **how)
+        print(f"mfeat dump: {summary}", file=sys.stderr)
+        if options.strict and summary.rejects:
+            raise RejectsFound(summary)
+        return summary.out
+
+    kept = f"what is finished is kept in {options.out}; the same command goes on from there"
+    return _run("dump", run, "is complete", kept)
+
+
+def _dump_arguments(options: argparse.Namespace) -> dict[str, Any]:
+    """Return the arguments of `dump` from the settings file and the flags, which go before it."""
+    found = {} if options.settings is None else read_settings(options.settings)
+    for name in KEYS:
+        value = getattr(options, name)
+        if value is not None:
+            found[name] = value
+    if options.features:
+        features = dict(feature_value(text) for text in options.features)
+        base = found.get("transformer", MinkowskiCurves())
+        found["transformer"] = with_features(base, features, "--set")
+    return found
+
+
+def _run(command: str, work: Callable[[], str], done: str, left: str) -> int:
+    """Do the work of a command and print its result; returns the exit code."""
+    code = 0
     try:
-        print(manifest, flush=True)
+        result = work()
+    except RejectsFound as found:
+        result, code = found.summary.out, 1
+    except (
+        *(ValueError, TypeError, FileNotFoundError, FileExistsError, NotADirectoryError),
+        *(IsADirectoryError, OutputInUse, ImportError),
+    ) as error:
+        return _stopped(f"mfeat {command}: {error}", 2)
+    except (OSError, InputChanged, RuntimeError) as error:
+        return _stopped(f"mfeat {command}: {error}; {left}", 3)
+    except KeyboardInterrupt:
+        return _stopped(f"mfeat {command}: interrupted; {left}", 130)
+    try:
+        print(result, flush=True)
     except OSError as error:
         sys.stdout = None  # so that Python does not try to flush it again on the way out
-        return _stopped(f"mfeat demo: {manifest} is written, but stdout failed: {error}", 3)
-    return 0
+        return _stopped(f"mfeat {command}: {result} {done}, but stdout failed: {error}", 3)
+    return code
 
 
 def _stopped(message: str, code: int) -> int:

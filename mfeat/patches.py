@@ -219,6 +219,17 @@ class PatchGrid:
         >>> PatchGrid(size=4, stride=3).positions((4, 8)).tolist()
         [[0, 0], [0, 3]]
         """
+        return positions_of(*self.starts(shape))
+
+    def starts(self, shape: tuple[int, int]) -> tuple[np.ndarray, np.ndarray]:
+        """Return the rows and the columns at which patches start on an image of a shape.
+
+        Examples
+        --------
+        >>> from mfeat import PatchGrid
+        >>> PatchGrid(size=4, stride=3, edge="shift").starts((4, 9))
+        (array([0]), array([0, 3, 5]))
+        """
         shape = _pair("shape", shape, 1)
         if min(shape[0] - self.size[0], shape[1] - self.size[1]) < 0:
             raise ValueError(
@@ -229,7 +240,7 @@ class PatchGrid:
             self._starts(length, size, stride)
             for length, size, stride in zip(shape, self.size, self.stride, strict=True)
         )
-        return np.stack(np.meshgrid(rows, cols, indexing="ij"), axis=-1).reshape(-1, 2)
+        return rows, cols
 
     def cut(self, image: Any, mask: Any = None) -> Patches:
         """Cut an image into patches, as views.
@@ -265,7 +276,7 @@ class PatchGrid:
         valid = _checks.valid_pixels(image, _checks.valid_mask(mask, image.shape))
         if mask is not None:
             image = np.ma.MaskedArray(image, mask=(valid == 0) if valid is not None else False)
-        fractions = self._valid_fractions(valid, image.shape, positions)
+        fractions = window_shares(valid, positions, self.size)
         kept = fractions >= self.min_valid
         return Patches(
             image=image,
@@ -282,21 +293,6 @@ class PatchGrid:
             starts = np.append(starts, length - size)
         return starts
 
-    def _valid_fractions(
-        self, valid: np.ndarray | None, shape: tuple[int, int], positions: np.ndarray
-    ) -> np.ndarray:
-        """Return valid windows of each patch over its windows, from sums over rectangles."""
-        if valid is None:
-            return np.ones(len(positions))
-        ok, _ = windows_of(valid)
-        # sums[i, j]: counting windows whose lower right pixel lies above row i, left of column j
-        sums = np.zeros((shape[0] + 1, shape[1] + 1), dtype=np.int64)
-        np.cumsum(np.cumsum(ok[:-1, :-1], axis=0, dtype=np.int64), axis=1, out=sums[1:, 1:])
-        top, left = positions[:, 0] + 1, positions[:, 1] + 1
-        bottom, right = positions[:, 0] + self.size[0], positions[:, 1] + self.size[1]
-        inside = sums[bottom, right] - sums[top, right] - sums[bottom, left] + sums[top, left]
-        return inside / ((self.size[0] - 1) * (self.size[1] - 1))
-
     def _covered(self, shape: tuple[int, int], positions: np.ndarray) -> float:
         share = 1.0
         for axis in (0, 1):
@@ -305,6 +301,30 @@ class PatchGrid:
                 reached[start : start + self.size[axis]] = True
             share *= reached.mean()
         return float(share)
+
+
+def positions_of(rows: np.ndarray, cols: np.ndarray) -> np.ndarray:
+    """Return all pairs (n, 2) of starting rows and columns, row by row."""
+    return np.stack(np.meshgrid(rows, cols, indexing="ij"), axis=-1).reshape(-1, 2)
+
+
+def window_shares(
+    valid: np.ndarray | None, positions: np.ndarray, size: tuple[int, int]
+) -> np.ndarray:
+    """Return valid windows of each patch over its windows, from sums over rectangles.
+
+    `valid` is the map of valid pixels of the image as uint8, None where all are.
+    """
+    if valid is None:
+        return np.ones(len(positions))
+    ok, _ = windows_of(valid)
+    # sums[i, j]: counting windows whose lower right pixel lies above row i, left of column j
+    sums = np.zeros((valid.shape[0] + 1, valid.shape[1] + 1), dtype=np.int64)
+    np.cumsum(np.cumsum(ok[:-1, :-1], axis=0, dtype=np.int64), axis=1, out=sums[1:, 1:])
+    top, left = positions[:, 0] + 1, positions[:, 1] + 1
+    bottom, right = positions[:, 0] + size[0], positions[:, 1] + size[1]
+    inside = sums[bottom, right] - sums[top, right] - sums[bottom, left] + sums[top, left]
+    return inside / ((size[0] - 1) * (size[1] - 1))
 
 
 def _pair(name: str, value: Any, minimum: int) -> tuple[int, int]:

@@ -139,13 +139,18 @@ def refusals(stack: Stack, min_valid: float) -> dict[int, str]:
     """Return for each image with too few valid pixels its place in the group and the reason."""
     if stack.valid is None:
         return {}
-    found = {}
-    for place, fraction in zip(stack.places, valid_fractions(stack.valid), strict=True):
-        if fraction == 0.0:
-            found[int(place)] = "no window of four valid pixels"
-        elif fraction < min_valid:
-            found[int(place)] = f"valid fraction {fraction:.3g} < min_valid {min_valid:g}"
-    return found
+    fractions = zip(stack.places, valid_fractions(stack.valid), strict=True)
+    reasons = {int(place): refusal(fraction, min_valid) for place, fraction in fractions}
+    return {place: reason for place, reason in reasons.items() if reason is not None}
+
+
+def refusal(valid_fraction: float, min_valid: float) -> str | None:
+    """Return why an image of a valid fraction is refused, or None if it is not."""
+    if valid_fraction == 0.0:
+        return "no window of four valid pixels"
+    if valid_fraction < min_valid:
+        return f"valid fraction {valid_fraction:.3g} < min_valid {min_valid:g}"
+    return None
 
 
 def rows_of(plan: VectorPlan, group: Group, min_valid: float) -> tuple[np.ndarray, dict[int, str]]:

@@ -1,0 +1,211 @@
+"""From an item of a plan to patches: reading bands of an image, its mask and its truth.
+
+What is wrong with a file shows before the first patch of it is given, if the image is decoded
+whole. Of an image that is read in strips, damage inside concerns the patches that need the damaged
+strip.
+"""
+
+import contextlib
+from collections.abc import Callable, Iterator
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+
+from mfeat._pages import Page, UnreadableImage
+from mfeat.images import grey_rows, missing_pixels, open_pages
+from mfeat.options import DumpSettings
+from mfeat.patches import Patches, positions_of, window_shares
+from mfeat.planning import WHOLE_PIXELS, Item
+
+#: Pixels of an image that are held at once where bands can be read; at least one row of patches.
+BAND_PIXELS = 1 << 22
+
+_BAND_PATCHES = 1 << 15
+
+
+@dataclass(frozen=True, eq=False)
+class Cut:
+    """Patches of one band of an image.
+
+    Attributes
+    ----------
+    top, left : int
+        Where the band starts in the image.
+    size : (int, int)
+        Rows and columns of a patch.
+    positions : ndarray of shape (n, 2)
+        Top left pixels of the patches in the band.
+    fractions : ndarray of shape (n,)
+        Valid fractions.
+    pixels : ndarray of shape (rows, cols)
+        The band; a masked array where pixels are missing by a mask or by their value.
+    truth : ndarray of shape (rows, cols) or None
+        Labels of the pixels.
+    infinities : ndarray of shape (rows, cols), bool, or None
+        Where valid pixels are infinite.
+    damage : str or None
+        Why the band cannot be read; there are no pixels then.
+    """
+
+    top: int
+    left: int
+    size: tuple[int, int]
+    positions: np.ndarray
+    fractions: np.ndarray
+    pixels: np.ndarray | None = None
+    truth: np.ndarray | None = None
+    infinities: np.ndarray | None = None
+    damage: str | None = None
+
+    def infinite(self, k: int) -> str | None:
+        """Return the complaint about infinite pixels of a patch, if there are any."""
+        if self.infinities is None:
+            return None
+        row, col = self.positions[k]
+        found = np.argwhere(self.infinities[row : row + self.size[0], col : col + self.size[1]])
+        if not len(found):
+            return None
+        place = found[0] + (row, col)
+        value = np.asarray(self.pixels)[tuple(place)]
+        return (
+            f"holds {value} at row {self.top + place[0]}, column {self.left + place[1]}; infinite "
+            "values cannot be ranked"
+        )
+
+    def chosen(self, good: np.ndarray) -> Patches:
+        """Return some of the patches."""
+        return Patches(
+            image=self.pixels,
+            size=self.size,
+            positions=self.positions[good],
+            valid_fractions=self.fractions[good],
+            left_out=self.positions[~good],
+            covered_fraction=1.0,
+        )
+
+
+def cuts(settings: DumpSettings, entry: dict[str, Any], item: Item) -> Iterator[Cut]:
+    """Yield the patches of an item, band by band.
+
+    Raises
+    ------
+    UnreadableImage
+        Before the first band, if the file, its mask or its truth cannot be used.
+    """
+    with contextlib.ExitStack() as stack:
+
+        def opened(what: str, location: str, read: Callable) -> _Rows:
+            with _told(what, location):
+                pages = stack.enter_context(open_pages(location, settings.max_pixels))
+                page = pages[item.page if item.page < len(pages) else 0]
+                if page.shape != (item.rows, item.cols):
+                    raise UnreadableImage(
+                        f"it has {page.shape[0]}x{page.shape[1]} pixels, the image "
+                        f"{item.rows}x{item.cols}"
+                    )
+                return _Rows(page, read)
+
+        def grey(page: Page, start: int, stop: int) -> np.ndarray:
+            return grey_rows(page, start, stop, settings.channel)
+
+        image = opened("", entry["location"], grey)
+        mask = truth = None
+        if entry["mask_location"] is not None:
+            mask = opened("mask", entry["mask_location"], _whole_numbers)
+        if settings.label_from == "truth":
+            truth = opened("truth", entry["truth_location"], _whole_numbers)
+        for top, bottom, positions, size in _bands(settings, item):
+            left, right = item.col, item.col + item.width
+            where = (top, left, size, positions - (top, left))
+            try:
+                pixels = image.rows(top, bottom)[:, left:right]
+                known = None if mask is None else mask.rows(top, bottom)[:, left:right] != 0
+                labels = None if truth is None else truth.rows(top, bottom)[:, left:right]
+            except UnreadableImage as error:
+                yield Cut(*where, np.zeros(len(positions)), damage=str(error))
+                continue
+            yield _cut(where, pixels, known, labels, settings.missing_value)
+
+
+@contextlib.contextmanager
+def _told(what: str, location: str) -> Iterator[None]:
+    """Say of which file a complaint is, if it is not of the image itself."""
+    try:
+        yield
+    except UnreadableImage as error:
+        raise UnreadableImage(f"{what} {location}: {error}" if what else str(error)) from error
+
+
+class _Rows:
+    """Rows of a page. What can be decoded whole is decoded when this is made."""
+
+    def __init__(self, page: Page, read: Callable[[Page, int, int], np.ndarray]):
+        self._page, self._read = page, read
+        self._all: np.ndarray | None = None
+        if page.piece > 0 and page.shape[0] * page.shape[1] <= WHOLE_PIXELS:
+            self._all = read(page, 0, page.shape[0])
+        elif not page.in_strips:
+            read(page, 0, 1)  # decodes the page; colours are mixed band by band
+
+    def rows(self, start: int, stop: int) -> np.ndarray:
+        if self._all is not None:
+            return self._all[start:stop]
+        return self._read(self._page, start, stop)
+
+
+def _whole_numbers(page: Page, start: int, stop: int) -> np.ndarray:
+    """Return rows of a mask or of an image of labels."""
+    if page.samples != 1 or page.dtype.kind not in "bui":
+        raise UnreadableImage(
+            f"pixels of {page.samples} x {page.dtype}; one bool or integer a pixel is needed"
+        )
+    return grey_rows(page, start, stop)
+
+
+def _bands(
+    settings: DumpSettings, item: Item
+) -> Iterator[tuple[int, int, np.ndarray, tuple[int, int]]]:
+    """Yield the first and last row of bands and the patches in each, (row, column) in the image."""
+    if item.stop == 0:
+        place = np.array([[item.row, item.col]])
+        yield item.row, item.row + item.height, place, (item.height, item.width)
+        return
+    tall = settings.grid.size[0]
+    rows, cols = settings.grid.starts((item.height, item.width))
+    rows = rows[item.first : item.stop] + item.row
+    cols = cols + item.col
+    start = 0
+    while start < len(rows):
+        stop = start + 1
+        while (
+            stop < len(rows)
+            and (rows[stop] + tall - rows[start]) * item.cols <= BAND_PIXELS
+            and (stop + 1 - start) * len(cols) <= _BAND_PATCHES
+        ):
+            stop += 1
+        band = rows[start:stop]
+        yield int(band[0]), int(band[-1]) + tall, positions_of(band, cols), settings.grid.size
+        start = stop
+
+
+def _cut(
+    where: tuple, pixels: np.ndarray, known: np.ndarray | None, truth: np.ndarray | None,
+    missing_value: float | None,
+) -> Cut:  # fmt: skip
+    """Return the patches of a band with what is missing in it: by mask, by value, or NaN."""
+    missing = missing_pixels(pixels, missing_value)
+    if missing is not None and missing.any():
+        known = ~missing if known is None else known & ~missing
+    if known is not None and known.all():
+        known = None
+    valid, infinities = known, None
+    if pixels.dtype.kind == "f" and not (finite := np.isfinite(pixels)).all():
+        infinities = np.isinf(pixels) if known is None else np.isinf(pixels) & known
+        valid = finite if known is None else known & finite
+    _, _, size, positions = where
+    fractions = window_shares(None if valid is None else valid.astype(np.uint8), positions, size)
+    if known is not None:
+        pixels = np.ma.MaskedArray(pixels, ~known)
+    has_infinities = infinities is not None and infinities.any()
+    return Cut(*where, fractions, pixels, truth, infinities if has_infinities else None)
