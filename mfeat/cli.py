@@ -12,8 +12,8 @@ from collections.abc import Callable, Sequence
 from pathlib import Path
 from typing import Any
 
-from mfeat import MinkowskiCurves, __version__, demo, dump
-from mfeat.dump import BACKENDS, RejectsFound
+from mfeat import __version__, demo
+from mfeat.dump import BACKENDS, RejectsFound, dump
 from mfeat.estimate import estimate
 from mfeat.images import MAX_PIXELS
 from mfeat.options import (
@@ -28,6 +28,7 @@ from mfeat.options import (
 from mfeat.parts import InputChanged
 from mfeat.patches import EDGE_RULES, LABEL_RULES
 from mfeat.storage import OutputInUse
+from mfeat.transformer import MinkowskiCurves
 
 
 def build_parser() -> argparse.ArgumentParser:

@@ -113,8 +113,12 @@ def estimate(
         From `mfeat.options.dump_settings`.
     out : path-like or str, default ""
         The output, if it lies inside the source and is to be left out.
-    jobs, backend, cluster
-        The workers, as for `mfeat.dump`.
+    jobs : int, default -1
+        Number of workers, as for `mfeat.dump`.
+    backend : {"threading", "loky"}, optional
+        Kind of workers.
+    cluster : str, optional
+        Address of a Dask scheduler.
     progress : bool, optional
         Whether to show progress; default where stderr is a terminal.
 

@@ -154,7 +154,7 @@ def read_settings(path: Any) -> dict[str, Any]:
     >>> from mfeat.options import read_settings
     >>> with tempfile.TemporaryDirectory() as folder:
     ...     file = Path(folder) / "dump.toml"
-    ...     _ = file.write_text("size = 128\\n[features]\\nlevels = 8\\n")
+    ...     _ = file.write_text("size = 128\n[features]\nlevels = 8\n")
     ...     read_settings(file)
     {'size': 128, 'transformer': MinkowskiCurves(levels=8)}
     """

@@ -68,12 +68,27 @@ def list_sources(source: Any, *, label_from: str | None = None, leave_out: str =
     leave_out : str, default ""
         A folder whose files are not listed: the output, if it lies inside the source.
 
+    Returns
+    -------
+    Sources
+
     Raises
     ------
     FileNotFoundError
         If there is no such source, or nothing in it.
     ValueError
         For a manifest that cannot be used; rows and columns are named.
+
+    Examples
+    --------
+    >>> import tempfile
+    >>> from pathlib import Path
+    >>> from mfeat.sources import list_sources
+    >>> with tempfile.TemporaryDirectory() as folder:
+    ...     for name in ("scan10.tif", "scan9.tif"):
+    ...         (Path(folder) / name).touch()
+    ...     list_sources(folder).entries["source"].to_pylist()
+    ['scan9.tif', 'scan10.tif']
     """
     location = storage.absolute(storage.as_location(source, "source"))
     path = storage.local_path(location)

@@ -52,7 +52,7 @@ def test_nothing_is_overwritten(tmp_path, capsys):
 @pytest.mark.parametrize(
     ("failure", "code", "message"),
     [
-        (OSError(28, "No space left on device"), 3, "no file is left in .*No space left"),
+        (OSError(28, "No space left on device"), 3, "No space left.*no file is left in"),
         (KeyboardInterrupt(), 130, "interrupted; no file is left in"),
     ],
 )

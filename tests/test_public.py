@@ -10,7 +10,7 @@ from pathlib import Path
 import pytest
 
 import mfeat
-from mfeat import demo, functionals, levels, patches, surfaces
+from mfeat import demo, estimate, functionals, images, levels, patches, sources, surfaces
 
 ROOT = Path(__file__).parents[1]
 PACKAGE = ROOT / "mfeat"
@@ -30,17 +30,25 @@ DOCUMENTED = [
     surfaces.gaussian_field,
     surfaces.boolean_discs,
     demo.write_demo,
+    mfeat.dump,
+    mfeat.read_table,
+    images.read_image,
+    sources.list_sources,
+    estimate.estimate,
 ]
 
 
 def test_the_public_names():
     assert mfeat.__all__ == [
         "Curves",
+        "FeatureTable",
         "MinkowskiCurves",
         "PatchGrid",
         "PatternCounts",
         "count_patterns",
+        "dump",
         "minkowski_curves",
+        "read_table",
     ]
     assert all(hasattr(mfeat, name) for name in mfeat.__all__)
     assert re.fullmatch(r"\d+\.\d+\.\d+", mfeat.__version__)
@@ -116,8 +124,30 @@ LAYERS = {
     "_marks": set(),
     "surfaces": {"_checks", "_marks"},
     "demo": {"_checks", "surfaces"},
-    "cli": {"demo"},
-    "__init__": {"counts", "curves", "patches", "transformer"},
+    "_pages": set(),
+    "_formats": {"_pages"},
+    "_tiff": {"_pages"},
+    "storage": set(),
+    "images": {"_checks", "_formats", "_pages", "_tiff", "storage"},
+    "sources": {"storage"},
+    "table": {"plan", "settings", "storage", "transformer"},
+    "options": {"_checks", "images", "patches", "storage", "table", "transformer"},
+    "planning": {"fields", "images", "options", "plan", "settings", "sources", "table"},
+    "cutting": {"_pages", "images", "options", "patches", "planning"},
+    "parts": {
+        *["_pages", "cutting", "options", "patches", "plan", "planning", "sources", "stacks"],
+        *["storage", "table", "vector"],
+    },
+    "dump": {"_checks", "images", "options", "parts", "planning", "sources", "storage", "table"},
+    "estimate": {
+        *["_pages", "cutting", "dump", "options", "parts", "planning", "sources", "storage"],
+        "table",
+    },
+    "cli": {
+        *["demo", "dump", "estimate", "images", "options", "parts", "patches", "storage"],
+        "transformer",
+    },
+    "__init__": {"counts", "curves", "dump", "patches", "table", "transformer"},
 }
 
 
