@@ -13,7 +13,7 @@ from pathlib import Path
 from typing import Any
 
 from mfeat import __version__, demo
-from mfeat.dump import BACKENDS, RejectsFound, dump
+from mfeat.dump import RejectsFound, dump
 from mfeat.estimate import estimate
 from mfeat.images import MAX_PIXELS
 from mfeat.options import (
@@ -29,6 +29,7 @@ from mfeat.parts import InputChanged
 from mfeat.patches import EDGE_RULES, LABEL_RULES
 from mfeat.storage import OutputInUse
 from mfeat.transformer import MinkowskiCurves
+from mfeat.workers import BACKENDS
 
 
 def build_parser() -> argparse.ArgumentParser:

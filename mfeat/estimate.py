@@ -14,12 +14,12 @@ from joblib import Parallel
 from mfeat import storage
 from mfeat._pages import UnreadableImage
 from mfeat.cutting import cuts
-from mfeat.dump import workers
 from mfeat.options import DumpSettings
 from mfeat.parts import vectors_or_reasons
 from mfeat.planning import Item, PitchedPlans, Plan, make_plan, part_sizes, pitch_of
 from mfeat.sources import list_sources
 from mfeat.table import PartWriter
+from mfeat.workers import workers
 
 # Images and patches of each that are computed to estimate the rest.
 _SAMPLED_IMAGES, _SAMPLED_PATCHES = 3, 64

@@ -138,14 +138,16 @@ LAYERS = {
         *["_pages", "cutting", "options", "patches", "plan", "planning", "sources", "stacks"],
         *["storage", "table", "vector"],
     },
-    "dump": {"_checks", "images", "options", "parts", "planning", "sources", "storage", "table"},
+    "workers": {"_checks"},
+    "runs": {"options", "parts", "planning", "sources", "storage", "table"},
+    "dump": {"images", "options", "runs", "sources", "storage", "table", "workers"},
     "estimate": {
-        *["_pages", "cutting", "dump", "options", "parts", "planning", "sources", "storage"],
-        "table",
+        *["_pages", "cutting", "options", "parts", "planning", "sources", "storage", "table"],
+        "workers",
     },
     "cli": {
         *["demo", "dump", "estimate", "images", "options", "parts", "patches", "storage"],
-        "transformer",
+        *["transformer", "workers"],
     },
     "__init__": {"counts", "curves", "dump", "patches", "table", "transformer"},
 }

@@ -1,0 +1,393 @@
+"""From a plan to a complete table: start or resume a run, write its parts, let the table appear.
+
+Parts are written by workers into a hidden folder beside the table, and the table appears when all
+are complete. What a killed run has finished is kept; the same call goes on from there.
+"""
+
+import contextlib
+import json
+import logging
+import time
+import uuid
+from collections.abc import Iterator
+from concurrent.futures.process import BrokenProcessPool
+from dataclasses import dataclass, field
+from typing import Any
+
+import pyarrow as pa
+import pyarrow.parquet as pq
+from joblib import Parallel, delayed
+from tqdm import tqdm
+
+from mfeat import __version__, storage
+from mfeat.options import DumpSettings
+from mfeat.parts import (
+    CANCELLED,
+    is_planned,
+    load_entries,
+    load_run,
+    part_name,
+    rejects_name,
+    run_folder,
+    save_run,
+    write_part,
+)
+from mfeat.planning import make_plan
+from mfeat.sources import Sources
+from mfeat.table import (
+    INPUTS,
+    MANIFEST,
+    REJECTS,
+    REJECTS_SCHEMA,
+    TABLE_VERSION,
+    UNFINISHED,
+    about,
+    differences,
+)
+
+_log = logging.getLogger("mfeat")
+
+
+class OutputRefused(ValueError):
+    """The output holds something that this run would have to change; the message says what."""
+
+
+@dataclass(frozen=True)
+class DumpSummary:
+    """What a run has written.
+
+    Attributes
+    ----------
+    out : str
+        The table.
+    patches, features, images : int
+        Rows, numbers a row, and images or regions listed.
+    parts : int
+        Files of the table.
+    rejects, rejected_images : int
+        Rows of ``rejects.parquet``, and how many of them are whole images.
+    notes : dict of str to int
+        Remarks on images, and how many images each concerns.
+    fingerprint : str
+        Of the settings.
+    kept_parts : int
+        Parts that an earlier run had finished.
+    seconds : float
+        Time taken.
+    """
+
+    out: str
+    patches: int
+    features: int
+    images: int
+    parts: int
+    rejects: int
+    rejected_images: int
+    notes: dict[str, int]
+    fingerprint: str
+    kept_parts: int = 0
+    seconds: float = field(default=0.0, compare=False)
+
+    def __str__(self) -> str:
+        lines = [
+            f"{self.patches} patches of {self.images} images, {self.features} numbers each, in "
+            f"{self.parts} parts: {self.out}"
+        ]
+        if self.kept_parts == self.parts:
+            lines.append("the table was complete already; nothing was done")
+        elif self.kept_parts:
+            lines.append(f"{self.kept_parts} parts were kept from an interrupted run")
+        if self.seconds and self.kept_parts < self.parts:
+            lines[0] += f", {self.seconds:.1f} s"
+        if self.rejects:
+            lines.append(
+                f"{self.rejects} rejects ({self.rejected_images} whole images) are listed with "
+                f"their reasons in {REJECTS}"
+            )
+        lines += [f"{count} images: {note}" for note, count in sorted(self.notes.items())]
+        return "\n".join(lines)
+
+
+def check_output(store: Any) -> None:
+    """Refuse an output that is neither empty nor a table of ours."""
+    if isinstance(store, storage.LocalStorage):
+        folder = store.root
+        if any(one.exists() and not one.is_dir() for one in (folder, *folder.parents)):
+            raise OutputRefused(f"out {folder} is a file, or lies below one; name a folder")
+    names = set(store.names()) - {UNFINISHED}
+    if names and not store.exists(UNFINISHED) and _manifest(store) is None:
+        raise OutputRefused(
+            f"out {store.location} holds other files, e.g. {min(names)}; name a new or empty folder"
+        )
+
+
+def _manifest(store: Any, folder: str = "") -> dict[str, Any] | None:
+    """Return the manifest of a complete table, or None where there is none."""
+    name = f"{folder}/{MANIFEST}" if folder else MANIFEST
+    try:
+        with store.open(name) as stream:
+            found = json.loads(stream.read())
+    except FileNotFoundError:
+        return None
+    except ValueError:
+        raise OutputRefused(f"{store.location}/{name} is no manifest of a feature table") from None
+    if not isinstance(found, dict) or "table_version" not in found:
+        raise OutputRefused(f"{store.location}/{name} is no manifest of a feature table")
+    return found
+
+
+class TableRun:
+    """One call of `dump`, while it holds the output."""
+
+    def __init__(
+        self,
+        store: Any,
+        settings: DumpSettings,
+        sources: Sources,
+        how: dict[str, Any],
+        quiet: bool | None,
+    ):
+        self._store, self._place = store, store.location
+        self._settings, self._sources = settings, sources
+        self._how, self._quiet = how, quiet
+        self._record = {"mfeat_version": __version__} | settings.record()
+
+    def complete(self, fresh: bool, started: float) -> DumpSummary:
+        """Resume, start, or find the table complete; returns what is there in the end."""
+        self._clean_up()
+        run = None if fresh else self._unfinished()
+        if fresh:
+            for name in self._runs():
+                self._store.remove_tree(run_folder(name))
+        elif run is not None:
+            kept = json.loads(self._store_read(f"{run_folder(run)}/record.json"))
+            self._refuse_differences(kept, run_folder(run), "an interrupted run")
+        elif (manifest := _manifest(self._store)) is not None:
+            self._refuse_differences(manifest["record"], "", "a complete table")
+            return self._summary(manifest, kept_parts=len(manifest["parts"]))
+        if run is None:
+            run = self._plan()
+        kept = self._write_parts(run)
+        manifest = self._finish(run)
+        publish(self._store, run)
+        return self._summary(manifest, kept, time.monotonic() - started)
+
+    def _store_read(self, name: str) -> bytes:
+        with self._store.open(name) as stream:
+            return stream.read()
+
+    def _runs(self) -> list[str]:
+        return [name for name in self._store.names(UNFINISHED) if name != "lock"]
+
+    def _clean_up(self) -> None:
+        """Finish what was about to appear, and delete plans that were never finished."""
+        for run in self._runs():
+            if self._store.exists(f"{run_folder(run)}/{MANIFEST}"):
+                publish(self._store, run)
+            elif not is_planned(self._store, run):
+                self._store.remove_tree(run_folder(run))
+
+    def _unfinished(self) -> str | None:
+        runs = self._runs()
+        return runs[0] if runs else None
+
+    def _refuse_differences(self, record: dict[str, Any], folder: str, what: str) -> None:
+        """Refuse to go on with other settings or inputs than those of what is there."""
+        found = differences(record, self._record)
+        found += changed_inputs(load_entries(self._store, folder), self._sources.entries)
+        if found:
+            lines = "\n  ".join(found)
+            raise OutputRefused(
+                f"out {self._place} holds {what} of other settings or inputs (there -> now):\n"
+                f"  {lines}\nname another output, or start anew with fresh (--fresh)"
+            )
+
+    def _plan(self) -> str:
+        with Parallel(**self._how) as parallel:
+            plan = make_plan(self._sources, self._settings, parallel, self._quiet)
+        run = uuid.uuid4().hex[:12]
+        self._store.make(run_folder(run))
+        with self._store.writing(f"{run_folder(run)}/record.json") as stream:
+            stream.write(json.dumps(self._record).encode())
+        save_run(self._store, run, plan)
+        return run
+
+    def _write_parts(self, run: str) -> int:
+        """Write the parts that are missing; returns how many were there."""
+        folder = run_folder(run)
+        planned = load_run(self._place, run)
+        patches, costs = planned.patches_and_costs()
+        self._sweep(folder)
+        missing = self._missing(folder, len(patches))
+        kept = len(patches) - len(missing)
+        done = int(patches.sum() - patches[missing].sum())
+        CANCELLED.discard(run)
+        with tqdm(
+            total=int(patches.sum()), initial=done, unit="patch", unit_scale=True,
+            desc="patches", disable=self._quiet,
+        ) as progress:  # fmt: skip
+            while missing:
+                before = len(missing)
+                # The dearest first, so that no worker is left alone with a large one at the end.
+                missing.sort(key=lambda part: -costs[part])
+                try:
+                    for part in self._written(run, missing):
+                        progress.update(int(patches[part]))
+                    missing = []
+                except BrokenProcessPool as error:
+                    missing = self._missing(folder, len(patches))
+                    if len(missing) == before:
+                        raise RuntimeError(
+                            "a worker process died before it could finish a part: out of memory, "
+                            "or killed. What was finished is kept; run the same again, with fewer "
+                            f"jobs if memory is short ({error})"
+                        ) from error
+                    _log.warning("a worker process died; its parts are done again")
+        return kept
+
+    def _written(self, run: str, parts: list[int]) -> Iterator[int]:
+        """Yield parts as they are complete."""
+        tasks = (delayed(write_part)(self._place, run, part, __version__) for part in parts)
+        results = Parallel(return_as="generator_unordered", **self._how)(tasks)
+        try:
+            for done in results:
+                yield done.part
+        except BaseException:
+            CANCELLED.add(run)  # threads cannot be stopped from outside
+            with contextlib.suppress(Exception):
+                results.close()
+            self._sweep(run_folder(run))
+            raise
+
+    def _sweep(self, folder: str) -> None:
+        """Delete what a killed worker left half written."""
+        for name in self._store.names(folder):
+            if name.endswith(storage.TEMPORARY):
+                self._store.remove(f"{folder}/{name}")
+
+    def _missing(self, folder: str, count: int) -> list[int]:
+        """Return the parts of which there is no readable file."""
+        names = set(self._store.names(folder))
+        return [
+            part
+            for part in range(count)
+            if part_name(part) not in names or self._rows_of(f"{folder}/{part_name(part)}") is None
+        ]
+
+    def _rows_of(self, name: str) -> int | None:
+        try:
+            with self._store.open(name) as stream:
+                return pq.read_metadata(stream).num_rows
+        except (pa.ArrowInvalid, OSError):
+            return None
+
+    def _finish(self, run: str) -> dict[str, Any]:
+        """Write the rejects and the manifest of a run whose parts are all there."""
+        folder, planned = run_folder(run), load_run(self._place, run)
+        count = planned.n_parts
+        total = images = 0
+        names = set(self._store.names(folder))
+        with (
+            self._store.writing(f"{folder}/{REJECTS}") as stream,
+            pq.ParquetWriter(stream, REJECTS_SCHEMA, compression="zstd") as writer,
+        ):
+            for part in range(count):
+                if rejects_name(part) not in names:
+                    continue
+                with self._store.open(f"{folder}/{rejects_name(part)}") as rejects:
+                    table = pq.read_table(rejects)
+                writer.write_table(table)
+                total += len(table)
+                images += table["row"].null_count
+        parts = [
+            {"name": part_name(k), "rows": self._rows_of(f"{folder}/{part_name(k)}")}
+            for k in range(count)
+        ]
+        made = about(planned.schema)
+        manifest = {
+            "format": "mfeat feature table",
+            "table_version": TABLE_VERSION,
+            "mfeat_version": __version__,
+            "fingerprint": made["fingerprint"],
+            "rows": sum(part["rows"] for part in parts),
+            "features": len(made["features"]),
+            "images": planned.entries.num_rows,
+            "rejects": {"all": total, "images": images},
+            "notes": planned.notes,
+            "parts": parts,
+            "record": self._record,
+        }
+        with self._store.writing(f"{folder}/{MANIFEST}") as stream:
+            stream.write(json.dumps(manifest, indent=1, ensure_ascii=False).encode())
+        return manifest
+
+    def _summary(
+        self, manifest: dict[str, Any], kept_parts: int, seconds: float = 0.0
+    ) -> DumpSummary:
+        return DumpSummary(
+            out=self._place,
+            patches=manifest["rows"],
+            features=manifest["features"],
+            images=manifest["images"],
+            parts=len(manifest["parts"]),
+            rejects=manifest["rejects"]["all"],
+            rejected_images=manifest["rejects"]["images"],
+            notes=manifest["notes"],
+            fingerprint=manifest["fingerprint"],
+            kept_parts=kept_parts,
+            seconds=seconds,
+        )
+
+
+def publish(store: Any, run: str) -> None:
+    """Let the table of a complete run take its place; can be repeated from wherever it stopped.
+
+    The run's own manifest says that it is complete. The old table goes first, the new manifest
+    comes last, and the plan goes before it, so that no half state looks like another.
+    """
+    folder = run_folder(run)
+    manifest = _manifest(store, folder)
+    store.remove(MANIFEST)
+    there = set(store.names(folder))
+    wanted = [part["name"] for part in manifest["parts"]]
+    for name in (*wanted, REJECTS, INPUTS):
+        if name in there:
+            store.move(f"{folder}/{name}", name)
+    for name in set(store.names()) - set(wanted):
+        if name.startswith("part-") and name.endswith(".parquet"):
+            store.remove(name)
+    store.remove(f"{folder}/plan.arrow")
+    store.settle()
+    store.move(f"{folder}/{MANIFEST}", MANIFEST)
+    store.settle()
+    store.remove_tree(folder)
+
+
+def changed_inputs(before: pa.Table, now: pa.Table) -> list[str]:
+    """Return how two lists of inputs differ, a line each; where the files lie does not matter."""
+    before, now = before.drop_columns(["location"]), now.drop_columns(["location"])
+    if before.equals(now):
+        return []
+    added_columns = set(now.column_names) ^ set(before.column_names)
+    if added_columns:
+        return [f"columns of the manifest: {sorted(added_columns)} on one side only"]
+    key = ("source", "row", "col", "height", "width")
+    rows = [
+        {tuple(row[name] for name in key): row for row in table.to_pylist()}
+        for table in (before, now)
+    ]
+    removed = [k[0] for k in rows[0] if k not in rows[1]]
+    added = [k[0] for k in rows[1] if k not in rows[0]]
+    changed = []
+    for k in rows[0].keys() & rows[1].keys():
+        one, other = rows[0][k], rows[1][k]
+        what = [name for name in one if one[name] != other[name] and one[name] == one[name]]
+        if what:
+            names = {"stamp": "size or time"}
+            changed.append(f"{k[0]} ({', '.join(names.get(name, name) for name in what)})")
+    lines = []
+    for what, found in (("removed", removed), ("added", added), ("changed", sorted(changed))):
+        if found:
+            more = f", ... ({len(found)})" if len(found) > 5 else ""
+            lines.append(f"inputs {what}: {', '.join(found[:5])}{more}")
+    return lines or ["inputs: their order"]
