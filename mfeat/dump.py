@@ -8,8 +8,8 @@ from mfeat import storage
 from mfeat.images import MAX_PIXELS
 from mfeat.options import dump_settings
 from mfeat.runs import DumpSummary, TableRun, check_output
+from mfeat.schema import REJECTS, UNFINISHED
 from mfeat.sources import list_sources
-from mfeat.table import REJECTS, UNFINISHED
 from mfeat.workers import workers
 
 _log = logging.getLogger("mfeat")

@@ -17,8 +17,8 @@ from mfeat.cutting import cuts
 from mfeat.options import DumpSettings
 from mfeat.parts import vectors_or_reasons
 from mfeat.planning import Item, PitchedPlans, Plan, make_plan, part_sizes, pitch_of
+from mfeat.schema import PartWriter
 from mfeat.sources import list_sources
-from mfeat.table import PartWriter
 from mfeat.workers import workers
 
 # Images and patches of each that are computed to estimate the rest.

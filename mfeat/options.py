@@ -10,7 +10,7 @@ import numpy as np
 from mfeat import _checks, storage
 from mfeat.images import MAX_PIXELS, check_channel
 from mfeat.patches import LABEL_RULES, PatchGrid
-from mfeat.table import transformer_record
+from mfeat.schema import transformer_record
 from mfeat.transformer import MinkowskiCurves
 
 REGIONS = ("patch", "grid")

@@ -17,12 +17,19 @@ import pyarrow.parquet as pq
 from mfeat import __version__, stacks, storage
 from mfeat._pages import UnreadableImage
 from mfeat.cutting import BAND_PIXELS, Cut, cuts
+from mfeat.entries import CARRIED, stamp_of_entry
 from mfeat.options import DumpSettings, dump_settings
 from mfeat.patches import Patches
 from mfeat.plan import VectorPlan
 from mfeat.planning import Item, PitchedPlans, Plan, part_sizes, pitch_of
-from mfeat.sources import CARRIED, stamp_of_entry
-from mfeat.table import INPUTS, REJECTS_SCHEMA, UNFINISHED, PartWriter, restored, transformer_record
+from mfeat.schema import (
+    INPUTS,
+    REJECTS_SCHEMA,
+    UNFINISHED,
+    PartWriter,
+    restored,
+    transformer_record,
+)
 from mfeat.vector import groups_of, refusal, rows_of
 
 # Patches that are computed at once; small images are gathered up to this many.

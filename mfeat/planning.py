@@ -17,13 +17,13 @@ from joblib import Parallel, delayed
 from sklearn.base import clone
 from tqdm import tqdm
 
+from mfeat.entries import CARRIED, Sources
 from mfeat.fields import check_scales
 from mfeat.images import ImageInfo, UnreadableImage, scan
 from mfeat.options import DumpSettings, uniform_pitch
 from mfeat.plan import VectorPlan
+from mfeat.schema import table_schema, table_settings
 from mfeat.settings import resolve
-from mfeat.sources import CARRIED, Sources
-from mfeat.table import table_schema, table_settings
 
 #: Compressed images of up to this many pixels are decoded whole, so that damage anywhere in one
 #: rejects the file and not a part of it; larger ones are read in strips where the format allows.

@@ -20,6 +20,7 @@ from joblib import Parallel, delayed
 from tqdm import tqdm
 
 from mfeat import __version__, storage
+from mfeat.entries import Sources
 from mfeat.options import DumpSettings
 from mfeat.parts import (
     CANCELLED,
@@ -33,8 +34,7 @@ from mfeat.parts import (
     write_part,
 )
 from mfeat.planning import make_plan
-from mfeat.sources import Sources
-from mfeat.table import (
+from mfeat.schema import (
     INPUTS,
     MANIFEST,
     REJECTS,

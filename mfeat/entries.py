@@ -1,0 +1,105 @@
+"""Entries: the image files and regions that a source lists, as a table with stamps of files."""
+
+import json
+import os
+from dataclasses import dataclass
+from typing import Any
+
+import pyarrow as pa
+
+from mfeat import storage
+
+#: Column of a manifest with images of labels, read under ``label_from="truth"``; also carried.
+TRUTH = "truth"
+
+#: What names of carried columns start with in `Sources.entries`, apart from its own columns.
+CARRIED = "manifest:"
+
+
+@dataclass(frozen=True)
+class Sources:
+    """What a source lists, in order.
+
+    Attributes
+    ----------
+    entries : pyarrow.Table
+        One row an image file, or region of one, with the columns `source` (as listed), `location`
+        (where it is), `stamp` (changes with the file, its mask and truth; null if missing),
+        `label`, `group`, `mask_location`, `truth_location`, `row`, `col`, `height`, `width`,
+        `pitch_x`, `pitch_y`, `unit`, then those in `carried`, their names after `CARRIED`.
+    carried : tuple of str
+        Columns of the manifest that go into the table.
+    remarks : tuple of str
+        What a user should know.
+    """
+
+    entries: pa.Table
+    carried: tuple[str, ...]
+    remarks: tuple[str, ...] = ()
+
+
+def join(base: str, name: str) -> str:
+    """Return where a listed name is: itself if it is absolute or a URI, else below the base."""
+    if "://" in name or os.path.isabs(name):
+        return name
+    return f"{base.rstrip('/')}/{name}" if "://" in base else os.path.join(base, name)
+
+
+_TYPES = {
+    "source": pa.string(), "location": pa.string(), "label": pa.string(), "group": pa.string(),
+    "mask_location": pa.string(), "truth_location": pa.string(),
+    "row": pa.int64(), "col": pa.int64(), "height": pa.int64(), "width": pa.int64(),
+    "pitch_x": pa.float64(), "pitch_y": pa.float64(), "unit": pa.string(),
+}  # fmt: skip
+
+
+def entries_table(columns: dict[str, Any], carried: dict[str, Any]) -> pa.Table:
+    """Return entries with every column there is; carried ones come last."""
+    count = len(columns["source"])
+    arrays, names = [], []
+    for name, kind in _TYPES.items():
+        given = columns.get(name)
+        if given is None:
+            arrays.append(pa.nulls(count, kind))
+        elif isinstance(given, list):
+            arrays.append(pa.array(given, kind))
+        elif name == "label" and _kept_label(given.type):
+            arrays.append(given)
+        else:
+            arrays.append(given.cast(kind))
+        names.append(name)
+    for name, column in carried.items():
+        names.append(CARRIED + name)
+        arrays.append(column)
+    return pa.Table.from_arrays(arrays, names)
+
+
+def _kept_label(kind: pa.DataType) -> bool:
+    return pa.types.is_integer(kind) or pa.types.is_boolean(kind)
+
+
+def stamp_of_entry(entry: dict[str, Any], known: dict[str, str | None] | None = None) -> str | None:
+    """Return the stamps of the files of an entry as one text, or None where its image is missing.
+
+    `known` keeps stamps of files between calls.
+    """
+    known = {} if known is None else known
+    names = [entry[name] for name in ("location", "mask_location", "truth_location")]
+    for name in names:
+        if name is not None and name not in known:
+            try:
+                known[name] = storage.stamp(name)
+            except (OSError, ValueError):
+                known[name] = None  # the reason is found when it is opened
+    own, *more = (known[name] for name in names if name is not None)
+    return json.dumps([own, *more]) if more else own
+
+
+def with_stamps(entries: pa.Table) -> pa.Table:
+    """Return entries with their stamps; each file is asked once."""
+    known: dict[str, str | None] = {}
+    files = entries.select(["location", "mask_location", "truth_location"])
+    stamps = []
+    for batch in files.to_batches(10_000):
+        stamps += [stamp_of_entry(entry, known) for entry in batch.to_pylist()]
+    return entries.add_column(2, "stamp", pa.array(stamps, pa.string()))
