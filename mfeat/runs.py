@@ -90,22 +90,26 @@ class DumpSummary:
 
     def __str__(self) -> str:
         lines = [
-            f"{self.patches} patches of {self.images} images, {self.features} numbers each, in "
-            f"{self.parts} parts: {self.out}"
+            f"{_number(self.patches, 'patch', 'patches')} of {_number(self.images, 'image')}, "
+            f"{_number(self.features, 'number')} each, in {_number(self.parts, 'part')}: {self.out}"
         ]
         if self.kept_parts == self.parts:
             lines.append("the table was complete already; nothing was done")
         elif self.kept_parts:
-            lines.append(f"{self.kept_parts} parts were kept from an interrupted run")
+            lines.append(f"{_number(self.kept_parts, 'part')} kept from an interrupted run")
         if self.seconds and self.kept_parts < self.parts:
             lines[0] += f", {self.seconds:.1f} s"
         if self.rejects:
             lines.append(
-                f"{self.rejects} rejects ({self.rejected_images} whole images) are listed with "
-                f"their reasons in {REJECTS}"
+                f"{_number(self.rejects, 'reject')} ({_number(self.rejected_images, 'whole image')}"
+                f") listed with reasons in {REJECTS}"
             )
-        lines += [f"{count} images: {note}" for note, count in sorted(self.notes.items())]
-        return "\n".join(lines)
+        notes = sorted(self.notes.items())
+        return "\n".join(lines + [f"{_number(count, 'image')}: {note}" for note, count in notes])
+
+
+def _number(count: int, one: str, many: str | None = None) -> str:
+    return f"{count} {one if count == 1 else many or one + 's'}"
 
 
 def check_output(store: Any) -> None:

@@ -3,18 +3,23 @@
 import importlib.util
 from pathlib import Path
 
+import numpy as np
 import pytest
+from skimage import data
 
 ROOT = Path(__file__).parents[1]
 RECIPES = {
     "panel_defects": ["--panels", "3", "--side", "256", "--size", "64", "--folds", "3"],
     "real_surfaces": ["--patches", "6", "--stride", "64"],
+    "folder_to_classifier": ["--panels", "3", "--side", "256", "--size", "64", "--folds", "3"],
+    "dask_cluster": ["--panels", "1", "--side", "128", "--stride", "64"],
 }
 BENCHMARKS = {
     "speed_floor": [
         *["--rounds", "1", "--side", "16", "--patches", "2", "--sides", "32"],
         *["--levels", "8", "--no-cold"],
-    ]
+    ],
+    "dump_throughput": ["--images", "2", "--side", "128", "--rounds", "1", "--jobs", "2"],
 }
 
 
@@ -51,6 +56,42 @@ def test_real_surfaces(tmp_path, monkeypatch, capsys):
         "clean", "light", "rotation", "noise", "blur", "zoom"
     ]  # fmt: skip
     assert "train: 96 patches" in capsys.readouterr().out
+
+
+def test_folder_to_classifier(tmp_path, monkeypatch, capsys):
+    monkeypatch.chdir(tmp_path)
+    recipe = load("recipes", "folder_to_classifier")
+    accuracy = recipe.main(RECIPES["folder_to_classifier"])
+    assert accuracy > 0.35  # chance is 1/6; three small panels a class
+    out = capsys.readouterr().out
+    assert "no image on both sides" in out
+    assert "verdict of a classifier is an aid" in out
+    # the second time the table is there
+    assert recipe.main(RECIPES["folder_to_classifier"]) == accuracy
+    assert "nothing was done" in capsys.readouterr().out
+
+
+def test_folder_to_classifier_on_images_of_ones_own(tmp_path, monkeypatch, capsys):
+    monkeypatch.chdir(tmp_path)
+    for name, image in {"brick": data.brick(), "grass": data.grass()}.items():
+        (tmp_path / "images" / name).mkdir(parents=True)
+        for k in range(4):
+            np.save(tmp_path / "images" / name / f"{k}.npy", image[128 * k : 128 * (k + 1), :256])
+    arguments = ["images", "--label-from", "folder", "--size", "64", "--folds", "2"]
+    assert load("recipes", "folder_to_classifier").main(arguments) > 0.9
+    assert "brick" in capsys.readouterr().out
+
+
+def test_dask_cluster(tmp_path, monkeypatch, capsys):
+    monkeypatch.chdir(tmp_path)
+    assert load("recipes", "dask_cluster").main(RECIPES["dask_cluster"]) == 24
+    assert "bit for bit" in capsys.readouterr().out
+
+
+def test_dump_throughput_compares_both(capsys):
+    found = load("benchmarks", "dump_throughput").main(BENCHMARKS["dump_throughput"])
+    assert set(found) == {"png threading", "png loky", "tif threading", "tif loky"}
+    assert all(ratio > 0 for ratios in found.values() for ratio in ratios)
 
 
 def test_speed_floor_compares_equal_answers(capsys):
