@@ -6,6 +6,7 @@ rows and the rejects itself, so neither pixels nor features travel between proce
 """
 
 import json
+import os
 from dataclasses import dataclass
 from functools import lru_cache
 from typing import Any, NamedTuple
@@ -138,7 +139,7 @@ def _write_arrow(store: Any, name: str, table: pa.Table) -> None:
 
 def _read_arrow(store: Any, name: str) -> pa.Table:
     path = storage.local_path(store.location)
-    if path is not None:  # mapped: workers on one machine share it
+    if path is not None and os.name != "nt":  # mapped: workers on one machine share it
         return pa.ipc.open_file(pa.memory_map(f"{path}/{name}")).read_all()
     with store.open(name) as stream:
         return pa.ipc.open_file(stream.read()).read_all()
@@ -154,7 +155,7 @@ def is_planned(store: Any, run: str) -> bool:
     return store.exists(f"{run_folder(run)}/{_PLAN}")
 
 
-@lru_cache(8)
+@lru_cache(2)
 def load_run(location: str, run: str) -> Run:
     """Return a planned run; each process reads it once."""
     store = storage.output(location)

@@ -369,7 +369,8 @@ def publish(store: Any, run: str) -> None:
 
 def changed_inputs(before: pa.Table, now: pa.Table) -> list[str]:
     """Return how two lists of inputs differ, a line each; where the files lie does not matter."""
-    before, now = before.drop_columns(["location"]), now.drop_columns(["location"])
+    where = ["location", "mask_location", "truth_location"]
+    before, now = before.drop_columns(where), now.drop_columns(where)
     if before.equals(now):
         return []
     added_columns = set(now.column_names) ^ set(before.column_names)
@@ -385,7 +386,7 @@ def changed_inputs(before: pa.Table, now: pa.Table) -> list[str]:
     changed = []
     for k in rows[0].keys() & rows[1].keys():
         one, other = rows[0][k], rows[1][k]
-        what = [name for name in one if one[name] != other[name] and one[name] == one[name]]
+        what = [name for name in one if repr(one[name]) != repr(other[name])]  # NaN is NaN
         if what:
             names = {"stamp": "size or time"}
             changed.append(f"{k[0]} ({', '.join(names.get(name, name) for name in what)})")

@@ -70,14 +70,14 @@ def list_sources(source: Any, *, label_from: str | None = None, leave_out: str =
     if label_from == "manifest" and found.entries["label"].null_count == found.entries.num_rows:
         raise ValueError(f"labels are to come from a manifest's column label; {location} has none")
     if label_from == "folder":
-        listed = (PurePosixPath(name).parent.name for name in found.entries["source"].to_pylist())
-        labels = pa.array([name or None for name in listed], pa.string())
+        places = found.entries["location"].to_pylist()
+        labels = pa.array([PurePosixPath(one).parent.name or None for one in places], pa.string())
         place = found.entries.column_names.index("label")
         found = replace(found, entries=found.entries.set_column(place, "label", labels))
     if label_from == "truth" and found.entries["truth_location"].null_count:
         raise ValueError(
             f"labels are to come from a manifest's column {TRUTH}, an image of labels for every "
-            f"row; {location} has {found.entries['truth'].null_count} rows without one"
+            f"row; {location} has {found.entries['truth_location'].null_count} rows without one"
         )
     return Sources(with_stamps(found.entries), found.carried, found.remarks)
 
@@ -101,10 +101,11 @@ def _list_files(
 ) -> tuple[list[str], str]:
     """Return the names of image files relative to a base, and the base."""
     if path is None:
-        return _list_remote(location, patterned)
+        return _list_remote(location, patterned, leave_out)
     if patterned:
         base = _fixed_part(path)
-        kept = [name for name in glob.glob(path, recursive=True) if os.path.isfile(name)]
+        found = (name for name in glob.glob(path, recursive=True) if os.path.isfile(name))
+        kept = [name for name in found if not _lies_in(name, leave_out)]
         names = [os.path.relpath(name, base).replace(os.sep, "/") for name in kept]
         if not names:
             raise FileNotFoundError(f"no file matches {location}")
@@ -117,6 +118,13 @@ def _list_files(
     else:
         raise FileNotFoundError(f"source {location} does not exist")
     return sorted(names, key=natural), base
+
+
+def _lies_in(name: str, folder: str) -> bool:
+    if not folder:
+        return False
+    real = os.path.realpath(folder)
+    return os.path.commonpath([os.path.realpath(name), real]) == real
 
 
 def _walk(folder: str, prefix: str, seen: set[str], leave_out: str) -> Iterator[str]:
@@ -135,7 +143,7 @@ def _walk(folder: str, prefix: str, seen: set[str], leave_out: str) -> Iterator[
             yield from _walk(entry.path, f"{prefix}{entry.name}/", seen, leave_out)
 
 
-def _list_remote(location: str, patterned: bool) -> tuple[list[str], str]:
+def _list_remote(location: str, patterned: bool, leave_out: str) -> tuple[list[str], str]:
     found, there = storage.filesystem(location)
     protocol = location.split("://", 1)[0]
     if patterned:
@@ -148,9 +156,15 @@ def _list_remote(location: str, patterned: bool) -> tuple[list[str], str]:
     else:
         raise FileNotFoundError(f"source {location} does not exist")
     start = base.rstrip("/") + "/"
+    base = f"{protocol}://{base}"
     names = [str(path).removeprefix(start) for path in paths if not patterned or found.isfile(path)]
-    kept = [name for name in names if not any(p.startswith(".") for p in name.split("/"))]
-    return sorted(kept, key=natural), f"{protocol}://{base}"
+    kept = [
+        name
+        for name in names
+        if not any(part.startswith(".") for part in name.split("/"))
+        and not (leave_out and join(base, name).startswith(leave_out.rstrip("/") + "/"))
+    ]
+    return sorted(kept, key=natural), base
 
 
 def _fixed_part(pattern: str) -> str:

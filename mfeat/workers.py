@@ -20,13 +20,27 @@ def workers(jobs: int, backend: str | None, cluster: str | None) -> Iterator[dic
     if cluster is not None:
         if backend is not None:
             raise ValueError(f"backend {backend!r} and a cluster were given; choose one")
-        with _dask_client(cluster), parallel_config(backend="dask"):
+        with _dask_client(cluster), parallel_config(backend="dask"), _killed_workers():
             yield how | {"n_jobs": -1}
     elif backend is not None:
         with parallel_config(backend=_checks.choice("backend", backend, BACKENDS)):
             yield how
     else:
         yield how | {"prefer": "threads"}
+
+
+@contextlib.contextmanager
+def _killed_workers() -> Iterator[None]:
+    """Say what it means when Dask gives a task up."""
+    from dask.distributed import KilledWorker
+
+    try:
+        yield
+    except KilledWorker as error:
+        raise RuntimeError(
+            "several workers of the cluster died over one part: out of memory, or killed. What was "
+            f"finished is kept; run the same again ({error})"
+        ) from error
 
 
 def _dask_client(address: str) -> Any:
