@@ -1,13 +1,14 @@
 """The command line: it parses and delegates; everything it does can be imported.
 
 Exit codes: 0 done, 1 done with rejects under ``--strict``, 2 unusable arguments, 3 files that
-cannot be written or have changed, 130 interrupted. Results go to stdout and into files, messages to
-stderr.
+cannot be written or have changed, or an unforeseen error, 130 interrupted. Results go to stdout and
+into files, messages to stderr.
 """
 
 import argparse
 import logging
 import sys
+import traceback
 from collections.abc import Callable, Sequence
 from pathlib import Path
 from typing import Any
@@ -149,7 +150,12 @@ def _add_dump(commands: Any) -> None:
 
 
 def _sides(text: str) -> int | tuple[int, ...]:
-    numbers = tuple(int(part) for part in text.split("x"))
+    try:
+        numbers = tuple(int(part) for part in text.split("x"))
+    except ValueError:
+        raise argparse.ArgumentTypeError(
+            f"{text!r} is neither a number of pixels nor ROWSxCOLUMNS, e.g. 64 or 64x32"
+        ) from None
     return numbers[0] if len(numbers) == 1 else numbers
 
 
@@ -200,7 +206,7 @@ def _dump(options: argparse.Namespace) -> int:
             found = estimate(
                 options.source, dump_settings(**arguments), out=options.out or "", **how
             )
-            lines = "".join(f"# {line}\n" for line in str(found).splitlines())
+            lines = "".join(f"# {_printable(line)}\n" for line in str(found).splitlines())
             return f"{lines}\n{found.settings.toml()}".rstrip()
         summary = dump(options.source, options.out, fresh=options.fresh, **arguments, **how)
         print(f"mfeat dump: {summary}", file=sys.stderr)
@@ -208,8 +214,15 @@ def _dump(options: argparse.Namespace) -> int:
             raise RejectsFound(summary)
         return summary.out
 
+    if options.dry_run:
+        return _run("dump", run, "", "nothing is written")
     kept = f"what is finished is kept in {options.out}; the same command goes on from there"
     return _run("dump", run, "is complete", kept)
+
+
+def _printable(text: str) -> str:
+    """Return text without the control characters that TOML forbids in comments."""
+    return "".join(one if one.isprintable() else "?" for one in text)
 
 
 def _dump_arguments(options: argparse.Namespace) -> dict[str, Any]:
@@ -238,15 +251,21 @@ def _run(command: str, work: Callable[[], str], done: str, left: str) -> int:
         *(IsADirectoryError, OutputInUse, ImportError),
     ) as error:
         return _stopped(f"mfeat {command}: {error}", 2)
-    except (OSError, InputChanged, RuntimeError) as error:
+    except InputChanged as error:  # says itself what to do
+        return _stopped(f"mfeat {command}: {error}", 3)
+    except (OSError, RuntimeError) as error:
         return _stopped(f"mfeat {command}: {error}; {left}", 3)
     except KeyboardInterrupt:
         return _stopped(f"mfeat {command}: interrupted; {left}", 130)
+    except Exception:  # a fault of ours must not look like exit code 1, rejects
+        traceback.print_exc()
+        return _stopped(f"mfeat {command}: stopped by an unforeseen error; {left}", 3)
     try:
         print(result, flush=True)
-    except OSError as error:
+    except (OSError, UnicodeEncodeError) as error:
         sys.stdout = None  # so that Python does not try to flush it again on the way out
-        return _stopped(f"mfeat {command}: {result} {done}, but stdout failed: {error}", 3)
+        what = f"{result} {done}, but " if done else ""
+        return _stopped(f"mfeat {command}: {what}stdout failed: {error}", 3)
     return code
 
 

@@ -42,7 +42,14 @@ def join(base: str, name: str) -> str:
     """Return where a listed name is: itself if it is absolute or a URI, else below the base."""
     if "://" in name or os.path.isabs(name):
         return name
-    return f"{base.rstrip('/')}/{name}" if "://" in base else os.path.join(base, name)
+    protocol, mark, folder = base.partition("://")
+    return f"{protocol}://{folder.rstrip('/')}/{name}" if mark else os.path.join(base, name)
+
+
+def folder_of(location: str) -> str:
+    """Return where the files beside a file are."""
+    protocol, mark, path = location.partition("://")
+    return f"{protocol}://{path.rpartition('/')[0]}" if mark else os.path.dirname(location)
 
 
 _TYPES = {
@@ -63,7 +70,7 @@ def entries_table(columns: dict[str, Any], carried: dict[str, Any]) -> pa.Table:
             arrays.append(pa.nulls(count, kind))
         elif isinstance(given, list):
             arrays.append(pa.array(given, kind))
-        elif name == "label" and _kept_label(given.type):
+        elif name == "label" and kept_label(given.type):
             arrays.append(given)
         else:
             arrays.append(given.cast(kind))
@@ -74,7 +81,8 @@ def entries_table(columns: dict[str, Any], carried: dict[str, Any]) -> pa.Table:
     return pa.Table.from_arrays(arrays, names)
 
 
-def _kept_label(kind: pa.DataType) -> bool:
+def kept_label(kind: pa.DataType) -> bool:
+    """Tell whether labels keep their type; others become text."""
     return pa.types.is_integer(kind) or pa.types.is_boolean(kind)
 
 

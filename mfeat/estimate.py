@@ -14,6 +14,7 @@ from joblib import Parallel
 from mfeat import storage
 from mfeat._pages import UnreadableImage
 from mfeat.cutting import cuts
+from mfeat.entries import CARRIED
 from mfeat.options import DumpSettings
 from mfeat.parts import vectors_or_reasons
 from mfeat.planning import Item, PitchedPlans, Plan, make_plan, part_sizes, pitch_of
@@ -21,11 +22,10 @@ from mfeat.schema import PartWriter
 from mfeat.sources import list_sources
 from mfeat.workers import workers
 
-# Images and patches of each that are computed to estimate the rest.
-_SAMPLED_IMAGES, _SAMPLED_PATCHES = 3, 64
+# Images, patches of all of them and pixels, after which no further image is sampled.
+_SAMPLED_IMAGES, _SAMPLED_PATCHES, _SAMPLED_PIXELS = 48, 192, 1 << 26
 
-# Source, position and labels of a patch; most of it repeats and takes few bytes.
-_BYTES_OF_OWN_COLUMNS = 8
+_SHOWN_REASONS = 10
 
 
 @dataclass(frozen=True)
@@ -48,6 +48,8 @@ class Estimate:
         Workers that the time is for.
     settings : DumpSettings
         All settings, with the pitch of the manifest.
+    remarks : tuple of str
+        What a user should know of the sources and images.
     """
 
     images: int
@@ -60,6 +62,7 @@ class Estimate:
     seconds: float
     workers: int
     settings: DumpSettings
+    remarks: tuple[str, ...] = ()
 
     def __str__(self) -> str:
         own = ", ".join(self.columns[: len(self.columns) - self.features])
@@ -74,8 +77,11 @@ class Estimate:
         if self.rejects:
             total = sum(self.rejects.values())
             lines.append(f"{total} files to be rejected by their headers:")
-            lines += [f"  {count} x {reason}" for reason, count in self.rejects.items()]
-        return "\n".join(lines)
+            shown = list(self.rejects.items())[:_SHOWN_REASONS]
+            lines += [f"  {count} x {reason}" for reason, count in shown]
+            if len(shown) < len(self.rejects):
+                lines.append(f"  ... and {len(self.rejects) - len(shown)} more reasons")
+        return "\n".join([*lines, *self.remarks])
 
 
 def _bytes(size: float) -> str:
@@ -147,10 +153,13 @@ def estimate(
     patches, _ = part_sizes(items, settings.grid.size)
     sample = _Sample(plan)
     total = int(patches.sum())
-    pixels = float((items["rows"].to_numpy() * items["cols"].to_numpy().astype(float)).sum())
+    counted, first, rows, cols = (
+        items[name].to_numpy().astype(float) for name in ("patches", "first", "rows", "cols")
+    )
+    pixels = float((rows * cols)[first == 0].sum())  # an image may be shared out over many items
     features = len(plan.settings.transformer.feature_table())
     return Estimate(
-        images=items.num_rows - len(items["reason"].drop_null()),
+        images=len(np.unique(items["entry"].to_numpy()[counted > 0])),
         patches=total,
         parts=len(patches),
         columns=plan.schema.names,
@@ -160,6 +169,7 @@ def estimate(
         seconds=sample.seconds_of(total, pixels) / count,
         workers=count,
         settings=plan.settings,
+        remarks=(*sources.remarks, *(f"{n} x {note}" for note, n in plan.notes.items())),
     )
 
 
@@ -170,16 +180,15 @@ class _Sample:
         self._plan, self._plans = plan, PitchedPlans(plan.settings)
         self.reading = self.computing = 0.0
         self.pixels = self.patches = 0
-        self._file = io.BytesIO()
-        patches = plan.items["patches"].to_numpy()
-        usable = np.flatnonzero(patches > 0)
-        with PartWriter(self._file, plan.schema) as writer:
-            for k in usable[
-                np.unique(np.linspace(0, len(usable) - 1, _SAMPLED_IMAGES).astype(int))
-            ]:
-                self._take(int(k), writer)
+        self._rows: list[tuple[dict[str, list], np.ndarray]] = []
+        usable = np.flatnonzero(plan.items["patches"].to_numpy() > 0)
+        count = min(len(usable), _SAMPLED_IMAGES)
+        spread = np.linspace(0, len(usable) - 1, count).astype(int)
+        for k in spread[np.argsort(np.arange(count) * 0.618 % 1.0)]:  # far from each other
+            if self.pixels < _SAMPLED_PIXELS:
+                self._take(int(usable[k]), -(-_SAMPLED_PATCHES // count))
 
-    def _take(self, k: int, writer: PartWriter) -> None:
+    def _take(self, k: int, most: int) -> None:
         plan = self._plan
         item = Item(**plan.items.slice(k, 1).select(Item._fields).to_pylist()[0])
         entry = plan.sources.entries.slice(item.entry, 1).to_pylist()[0]
@@ -194,22 +203,45 @@ class _Sample:
         good = (cut.fractions >= min_valid) & (cut.fractions > 0)
         if cut.damage is not None or not good.any():
             return
-        patches = list(cut.chosen(good)[:_SAMPLED_PATCHES])
+        patches = list(cut.chosen(good)[:most])
         vector = self._plans.of(pitch_of(entry))
         vectors_or_reasons(vector, patches[:1], min_valid)  # compiles, if it has to
         start = time.perf_counter()
         rows, _ = vectors_or_reasons(vector, patches, min_valid)
-        writer.add({name: [None] * len(rows) for name in plan.schema.names}, rows)
         self.computing += time.perf_counter() - start
+        known = {name: entry[CARRIED + name] for name in plan.sources.carried}
+        known |= {name: entry[name] for name in ("source", "group")}
+        if plan.settings.label_from != "truth":
+            known["label"] = entry["label"]
+        own = {name: [known.get(name)] * len(rows) for name in plan.schema.names}
+        own |= zip(("row", "col"), cut.positions[good][:most].T.tolist(), strict=True)
+        self._rows.append((own, rows))
         self.patches += len(rows)
+
+    def _written(self, rows: list[tuple[dict[str, list], np.ndarray]]) -> tuple[int, int]:
+        """Return the bytes of rows in a file, and those of its footer."""
+        file = io.BytesIO()
+        with PartWriter(file, self._plan.schema) as writer:
+            for own, vectors in rows:
+                writer.add(own, vectors)
+        footer = pq.read_metadata(file).serialized_size
+        return file.tell() - footer, footer
 
     def size_of(self, patches: int, parts: int) -> float:
         """Return the bytes of a table."""
         if not self.patches:
             return 0.0 if not patches else float("nan")
-        footer = pq.read_metadata(self._file).serialized_size
-        each = (self._file.tell() - footer) / self.patches + _BYTES_OF_OWN_COLUMNS
-        return patches * each + parts * footer
+        body, footer = self._written(self._rows)
+        half = [
+            ({name: column[::2] for name, column in own.items()}, rows[::2])
+            for own, rows in self._rows[::2]
+        ]
+        less, rows_less = self._written(half)[0], sum(len(rows) for _, rows in half)
+        if rows_less == self.patches:
+            return float(patches * body + parts * footer)
+        # Each column of a file has some bytes however few its rows are.
+        each = (body - less) / (self.patches - rows_less)
+        return patches * each + parts * (footer + max(0.0, body - self.patches * each))
 
     def seconds_of(self, patches: int, pixels: float) -> float:
         """Return the time of one worker."""

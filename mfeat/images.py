@@ -5,6 +5,7 @@ names. Integers keep their bits and floating-point numbers their type.
 """
 
 import contextlib
+import os
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 from typing import Any, BinaryIO
@@ -99,11 +100,18 @@ def open_pages(location: str, max_pixels: int = MAX_PIXELS) -> Iterator[list[Pag
     """
     with contextlib.ExitStack() as stack:
         with reading():
+            path = storage.local_path(location)
+            if path is not None and os.path.exists(path) and not _is_plain(path):
+                raise UnreadableImage("no regular file, but a pipe or a device")
             stream = stack.enter_context(storage.open_input(location))
-            pages = _pages_of(stream, storage.local_path(location))
+            pages = _pages_of(stream, path)
             for number, page in enumerate(pages):
                 _check_page(page, number, len(pages), max_pixels)
         yield pages
+
+
+def _is_plain(path: str) -> bool:
+    return os.path.isfile(path) or os.path.isdir(path)
 
 
 def _in_one_line(error: BaseException) -> str:

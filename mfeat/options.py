@@ -1,6 +1,7 @@
 """What a dump does: its settings, checked, from arguments or a TOML file, and printed back."""
 
 import json
+import math
 import tomllib
 from dataclasses import dataclass
 from typing import Any
@@ -9,6 +10,7 @@ import numpy as np
 
 from mfeat import _checks, storage
 from mfeat.images import MAX_PIXELS, check_channel
+from mfeat.levels import DEFAULT_RANGES
 from mfeat.patches import LABEL_RULES, PatchGrid
 from mfeat.schema import transformer_record
 from mfeat.transformer import MinkowskiCurves
@@ -60,15 +62,21 @@ class DumpSettings:
         Examples
         --------
         >>> from mfeat.options import dump_settings
-        >>> print(dump_settings(size=32).toml()[:28])
+        >>> print(dump_settings(size=32).toml()[:30])
         size = [32, 32]
-        stride = [32
+        edge = "drop"
         """
         own = self.keywords()
+        if own["stride"] == own["size"]:
+            del own["stride"]  # it follows the size, also when a flag sets another
         lines = [f"{key} = {_toml(own[key])}" for key in KEYS if own.get(key) is not None]
         lines += ["", "[features]"]
-        features = transformer_record(self.transformer, False)["parameters"].items()
-        lines += [f"{key} = {_toml(value)}" for key, value in features if value is not None]
+        if self.transformer.level_rule == "fitted":
+            lines.append("# learned levels are not among these; give the fitted transformer itself")
+        features = transformer_record(self.transformer, False)["parameters"] | {"n_jobs": None}
+        if isinstance(features["level_range"], dict):
+            features["level_range"] = _ranges_in_use(**features)
+        lines += [f"{key} = {_toml(value)}" for key, value in features.items() if value is not None]
         return "\n".join(lines) + "\n"
 
 
@@ -117,6 +125,19 @@ def dump_settings(
     )
 
 
+def _ranges_in_use(
+    levels: Any, level_rule: str, level_range: dict[str, Any], **_: Any
+) -> dict[str, Any]:
+    """Return the ranges of families whose levels are a number; TOML has no word for None."""
+    counts = levels if isinstance(levels, dict) else dict.fromkeys(level_range, levels)
+    default = list(DEFAULT_RANGES.get(level_rule, ()))
+    return {
+        family: default if given is None else given
+        for family, given in level_range.items()
+        if isinstance(counts.get(family), int | float)
+    }
+
+
 def _toml(value: Any) -> str:
     """Return a value as TOML; text, numbers, booleans and lists are written as in JSON."""
     if isinstance(value, dict):
@@ -161,7 +182,7 @@ def read_settings(path: Any) -> dict[str, Any]:
     place = storage.as_location(path, "settings")
     with storage.open_input(place) as stream:
         try:
-            found = tomllib.loads(stream.read().decode("utf-8"))
+            found = tomllib.loads(stream.read().decode("utf-8-sig"))
         except (tomllib.TOMLDecodeError, UnicodeDecodeError) as error:
             raise ValueError(f"settings {place} are not TOML: {error}") from None
     features = found.pop("features", None)
@@ -189,9 +210,13 @@ def feature_value(text: str) -> tuple[str, Any]:
     if not equals or not name.strip():
         raise ValueError(f"{text!r} is not NAME=VALUE, e.g. levels=32 or 'smooth=[1, 2]'")
     try:
-        return name.strip(), tomllib.loads(f"value = {value}")["value"]
+        found = tomllib.loads(f"value = {value}")
     except tomllib.TOMLDecodeError:
-        return name.strip(), value.strip()  # text without quotes
+        found = {}
+    single = found.get("value")
+    if list(found) != ["value"] or (isinstance(single, float) and not math.isfinite(single)):
+        return name.strip(), value.strip()  # text without quotes, such as rank or nan
+    return name.strip(), single
 
 
 def with_features(transformer: MinkowskiCurves, features: Any, where: str) -> MinkowskiCurves:

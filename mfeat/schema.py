@@ -73,7 +73,7 @@ def restored(record: dict[str, Any]) -> MinkowskiCurves:
 def _plain(value: Any) -> Any:
     if isinstance(value, np.ndarray | np.generic):
         return value.tolist()
-    if isinstance(value, tuple | list):
+    if isinstance(value, tuple | list | range):
         return [_plain(one) for one in value]
     if isinstance(value, dict):
         return {key: _plain(one) for key, one in value.items()}

@@ -89,7 +89,7 @@ def _resolve(estimator: Any) -> VectorPlan:
             family: level_values(
                 _of_family("levels", estimator.levels, family),
                 estimator.level_rule,
-                _of_family("level_range", estimator.level_range, family),
+                _range_of_family(estimator, family),
             )
             for family in families
         }
@@ -155,6 +155,15 @@ def _channels(given: Any) -> tuple[str, ...] | None:
     if not names or not proper or len(set(names)) < len(names):
         raise ValueError(f"channels must be distinct, non-empty names; got {given!r}")
     return names
+
+
+def _range_of_family(estimator: Any, family: str) -> Any:
+    """Return the range of a family; levels that are given themselves need no entry."""
+    ranges, levels = estimator.level_range, _of_family("levels", estimator.levels, family)
+    explicit = not isinstance(levels, int | np.integer | float | np.floating)
+    if isinstance(ranges, dict) and explicit:
+        ranges = {family: None} | ranges
+    return _of_family("level_range", ranges, family)
 
 
 def _of_family(name: str, value: Any, family: str) -> Any:

@@ -1,5 +1,6 @@
 """Where images come from: a folder, a glob, or a manifest; one entry an image file or region."""
 
+import fnmatch
 import glob
 import os
 import re
@@ -54,17 +55,25 @@ def list_sources(source: Any, *, label_from: str | None = None, leave_out: str =
     path = storage.local_path(location)
     suffix = PurePosixPath(location).suffix.lower()
     patterned = any(mark in location for mark in "*?[")
-    if path is not None and os.path.exists(path):
+    if patterned and storage.exists(location):
         patterned = False  # a file may be called image[1].png
-    if suffix in MANIFESTS and not patterned:
+    if suffix in MANIFESTS and not patterned and not (path is not None and os.path.isdir(path)):
         found = read_manifest(location, suffix)
     else:
         names, base = _list_files(location, path, patterned, leave_out)
-        remarks = ()
+        remarks = []
         if "manifest.csv" in names:
-            remarks = (f"{location} holds manifest.csv; give that file to use it as the manifest",)
-        columns = {"source": names, "location": [join(base, name) for name in names]}
-        found = Sources(entries_table(columns, {}), (), remarks)
+            remarks.append(
+                f"{location} holds manifest.csv; give that file to use it as the manifest"
+            )
+        wrong = [_printable(name) for name in names if _printable(name) != name]
+        if wrong:
+            remarks.append(f"names that are not UTF-8 cannot be read, e.g. {wrong[0]}; rename them")
+        columns = {
+            "source": [_printable(name) for name in names],
+            "location": [_printable(join(base, name)) for name in names],
+        }
+        found = Sources(entries_table(columns, {}), (), tuple(remarks))
     if found.entries.num_rows == 0:
         raise FileNotFoundError(f"source {location} has no image: nothing is listed there")
     if label_from == "manifest" and found.entries["label"].null_count == found.entries.num_rows:
@@ -104,14 +113,13 @@ def _list_files(
         return _list_remote(location, patterned, leave_out)
     if patterned:
         base = _fixed_part(path)
-        found = (name for name in glob.glob(path, recursive=True) if os.path.isfile(name))
-        kept = [name for name in found if not _lies_in(name, leave_out)]
-        names = [os.path.relpath(name, base).replace(os.sep, "/") for name in kept]
+        names = _matching(path, base, leave_out)
         if not names:
-            raise FileNotFoundError(f"no file matches {location}")
+            hint = '; a bracket in a name is written "[[]"' if "[" in path else ""
+            raise FileNotFoundError(f"no file matches {location}{hint}")
     elif os.path.isdir(path):
         base = path
-        names = list(_walk(path, "", {os.path.realpath(path)}, os.path.realpath(leave_out or "/")))
+        names = list(_below(path, leave_out))
     elif os.path.exists(path):
         base, name = os.path.split(path)
         names = [name]
@@ -120,11 +128,44 @@ def _list_files(
     return sorted(names, key=natural), base
 
 
+def _printable(name: str) -> str:
+    """Return a file name as UTF-8; bytes that are not appear as escapes."""
+    return os.fsencode(name).decode("utf-8", "backslashreplace")
+
+
+def _matching(pattern: str, base: str, leave_out: str) -> list[str]:
+    """Return the names of the files below a base that match a pattern."""
+    parts = os.path.relpath(pattern, base).split(os.sep)
+    if "**" in parts:  # glob would follow loops of links again and again
+        return [name for name in _below(base, leave_out) if _matches(name.split("/"), parts)]
+    found = (name for name in glob.glob(pattern) if not os.path.isdir(name))
+    kept = [name for name in found if not _lies_in(name, leave_out)]
+    return [os.path.relpath(name, base).replace(os.sep, "/") for name in kept]
+
+
+def _matches(parts: list[str], pattern: list[str]) -> bool:
+    """Tell whether a path matches a pattern, both in parts; "**" is any number of folders."""
+    if not pattern:
+        return not parts
+    if pattern[0] == "**":
+        return any(_matches(parts[k:], pattern[1:]) for k in range(len(parts) + 1))
+    return (
+        bool(parts) and fnmatch.fnmatch(parts[0], pattern[0]) and _matches(parts[1:], pattern[1:])
+    )
+
+
+def _below(folder: str, leave_out: str) -> Iterator[str]:
+    return _walk(folder, "", {os.path.realpath(folder)}, os.path.realpath(leave_out or "/"))
+
+
 def _lies_in(name: str, folder: str) -> bool:
     if not folder:
         return False
     real = os.path.realpath(folder)
-    return os.path.commonpath([os.path.realpath(name), real]) == real
+    try:
+        return os.path.commonpath([os.path.realpath(name), real]) == real
+    except ValueError:  # on different drives
+        return False
 
 
 def _walk(folder: str, prefix: str, seen: set[str], leave_out: str) -> Iterator[str]:
@@ -156,19 +197,16 @@ def _list_remote(location: str, patterned: bool, leave_out: str) -> tuple[list[s
     else:
         raise FileNotFoundError(f"source {location} does not exist")
     start = base.rstrip("/") + "/"
-    base = f"{protocol}://{base}"
+    if leave_out.startswith(f"{protocol}://"):
+        outside = storage.filesystem(leave_out)[1].rstrip("/") + "/"
+        paths = [path for path in paths if not str(path).startswith(outside)]
     names = [str(path).removeprefix(start) for path in paths if not patterned or found.isfile(path)]
-    kept = [
-        name
-        for name in names
-        if not any(part.startswith(".") for part in name.split("/"))
-        and not (leave_out and join(base, name).startswith(leave_out.rstrip("/") + "/"))
-    ]
-    return sorted(kept, key=natural), base
+    kept = [name for name in names if not any(p.startswith(".") for p in name.split("/"))]
+    return sorted(kept, key=natural), f"{protocol}://{base}"
 
 
 def _fixed_part(pattern: str) -> str:
     """Return the folder above the first wildcard of a pattern."""
-    parts = pattern.split("/")
+    parts = pattern.replace(os.sep, "/").split("/")
     first = next(k for k, part in enumerate(parts) if any(mark in part for mark in "*?["))
     return "/".join(parts[:first]) or ("/" if pattern.startswith("/") else ".")

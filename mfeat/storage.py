@@ -81,6 +81,15 @@ def open_input(location: str) -> BinaryIO:
     return found.open(there, "rb")
 
 
+def exists(location: str) -> bool:
+    """Tell whether there is a file or folder."""
+    path = local_path(location)
+    if path is not None:
+        return os.path.exists(path)
+    found, there = filesystem(location)
+    return found.exists(there)
+
+
 def stamp(location: str) -> str:
     """Return a text that changes when a file does: its size and the time of its last change.
 
@@ -190,6 +199,7 @@ class LocalStorage:
             If another run holds it.
         """
         path = self.root / name
+        was_there = self.root.exists()
         while True:
             path.parent.mkdir(parents=True, exist_ok=True)
             try:
@@ -214,6 +224,8 @@ class LocalStorage:
             with contextlib.suppress(OSError):
                 path.unlink()
                 path.parent.rmdir()  # only if nothing else is in it
+                if not was_there:
+                    self.root.rmdir()  # a run that was refused leaves nothing
             os.close(handle)
 
 

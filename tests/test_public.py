@@ -134,7 +134,7 @@ LAYERS = {
     "sources": {"entries", "manifests", "storage"},
     "schema": {"plan", "settings", "storage", "transformer"},
     "table": {"schema", "storage", "transformer"},
-    "options": {"_checks", "images", "patches", "schema", "storage", "transformer"},
+    "options": {"_checks", "images", "levels", "patches", "schema", "storage", "transformer"},
     "planning": {"entries", "fields", "images", "options", "plan", "schema", "settings"},
     "cutting": {"_pages", "images", "options", "patches", "planning"},
     "parts": {
@@ -145,13 +145,14 @@ LAYERS = {
     "runs": {"entries", "options", "parts", "planning", "schema", "storage"},
     "dump": {"images", "options", "runs", "schema", "sources", "storage", "workers"},
     "estimate": {
-        *["_pages", "cutting", "options", "parts", "planning", "schema", "sources", "storage"],
-        "workers",
+        *["_pages", "cutting", "entries", "options", "parts", "planning", "schema", "sources"],
+        *["storage", "workers"],
     },
     "cli": {
         *["demo", "dump", "estimate", "images", "options", "parts", "patches", "storage"],
         *["transformer", "workers"],
     },
+    "__main__": {"cli"},
     "__init__": {"counts", "curves", "dump", "patches", "table", "transformer"},
 }
 
