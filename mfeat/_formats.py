@@ -5,13 +5,18 @@ import math
 import struct
 import zipfile
 from collections.abc import Iterator
+from functools import partial
 from typing import Any, BinaryIO
 
 import imagecodecs
 import numpy as np
-from PIL import BmpImagePlugin, JpegImagePlugin
+from PIL import BmpImagePlugin, JpegImagePlugin, PngImagePlugin
 
 from mfeat._pages import MappedPage, Page, UnreadableImage, WholePage
+
+#: The tag Orientation of EXIF and TIFF; rows and columns are those stored, whatever it says.
+ORIENTATION = 274
+TURNED = "orientation tag not applied"
 
 # Samples of the colour types of PNG (W3C PNG specification, third edition, section 11.2.1).
 _PNG_SAMPLES = {0: 1, 2: 3, 3: 3, 4: 2, 6: 4}
@@ -27,7 +32,7 @@ def png_pages(stream: BinaryIO, _path: str | None) -> list[Page]:
     if colour_type not in _PNG_SAMPLES or 0 in (rows, cols):
         raise UnreadableImage(f"damaged PNG: colour type {colour_type}, {rows}x{cols} pixels")
     before = set(_png_chunks(stream))
-    samples = _PNG_SAMPLES[colour_type] + (b"tRNS" in before)
+    samples = _PNG_SAMPLES[colour_type] + (colour_type < 4 and b"tRNS" in before)
     notes: tuple[str, ...] = ()
     if b"acTL" in before:
         notes += ("animation: first frame only",)
@@ -39,8 +44,24 @@ def png_pages(stream: BinaryIO, _path: str | None) -> list[Page]:
         return imagecodecs.png_decode(stream.read())
 
     dtype = np.dtype(np.uint16 if depth == 16 else np.uint8)
-    what = {"colour": samples > 2, "alpha": samples in (2, 4), "notes": notes}
+    labels = None
+    if colour_type == 3:
+        labels = partial(_palette_entries, stream, PngImagePlugin.PngImageFile, (rows, cols))
+    elif colour_type == 0 and depth < 8:
+        step = 255 // (2**depth - 1)
+        labels = partial(WholePage, lambda: decode() // step, (rows, cols), 1, dtype)
+    what = {"colour": samples > 2, "alpha": samples in (2, 4), "notes": notes, "labels": labels}
     return [WholePage(decode, (rows, cols), samples, dtype, **what)]
+
+
+def _palette_entries(stream: BinaryIO, factory: Any, shape: tuple[int, int]) -> Page:
+    """Return the page of the entries of a palette, as label images store them."""
+
+    def decode() -> np.ndarray:
+        stream.seek(0)
+        return np.asarray(factory(stream))
+
+    return WholePage(decode, shape, 1, np.dtype(np.uint8))
 
 
 def _png_chunks(stream: BinaryIO) -> Iterator[bytes]:
@@ -65,7 +86,16 @@ def jpeg_pages(stream: BinaryIO, _path: str | None) -> list[Page]:
 
 def bmp_pages(stream: BinaryIO, _path: str | None) -> list[Page]:
     """Return the page of a BMP file."""
-    return _pillow_pages(stream, BmpImagePlugin.BmpImageFile, "BMP")
+    [page] = _pillow_pages(stream, BmpImagePlugin.BmpImageFile, "BMP")
+    stream.seek(14)
+    head = stream.read(16)
+    # Bits a pixel; the oldest header, of 12 bytes, has 16-bit numbers before it.
+    [bits] = struct.unpack_from("<H", head, 10 if head[0] == 12 else 14)
+    if page.dtype == bool and bits != 1:  # Pillow takes two greys for one bit
+        raise UnreadableImage(
+            f"BMP of {bits} bits a pixel with a palette of black and white only; save it as PNG"
+        )
+    return [page]
 
 
 def _pillow_pages(stream: BinaryIO, factory: Any, name: str) -> list[Page]:
@@ -87,7 +117,20 @@ def _pillow_pages(stream: BinaryIO, factory: Any, name: str) -> list[Page]:
     samples = _PIL_SAMPLES[picture.mode]
     dtype = np.dtype(bool if picture.mode == "1" else np.uint8)
     shape = (picture.size[1], picture.size[0])
-    return [WholePage(decode, shape, samples, dtype, colour=samples > 2, alpha=samples == 4)]
+    what: dict[str, Any] = {"colour": samples > 2, "alpha": samples == 4}
+    if picture.mode == "P":
+        what["labels"] = partial(_palette_entries, stream, factory, shape)
+    if _is_turned(picture):
+        what["notes"] = (TURNED,)
+    return [WholePage(decode, shape, samples, dtype, **what)]
+
+
+def _is_turned(picture: Any) -> bool:
+    """Tell whether EXIF says that the picture is to be turned or mirrored for display."""
+    try:
+        return picture.getexif().get(ORIENTATION, 1) != 1
+    except Exception:  # damaged EXIF says nothing
+        return False
 
 
 def npy_pages(stream: BinaryIO, path: str | None) -> list[Page]:
@@ -97,7 +140,7 @@ def npy_pages(stream: BinaryIO, path: str | None) -> list[Page]:
     offset = stream.tell()
     need = math.prod(shape) * dtype.itemsize
     there = stream.seek(0, io.SEEK_END) - offset
-    if there < need:
+    if there < need and not dtype.hasobject:  # objects are refused by their type
         raise UnreadableImage(f"truncated NPY: {there} of {need} bytes of pixels")
     what = _array_page(shape, dtype)
     if path is not None:
@@ -137,11 +180,21 @@ def npz_pages(stream: BinaryIO, _path: str | None) -> list[Page]:
     return pages
 
 
+# Longest header that is read; numpy refuses longer ones too, but reads them before.
+_NPY_HEADER = 10_000
+
+
 def _npy_header(stream: Any) -> tuple[tuple[int, ...], bool, np.dtype]:
     try:
         version = np.lib.format.read_magic(stream)
         if version == (1, 0):
             return np.lib.format.read_array_header_1_0(stream)
+        if version not in ((2, 0), (3, 0)):
+            raise ValueError(f"version {version[0]}.{version[1]}")
+        length = int.from_bytes(stream.read(4), "little")
+        if length > _NPY_HEADER:  # numpy would ask for the memory first
+            raise ValueError(f"{length} bytes long")
+        stream.seek(-4, io.SEEK_CUR)
         # Version 3 differs from 2 in field names beyond Latin-1, which plain numbers have not.
         return np.lib.format.read_array_header_2_0(stream)
     except (ValueError, EOFError, SyntaxError) as error:

@@ -34,6 +34,8 @@ class Page:
         Pixels that are decoded at once, at least: a strip, a row of tiles, or all.
     notes : tuple of str
         What a user should know, e.g. that alpha is ignored.
+    missing : float or None
+        Value that the file itself declares to mean "missing".
     """
 
     def __init__(
@@ -47,6 +49,8 @@ class Page:
         in_strips: bool = False,
         piece: int | None = None,
         notes: tuple[str, ...] = (),
+        missing: float | None = None,
+        labels: Callable[[], "Page"] | None = None,
     ):
         self.shape = shape
         self.samples = samples
@@ -55,7 +59,20 @@ class Page:
         self.alpha = alpha
         self.in_strips = in_strips
         self.piece = shape[0] * shape[1] if piece is None else piece
-        self.notes = (*(("alpha ignored",) if alpha else ()), *notes)
+        spare = samples - (3 if colour else 1) - alpha
+        if alpha:
+            notes += ("alpha ignored",)
+        if colour and spare:
+            notes += (f"{spare} samples beside the colours ignored",)
+        if missing is not None:
+            notes += (f"declares {missing:g} to be missing",)
+        self.notes = notes
+        self.missing = missing
+        self._labels = labels
+
+    def as_labels(self) -> "Page":
+        """Return the page as whole numbers: of a palette its entries, of few bits unscaled."""
+        return self if self._labels is None else self._labels()
 
     def rows(self, start: int, stop: int) -> np.ndarray:
         """Return rows as an array (rows, columns) or (rows, columns, samples)."""
@@ -74,10 +91,11 @@ class WholePage(Page):
         """Return rows of the decoded page."""
         if self._pixels is None:
             pixels = self._decode()
-            if pixels.shape[:2] != self.shape:
+            promised = self.shape if self.samples == 1 else (*self.shape, self.samples)
+            if pixels.shape != promised or pixels.dtype != self.dtype:
                 raise UnreadableImage(
-                    f"the header promises {self.shape[0]}x{self.shape[1]} pixels, decoded are "
-                    f"{'x'.join(map(str, pixels.shape[:2]))}"
+                    f"the header promises {'x'.join(map(str, promised))} {self.dtype}, decoded are "
+                    f"{'x'.join(map(str, pixels.shape))} {pixels.dtype}"
                 )
             self._pixels = pixels
         return self._pixels[start:stop]
@@ -86,9 +104,19 @@ class WholePage(Page):
 class MappedPage(Page):
     """A page whose uncompressed pixels lie in a file in one piece, mapped into memory."""
 
-    def __init__(self, path: str, offset: int, stored: tuple[int, ...], order: str, **what):
+    def __init__(
+        self,
+        path: str,
+        offset: int,
+        stored: tuple[int, ...],
+        order: str,
+        *,
+        planes_first: bool = False,
+        **what,
+    ):
         super().__init__(in_strips=True, piece=0, **what)
         self._where = (path, offset, stored, order)
+        self._planes_first = planes_first
         self._pixels: np.ndarray | None = None
 
     def rows(self, start: int, stop: int) -> np.ndarray:
@@ -97,6 +125,5 @@ class MappedPage(Page):
             path, offset, stored, order = self._where
             mapped = np.memmap(path, self.dtype, "r", offset, stored, order)
             pixels = np.asarray(mapped)
-            # samples stored plane by plane come first
-            self._pixels = np.moveaxis(pixels, 0, -1) if stored[:2] != self.shape else pixels
+            self._pixels = np.moveaxis(pixels, 0, -1) if self._planes_first else pixels
         return self._pixels[start:stop]

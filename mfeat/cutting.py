@@ -104,7 +104,7 @@ def cuts(settings: DumpSettings, entry: dict[str, Any], item: Item) -> Iterator[
                         f"it has {page.shape[0]}x{page.shape[1]} pixels, the image "
                         f"{item.rows}x{item.cols}"
                     )
-                return _Rows(page, read)
+                return _Rows(page if read is grey else page.as_labels(), read)
 
         def grey(page: Page, start: int, stop: int) -> np.ndarray:
             return grey_rows(page, start, stop, settings.channel)
@@ -125,7 +125,7 @@ def cuts(settings: DumpSettings, entry: dict[str, Any], item: Item) -> Iterator[
             except UnreadableImage as error:
                 yield Cut(*where, np.zeros(len(positions)), damage=str(error))
                 continue
-            yield _cut(where, pixels, known, labels, settings.missing_value)
+            yield _cut(where, pixels, known, labels, (settings.missing_value, image.missing))
 
 
 @contextlib.contextmanager
@@ -142,6 +142,7 @@ class _Rows:
 
     def __init__(self, page: Page, read: Callable[[Page, int, int], np.ndarray]):
         self._page, self._read = page, read
+        self.missing = page.missing
         self._all: np.ndarray | None = None
         if page.piece > 0 and page.shape[0] * page.shape[1] <= WHOLE_PIXELS:
             self._all = read(page, 0, page.shape[0])
@@ -191,10 +192,10 @@ def _bands(
 
 def _cut(
     where: tuple, pixels: np.ndarray, known: np.ndarray | None, truth: np.ndarray | None,
-    missing_value: float | None,
+    declared: tuple[float | None, ...],
 ) -> Cut:  # fmt: skip
     """Return the patches of a band with what is missing in it: by mask, by value, or NaN."""
-    missing = missing_pixels(pixels, missing_value)
+    missing = missing_pixels(pixels, *declared)
     if missing is not None and missing.any():
         known = ~missing if known is None else known & ~missing
     if known is not None and known.all():

@@ -185,7 +185,7 @@ def check_has_channel(page: Page, channel: str | int) -> None:
     elif channel != "luminance":
         if not page.colour:
             raise UnreadableImage(f"a grey image has no channel {channel!r}")
-    elif page.samples > (3 if page.colour else 1) + page.alpha:
+    elif not page.colour and page.samples > 1 + page.alpha:
         raise UnreadableImage(
             f"{page.samples} samples a pixel of unknown meaning; choose one by its number, "
             f"channel 0 to {page.samples - 1}"
@@ -196,7 +196,7 @@ def grey_rows(page: Page, start: int, stop: int, channel: str | int = "luminance
     """Return rows of a page as a 2-D array: as stored, one sample, or the luminance of colours.
 
     Luminance is 0.2126 red + 0.7152 green + 0.0722 blue (ITU-R BT.709-6) of the stored values, in
-    float32 (float64 for samples of more than 16 bits).
+    float32; in float64 for integers of more than 16 bits and for float64.
     """
     check_has_channel(page, channel)
     with reading():
@@ -218,7 +218,10 @@ def _luminance(pixels: np.ndarray) -> np.ndarray:
         weighted += np.multiply(green, g, dtype=np.int32)
         weighted += np.multiply(blue, b, dtype=np.int32)
         return (weighted / 10_000.0).astype(np.float32)
-    mixed = (red * float(r) + green * float(g) + blue * float(b)) / 10_000.0
+    red, green, blue = (part.astype(np.float64) for part in (red, green, blue))
+    with np.errstate(over="ignore", invalid="ignore"):  # of infinities, which stay in the image
+        mixed = red * (r / 1e4) + green * (g / 1e4) + blue * (b / 1e4)
+    np.copyto(mixed, green, where=(red == green) & (green == blue))
     short = pixels.dtype.kind == "f" and pixels.dtype.itemsize <= 4
     return mixed.astype(np.float32 if short else np.float64)
 
@@ -243,15 +246,16 @@ def read_image(
         What becomes of colours: the luminance 0.2126 R + 0.7152 G + 0.0722 B (ITU-R BT.709-6), or
         one channel. Alpha is ignored.
     missing_value : float, optional
-        Pixels of this value are missing; the result is then a masked array.
+        Pixels of this value are missing, as are those of the no-data value that a TIFF declares
+        itself; the result is then a masked array.
     max_pixels : int, default 268435456
         Largest number of pixels to decode at once.
 
     Returns
     -------
     ndarray of shape (rows, columns)
-        Grey values in the type of the file; luminance as float32, or float64 for samples of more
-        than 16 bits. Uncompressed files are mapped into memory, not read.
+        Grey values in the type of the file; luminance as float32, or float64 for integers of more
+        than 16 bits and for float64. Uncompressed files are mapped into memory, not read.
 
     Raises
     ------
@@ -274,10 +278,20 @@ def read_image(
         if page >= len(pages):
             raise UnreadableImage(f"it has {len(pages)} pages, so none of number {page}")
         pixels = grey_rows(pages[page], 0, pages[page].shape[0], channel)
-    missing = missing_pixels(pixels, missing_value)
+        missing = missing_pixels(pixels, missing_value, pages[page].missing)
     return pixels if missing is None else np.ma.MaskedArray(pixels, missing)
 
 
-def missing_pixels(pixels: np.ndarray, missing_value: float | None) -> np.ndarray | None:
-    """Return where pixels equal the value that means "missing", or None where none is declared."""
-    return None if missing_value is None else pixels == missing_value
+def missing_pixels(pixels: np.ndarray, *values: float | None) -> np.ndarray | None:
+    """Return where pixels equal a value that means "missing", or None where none is declared."""
+    found = None
+    for value in values:
+        if value is not None:
+            equal = np.zeros(pixels.shape, bool) if _is_beyond(value, pixels) else pixels == value
+            found = equal if found is None else found | equal
+    return found
+
+
+def _is_beyond(value: float, pixels: np.ndarray) -> bool:
+    """Tell whether a value would be rounded to an infinity, and so be taken for one."""
+    return pixels.dtype.kind == "f" and float(np.finfo(pixels.dtype).max) < abs(value) < np.inf

@@ -126,7 +126,7 @@ LAYERS = {
     "demo": {"_checks", "surfaces"},
     "_pages": set(),
     "_formats": {"_pages"},
-    "_tiff": {"_pages"},
+    "_tiff": {"_formats", "_pages"},
     "storage": set(),
     "images": {"_checks", "_formats", "_pages", "_tiff", "storage"},
     "entries": {"storage"},
