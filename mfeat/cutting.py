@@ -6,7 +6,7 @@ strip.
 """
 
 import contextlib
-from collections.abc import Callable, Iterator
+from collections.abc import Iterator
 from dataclasses import dataclass
 from typing import Any
 
@@ -91,41 +91,83 @@ def cuts(settings: DumpSettings, entry: dict[str, Any], item: Item) -> Iterator[
     Raises
     ------
     UnreadableImage
-        Before the first band, if the file, its mask or its truth cannot be used.
+        Before the first band, if the file, its mask or its truth cannot be used. Of a piece of an
+        image every patch is given with this reason instead: other pieces may be readable.
     """
     with contextlib.ExitStack() as stack:
+        try:
+            files = _opened(settings, entry, item, stack)
+        except UnreadableImage as error:
+            if not item.split:
+                raise
+            for band in _bands(settings, item):
+                yield _damaged(item, *band, str(error))
+            return
+        for band in _bands(settings, item):
+            yield from _cuts_of_band(settings, item, files, *band)
 
-        def opened(what: str, location: str, read: Callable) -> _Rows:
-            with _told(what, location):
-                pages = stack.enter_context(open_pages(location, settings.max_pixels))
-                page = pages[item.page if item.page < len(pages) else 0]
-                if page.shape != (item.rows, item.cols):
+
+def _opened(
+    settings: DumpSettings, entry: dict[str, Any], item: Item, stack: contextlib.ExitStack
+) -> "list[_Rows | None]":
+    """Open an image, its mask and its truth."""
+
+    def opened(what: str, location: str, channel: str | int) -> _Rows:
+        with _told(what, location):
+            pages = stack.enter_context(open_pages(location, settings.max_pixels))
+            page = pages[item.page if item.page < len(pages) else 0]
+            if page.shape != (item.rows, item.cols):
+                raise UnreadableImage(
+                    f"it has {page.shape[0]}x{page.shape[1]} pixels, the image "
+                    f"{item.rows}x{item.cols}"
+                )
+            if what:
+                page = page.as_labels()
+                if page.samples != 1 or page.dtype.kind not in "bui":
                     raise UnreadableImage(
-                        f"it has {page.shape[0]}x{page.shape[1]} pixels, the image "
-                        f"{item.rows}x{item.cols}"
+                        f"pixels of {page.samples} x {page.dtype}; one bool or integer a pixel is "
+                        "needed"
                     )
-                return _Rows(page if read is grey else page.as_labels(), read)
+            return _Rows(page, channel, what, location)
 
-        def grey(page: Page, start: int, stop: int) -> np.ndarray:
-            return grey_rows(page, start, stop, settings.channel)
+    image = opened("", entry["location"], settings.channel)
+    mask = truth = None
+    if entry["mask_location"] is not None:
+        mask = opened("mask", entry["mask_location"], "luminance")
+    if settings.label_from == "truth":
+        truth = opened("truth", entry["truth_location"], "luminance")
+    return [image, mask, truth]
 
-        image = opened("", entry["location"], grey)
-        mask = truth = None
-        if entry["mask_location"] is not None:
-            mask = opened("mask", entry["mask_location"], _whole_numbers)
-        if settings.label_from == "truth":
-            truth = opened("truth", entry["truth_location"], _whole_numbers)
-        for top, bottom, positions, size in _bands(settings, item):
-            left, right = item.col, item.col + item.width
-            where = (top, left, size, positions - (top, left))
-            try:
-                pixels = image.rows(top, bottom)[:, left:right]
-                known = None if mask is None else mask.rows(top, bottom)[:, left:right] != 0
-                labels = None if truth is None else truth.rows(top, bottom)[:, left:right]
-            except UnreadableImage as error:
-                yield Cut(*where, np.zeros(len(positions)), damage=str(error))
-                continue
-            yield _cut(where, pixels, known, labels, (settings.missing_value, image.missing))
+
+def _cuts_of_band(
+    settings: DumpSettings, item: Item, files: "list[_Rows | None]", top: int, bottom: int,
+    positions: np.ndarray, size: tuple[int, int],
+) -> Iterator[Cut]:  # fmt: skip
+    """Yield the patches of a band; if it cannot be read, row of patches by row of patches."""
+    left, right = item.col, item.col + item.width
+    try:
+        pixels, mask, truth = (
+            None if file is None else file.rows(top, bottom)[:, left:right] for file in files
+        )
+    except UnreadableImage as error:
+        starts = np.unique(positions[:, 0])
+        if len(starts) == 1:
+            yield _damaged(item, top, bottom, positions, size, str(error))
+            return
+        for start in starts.tolist():
+            some = positions[positions[:, 0] == start]
+            yield from _cuts_of_band(settings, item, files, start, start + size[0], some, size)
+        return
+    known = None if mask is None else mask != 0
+    where = (top, left, size, positions - (top, left))
+    yield _cut(where, pixels, known, truth, (settings.missing_value, files[0].missing))
+
+
+def _damaged(
+    item: Item, top: int, _bottom: int, positions: np.ndarray, size: tuple[int, int], reason: str
+) -> Cut:
+    where = (top, item.col, size, positions - (top, item.col))
+    return Cut(*where, np.zeros(len(positions)), damage=reason)
 
 
 @contextlib.contextmanager
@@ -140,28 +182,20 @@ def _told(what: str, location: str) -> Iterator[None]:
 class _Rows:
     """Rows of a page. What can be decoded whole is decoded when this is made."""
 
-    def __init__(self, page: Page, read: Callable[[Page, int, int], np.ndarray]):
-        self._page, self._read = page, read
+    def __init__(self, page: Page, channel: str | int, what: str, location: str):
+        self._page, self._channel, self._of = page, channel, (what, location)
         self.missing = page.missing
         self._all: np.ndarray | None = None
         if page.piece > 0 and page.shape[0] * page.shape[1] <= WHOLE_PIXELS:
-            self._all = read(page, 0, page.shape[0])
+            self._all = grey_rows(page, 0, page.shape[0], channel)
         elif not page.in_strips:
-            read(page, 0, 1)  # decodes the page; colours are mixed band by band
+            grey_rows(page, 0, 1, channel)  # decodes the page; colours are mixed band by band
 
     def rows(self, start: int, stop: int) -> np.ndarray:
         if self._all is not None:
             return self._all[start:stop]
-        return self._read(self._page, start, stop)
-
-
-def _whole_numbers(page: Page, start: int, stop: int) -> np.ndarray:
-    """Return rows of a mask or of an image of labels."""
-    if page.samples != 1 or page.dtype.kind not in "bui":
-        raise UnreadableImage(
-            f"pixels of {page.samples} x {page.dtype}; one bool or integer a pixel is needed"
-        )
-    return grey_rows(page, start, stop)
+        with _told(*self._of):
+            return grey_rows(self._page, start, stop, self._channel)
 
 
 def _bands(

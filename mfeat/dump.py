@@ -145,8 +145,8 @@ def dump(
     store = storage.output(place)
     check_output(store)
     quiet = None if progress is None else not progress
-    with workers(jobs, backend, cluster) as how, store.lock(f"{UNFINISHED}/lock"):
-        run = TableRun(store, settings, sources, how, quiet)
+    with workers(jobs, backend, cluster) as how, store.lock(f"{UNFINISHED}/lock") as held:
+        run = TableRun(store, settings, sources, how, quiet, held)
         summary = run.complete(fresh, started)
     if strict and summary.rejects:
         raise RejectsFound(summary)

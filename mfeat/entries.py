@@ -25,8 +25,9 @@ class Sources:
     entries : pyarrow.Table
         One row an image file, or region of one, with the columns `source` (as listed), `location`
         (where it is), `stamp` (changes with the file, its mask and truth; null if missing),
-        `label`, `group`, `mask_location`, `truth_location`, `row`, `col`, `height`, `width`,
-        `pitch_x`, `pitch_y`, `unit`, then those in `carried`, their names after `CARRIED`.
+        `label`, `group`, `mask` (as listed), `mask_location`, `truth_location`, `row`, `col`,
+        `height`, `width`, `pitch_x`, `pitch_y`, `unit`, then those in `carried`, their names after
+        `CARRIED`.
     carried : tuple of str
         Columns of the manifest that go into the table.
     remarks : tuple of str
@@ -54,7 +55,7 @@ def folder_of(location: str) -> str:
 
 _TYPES = {
     "source": pa.string(), "location": pa.string(), "label": pa.string(), "group": pa.string(),
-    "mask_location": pa.string(), "truth_location": pa.string(),
+    "mask": pa.string(), "mask_location": pa.string(), "truth_location": pa.string(),
     "row": pa.int64(), "col": pa.int64(), "height": pa.int64(), "width": pa.int64(),
     "pitch_x": pa.float64(), "pitch_y": pa.float64(), "unit": pa.string(),
 }  # fmt: skip

@@ -224,6 +224,8 @@ class _PartRun:
                         raise Cancelled("interrupted")
                     self._take(number, item)
                 self._compute()
+                for k in dict.fromkeys(item.entry for item in self._items if item.reason is None):
+                    _check_unchanged(self._rows[k - self._first])  # while it was read
             if self._rejects:  # before the part, whose name says that both are complete
                 self._write_rejects(f"{folder}/{rejects_name(self._part)}")
         return PartDone(self._part, self._writer.rows, len(self._rejects))
@@ -237,6 +239,9 @@ class _PartRun:
             pq.write_table(table, stream, compression="zstd")
 
     def _reject(self, number: int, entry: dict[str, Any], place: tuple, reason: str) -> None:
+        page, planned = self._items[number].page, self._items[number].reason
+        if page and planned is None:
+            reason = f"page {page}: {reason}"
         self._rejects.append(Reject(number, entry["source"], *place, reason))
 
     def _take(self, number: int, item: Item) -> None:
@@ -246,10 +251,7 @@ class _PartRun:
         if item.reason is not None:
             self._reject(number, entry, region, item.reason)
             return
-        if stamp_of_entry(entry) != entry["stamp"]:
-            raise InputChanged(
-                f"{entry['source']} has changed since the run was planned; start anew with fresh"
-            )
+        _check_unchanged(entry)
         plan = self._run.plans.of(pitch_of(entry))
         if plan is not self._plan:
             self._compute()
@@ -258,9 +260,7 @@ class _PartRun:
             for cut in cuts(self._run.settings, entry, item):
                 self._keep(number, item, entry, cut)
         except UnreadableImage as error:
-            if item.first == 0:  # another piece of the image tells the same
-                page = f"page {item.page}: " if item.page else ""
-                self._reject(number, entry, region, f"{page}{error}")
+            self._reject(number, entry, region, str(error))
 
     def _keep(self, number: int, item: Item, entry: dict[str, Any], cut: Cut) -> None:
         """Reject patches with too little valid data; the others wait to be computed."""
@@ -317,6 +317,13 @@ class _PartRun:
         for waiting in (self._patches, self._numbers, *self._columns.values()):
             waiting.clear()
         self._pixels = 0
+
+
+def _check_unchanged(entry: dict[str, Any]) -> None:
+    if stamp_of_entry(entry) != entry["stamp"]:
+        raise InputChanged(
+            f"{entry['source']} has changed since the run was planned; start anew with fresh"
+        )
 
 
 def vectors_or_reasons(

@@ -7,9 +7,10 @@ are complete. What a killed run has finished is kept; the same call goes on from
 import contextlib
 import json
 import logging
+import re
 import time
 import uuid
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from concurrent.futures.process import BrokenProcessPool
 from dataclasses import dataclass, field
 from typing import Any
@@ -44,6 +45,9 @@ from mfeat.schema import (
     about,
     differences,
 )
+
+#: Columns of entries that say where files lie.
+WHERE = ["location", "mask_location", "truth_location"]
 
 _log = logging.getLogger("mfeat")
 
@@ -150,10 +154,11 @@ class TableRun:
         sources: Sources,
         how: dict[str, Any],
         quiet: bool | None,
+        held: Callable[[], None],
     ):
         self._store, self._place = store, store.location
         self._settings, self._sources = settings, sources
-        self._how, self._quiet = how, quiet
+        self._how, self._quiet, self._held = how, quiet, held
         self._record = {"mfeat_version": __version__} | settings.record()
 
     def complete(self, fresh: bool, started: float) -> DumpSummary:
@@ -173,6 +178,8 @@ class TableRun:
             run = self._plan()
         kept = self._write_parts(run)
         manifest = self._finish(run)
+        load_run.cache_clear()  # lets go of the plan, which is about to be deleted
+        self._held()
         publish(self._store, run)
         return self._summary(manifest, kept, time.monotonic() - started)
 
@@ -181,7 +188,8 @@ class TableRun:
             return stream.read()
 
     def _runs(self) -> list[str]:
-        return [name for name in self._store.names(UNFINISHED) if name != "lock"]
+        names = self._store.names(UNFINISHED)
+        return [name for name in names if re.fullmatch("[0-9a-f]{12}", name)]
 
     def _clean_up(self) -> None:
         """Finish what was about to appear, and delete plans that were never finished."""
@@ -189,7 +197,7 @@ class TableRun:
             if self._store.exists(f"{run_folder(run)}/{MANIFEST}"):
                 publish(self._store, run)
             elif not is_planned(self._store, run):
-                self._store.remove_tree(run_folder(run))
+                remove_leftovers(self._store, run)
 
     def _unfinished(self) -> str | None:
         runs = self._runs()
@@ -198,7 +206,10 @@ class TableRun:
     def _refuse_differences(self, record: dict[str, Any], folder: str, what: str) -> None:
         """Refuse to go on with other settings or inputs than those of what is there."""
         found = differences(record, self._record)
-        found += changed_inputs(load_entries(self._store, folder), self._sources.entries)
+        before, now = load_entries(self._store, folder), self._sources.entries
+        if not folder:  # a complete table reads no file again, wherever it lies now
+            before, now = (entries.drop_columns(WHERE) for entries in (before, now))
+        found += changed_inputs(before, now)
         if found:
             lines = "\n  ".join(found)
             raise OutputRefused(
@@ -207,8 +218,11 @@ class TableRun:
             )
 
     def _plan(self) -> str:
-        with Parallel(**self._how) as parallel:
-            plan = make_plan(self._sources, self._settings, parallel, self._quiet)
+        try:
+            with Parallel(**self._how) as parallel:
+                plan = make_plan(self._sources, self._settings, parallel, self._quiet)
+        except BrokenProcessPool as error:
+            raise RuntimeError(f"a worker process died while it read headers: {error}") from error
         run = uuid.uuid4().hex[:12]
         self._store.make(run_folder(run))
         with self._store.writing(f"{run_folder(run)}/record.json") as stream:
@@ -352,6 +366,7 @@ def publish(store: Any, run: str) -> None:
     folder = run_folder(run)
     manifest = _manifest(store, folder)
     store.remove(MANIFEST)
+    store.settle()  # else it might be back after a power cut, beside new parts
     there = set(store.names(folder))
     wanted = [part["name"] for part in manifest["parts"]]
     for name in (*wanted, REJECTS, INPUTS):
@@ -364,13 +379,22 @@ def publish(store: Any, run: str) -> None:
     store.settle()
     store.move(f"{folder}/{MANIFEST}", MANIFEST)
     store.settle()
-    store.remove_tree(folder)
+    remove_leftovers(store, run)
+
+
+def remove_leftovers(store: Any, run: str) -> None:
+    """Delete the folder of a run that nobody needs any more.
+
+    On network file systems files that some worker still maps cannot be deleted; the next call does.
+    """
+    try:
+        store.remove_tree(run_folder(run))
+    except OSError as error:
+        _log.warning("%s; it is not needed any more", error)
 
 
 def changed_inputs(before: pa.Table, now: pa.Table) -> list[str]:
-    """Return how two lists of inputs differ, a line each; where the files lie does not matter."""
-    where = ["location", "mask_location", "truth_location"]
-    before, now = before.drop_columns(where), now.drop_columns(where)
+    """Return how two lists of inputs differ, a line each."""
     if before.equals(now):
         return []
     added_columns = set(now.column_names) ^ set(before.column_names)

@@ -7,19 +7,22 @@ leaves half a file under its final name.
 
 import contextlib
 import json
+import logging
 import os
 import shutil
 import socket
 import threading
 import time
 import uuid
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from pathlib import Path
 from typing import Any, BinaryIO
 
 import fsspec
 from fsspec.implementations.arrow import ArrowFSWrapper
 from pyarrow import fs as arrow_fs
+
+_log = logging.getLogger("mfeat")
 
 TEMPORARY = ".tmp"
 
@@ -129,6 +132,8 @@ class LocalStorage:
     def make(self, folder: str) -> None:
         """Make a folder in it, and what is above."""
         (self.root / folder).mkdir(parents=True, exist_ok=True)
+        for above in Path(folder).parents:  # a power cut must not lose a folder with its files
+            self.settle(str(above))
 
     def exists(self, name: str) -> bool:
         """Tell whether there is a file or folder of a name."""
@@ -190,8 +195,10 @@ class LocalStorage:
         raise OSError(f"{self.root / folder} cannot be deleted; another process writes into it")
 
     @contextlib.contextmanager
-    def lock(self, name: str) -> Iterator[None]:
+    def lock(self, name: str) -> Iterator[Callable[[], None]]:
         """Hold the folder for one run; the operating system lets go when the process ends.
+
+        Gives a call that raises if the folder is not held any more.
 
         Raises
         ------
@@ -201,8 +208,8 @@ class LocalStorage:
         path = self.root / name
         was_there = self.root.exists()
         while True:
-            path.parent.mkdir(parents=True, exist_ok=True)
             try:
+                path.parent.mkdir(parents=True, exist_ok=True)
                 handle = os.open(path, os.O_RDWR | os.O_CREAT, 0o666)
             except FileNotFoundError:
                 continue  # a run that just ended removed the folder in between
@@ -216,17 +223,19 @@ class LocalStorage:
                 if os.path.samestat(os.fstat(handle), os.stat(path)):
                     break
             os.close(handle)  # the run that held it has ended and removed the file
-        os.ftruncate(handle, 0)
-        os.write(handle, json.dumps({"host": socket.gethostname(), "pid": os.getpid()}).encode())
+        owner = {"host": socket.gethostname(), "pid": os.getpid()}
         try:
-            yield
+            os.ftruncate(handle, 0)
+            os.write(handle, json.dumps(owner).encode())
+            yield lambda: None
         finally:
             with contextlib.suppress(OSError):
                 path.unlink()
+            os.close(handle)
+            with contextlib.suppress(OSError):
                 path.parent.rmdir()  # only if nothing else is in it
                 if not was_there:
                     self.root.rmdir()  # a run that was refused leaves nothing
-            os.close(handle)
 
 
 def _owner_of(path: Path) -> str:
@@ -253,6 +262,11 @@ def _take(handle: int) -> bool:
         fcntl.flock(handle, fcntl.LOCK_EX | fcntl.LOCK_NB)
     except BlockingIOError:
         return False
+    except OSError as error:
+        raise OSError(
+            f"the output cannot be locked against a second run ({error}); choose a file system "
+            "with locks"
+        ) from error
     return True
 
 
@@ -327,8 +341,10 @@ class RemoteStorage:
             self._fs.rm(self._at(folder), recursive=True)
 
     @contextlib.contextmanager
-    def lock(self, name: str) -> Iterator[None]:
+    def lock(self, name: str) -> Iterator[Callable[[], None]]:
         """Hold the folder for one run.
+
+        Gives a call that raises if the folder is not held any more.
 
         Raises
         ------
@@ -345,27 +361,38 @@ class RemoteStorage:
             )
         self._write_beat(name, token, 0)
         time.sleep(min(self.BEAT, 0.5))  # two runs that start at once: the later writer goes on
-        if self._read_beat(name) != (token, 0):
-            raise OutputInUse(f"another run has just started to write to {self.location}")
+
+        def held() -> None:
+            found = self._read_beat(name)
+            if found is None or found[0] != token:
+                raise OutputInUse(f"another run has taken {self.location} over; this one stops")
+
+        held()
         ended = threading.Event()
 
         def beat() -> None:
             count = 0
             while not ended.wait(self.BEAT):
                 count += 1
-                with contextlib.suppress(OSError):
+                try:
+                    held()
                     self._write_beat(name, token, count)
+                except OutputInUse:
+                    return  # the run asks before it publishes
+                except Exception as error:  # a hiccup of the network; the next beat may succeed
+                    _log.warning("%s: the sign of life failed: %s", self.location, error)
 
         beating = threading.Thread(target=beat, daemon=True)
         beating.start()
         try:
-            yield
+            yield held
         finally:
             ended.set()
             beating.join()
-            self.remove(name)
-            with contextlib.suppress(OSError):  # only if nothing else is in it
-                self._fs.rmdir(self._at(name.rsplit("/", 1)[0]))
+            with contextlib.suppress(OutputInUse, OSError):
+                held()
+                self.remove(name)
+                self._fs.rmdir(self._at(name.rsplit("/", 1)[0]))  # only if nothing else is in it
 
     def _write_beat(self, name: str, token: str, count: int) -> None:
         self.make(name.rsplit("/", 1)[0])

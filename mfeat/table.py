@@ -1,8 +1,9 @@
 """Reading feature tables back, for scikit-learn."""
 
+import contextlib
 import json
 from collections.abc import Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any, BinaryIO
 
 import numpy as np
@@ -58,11 +59,12 @@ class FeatureTable:
         """Return the rows that have a label."""
         if self.y is None:
             raise ValueError("the table has no label; name a source of labels when dumping it")
-        return self[~np.array([label is None for label in self.y])]
+        found = self[self.columns["label"].is_valid().to_numpy()]
+        return replace(found, y=_array(found.columns["label"]))
 
     def __getitem__(self, rows: Any) -> "FeatureTable":
         """Return some rows: a boolean array, positions, or a slice."""
-        chosen = np.arange(len(self))[rows]
+        chosen = np.atleast_1d(np.arange(len(self))[rows])
         return FeatureTable(
             X=self.X[chosen],
             y=None if self.y is None else self.y[chosen],
@@ -136,7 +138,12 @@ def read_table(path: Any) -> FeatureTable:
     columns = _together(others, places)
     groups = columns["group"].combine_chunks().fill_null(columns["source"].combine_chunks())
     label = columns["label"]
-    y = None if label.null_count == len(label) else _array(label)
+    if label.null_count == len(label):
+        y = None
+    elif label.null_count:  # numbers would become floating-point ones, with NaN
+        y = np.array(label.to_pylist(), dtype=object)
+    else:
+        y = _array(label)
     return FeatureTable(
         X, y, _array(groups), names, columns,
         restored(first["transformer"]), first["settings"], first["fingerprint"],
@@ -153,7 +160,7 @@ def _array(column: Any) -> np.ndarray:
 def _together(tables: list[pa.Table], places: list[str]) -> pa.Table:
     try:
         return pa.concat_tables(tables, promote_options="default").replace_schema_metadata(None)
-    except pa.ArrowInvalid as error:
+    except (pa.ArrowInvalid, pa.ArrowTypeError) as error:
         raise ValueError(
             f"the other columns of {', '.join(places)} do not go together: {error}"
         ) from None
@@ -172,6 +179,7 @@ class _open_table:
                 f"{place} holds no complete feature table"
                 + (f": {why}" if unfinished else "; dump writes one")
             )
+        self._stamp = storage.stamp(f"{place}/{MANIFEST}")
         with self._store.open(MANIFEST) as stream:
             manifest = json.loads(stream.read())
         check_version(manifest)
@@ -180,14 +188,21 @@ class _open_table:
         with self._part(self._parts[0]) as stream:
             self.about = about(pq.read_schema(stream))
 
-    def _part(self, part: dict[str, Any]) -> BinaryIO:
+    @contextlib.contextmanager
+    def _part(self, part: dict[str, Any]) -> Iterator[BinaryIO]:
+        """Open a part; whatever is wrong with it is said with its name."""
         try:
-            return self._store.open(part["name"])
+            with self._store.open(part["name"]) as stream:
+                yield stream
         except FileNotFoundError:
             raise ValueError(
                 f"{self.place} lacks {part['name']}, which its manifest lists; dump it anew with "
                 "--fresh"
             ) from None
+        except (OSError, ValueError) as error:  # Arrow's errors are among them
+            raise ValueError(
+                f"{self.place}/{part['name']} is not the part that the manifest lists: {error}"
+            ) from error
 
     def batches(self) -> Iterator[pa.RecordBatch]:
         """Yield the rows of all parts; each part must be the one that the manifest lists."""
@@ -197,12 +212,13 @@ class _open_table:
                 found = about(file.schema_arrow)["fingerprint"]
                 count = file.metadata.num_rows
                 if found != self.about["fingerprint"] or count != part["rows"]:
-                    raise ValueError(
-                        f"{self.place}/{part['name']} is not the part that the manifest lists: "
-                        f"{count} rows instead of {part['rows']}, or other settings"
-                    )
+                    raise ValueError(f"{count} rows instead of {part['rows']}, or other settings")
                 if count == 0:
                     yield from file.read().combine_chunks().to_batches() or [
                         pa.RecordBatch.from_pylist([], schema=file.schema_arrow)
                     ]
                 yield from file.iter_batches(_ROWS_AT_ONCE)
+        if not self._store.exists(MANIFEST) or (
+            storage.stamp(f"{self.place}/{MANIFEST}") != self._stamp
+        ):
+            raise ValueError(f"{self.place} was written anew while it was read; read it again")

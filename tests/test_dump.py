@@ -113,6 +113,12 @@ KINDS = {
     ),
     "float_tiled.tif": lambda p: tifffile.imwrite(p, with_holes, tile=(32, 32), compression="zstd"),
     "big.tif": lambda p: tifffile.imwrite(p, with_holes, bigtiff=True),
+    "declared.tif": lambda p: tifffile.imwrite(
+        p,
+        np.where(grey(seed=3) < 9, -99, grey(dtype=np.int16)),
+        compression="zlib",
+        extratags=[(42113, "s", 0, "-99", True)],  # the no-data value in TIFF files of GDAL
+    ),
     "array.npy": lambda p: np.save(p, grey(dtype=np.float64)),
     "fortran.npy": lambda p: np.save(p, np.asfortranarray(grey(dtype="i2"))),
     "holes.npy": lambda p: np.save(p, with_holes),
@@ -144,7 +150,10 @@ def kinds_dumped(kinds, tmp_path_factory):
 def test_the_values_of_every_kind_of_file_are_those_of_the_image_alone(
     name, page, kinds, kinds_dumped
 ):
-    check_rows(rows_of(kinds_dumped[1], name, page), *alone(kinds / name, page=page))
+    patches, vectors = alone(kinds / name, page=page)
+    check_rows(rows_of(kinds_dumped[1], name, page), patches, vectors)
+    holed = name in ("float_tiled.tif", "big.tif", "holes.npy", "declared.tif")
+    assert (patches.valid_fractions.min() < 1) == holed
 
 
 def test_the_summary_counts_all_kinds(kinds_dumped):
@@ -152,7 +161,11 @@ def test_the_summary_counts_all_kinds(kinds_dumped):
     assert (summary.images, summary.rejects) == (len(PAGES), 0)
     assert summary.patches == len(table) == 6 * sum(PAGES.values())
     assert summary.features == len(table.names) == FEW.transform([grey()]).shape[1]
-    assert summary.notes == {"alpha ignored": 1, "one of several arrays": 2}
+    assert summary.notes == {
+        "alpha ignored": 1,
+        "one of several arrays": 2,
+        "declares -99 to be missing": 1,
+    }
     assert summary.fingerprint == table.fingerprint == FEW.fingerprint()
     sources = table.columns["source"].to_pylist()
     assert list(dict.fromkeys(sources)) == sorted(PAGES, key=natural)
@@ -201,11 +214,11 @@ def test_a_missing_value(tmp_path):
 def test_a_mask_file(kind, tmp_path):
     mask = np.ones((40, 56), dtype=kind)
     mask[5:12, 10:40] = 0
-    for name, image in {"a": grey(), "b": with_holes}.items():
+    for name, image in {"a": grey(), "b": with_holes, "c": grey()}.items():
         tifffile.imwrite(tmp_path / f"{name}.tif", image)
     np.save(tmp_path / "mask.npy", mask)
     rows = [{"path": f"{name}.tif", "mask": "mask.npy"} for name in "ab"]
-    rows.append({"path": "../" + tmp_path.name + "/a.tif", "mask": ""})
+    rows.append({"path": "c.tif", "mask": ""})
     dumped(write_manifest(tmp_path / "manifest.csv", rows), tmp_path / "out")
     table = read_table(tmp_path / "out")
     for row in rows:
@@ -315,6 +328,18 @@ def test_labels_from_images_of_truth(rule, mapped, tmp_path):
     assert table.columns["label_fraction"].to_pylist() == expected.fractions.tolist()
     assert len(set(table.y)) > 1
     assert len(expected.labels) < 6  # some were rejected, so that labels could have slipped
+
+
+def test_colours_of_a_palette_are_labels_by_their_numbers(tmp_path):
+    np.save(tmp_path / "a.npy", grey())
+    truth = grey(seed=2, top=4)
+    image = Image.fromarray(truth, mode="P")
+    image.putpalette([200, 0, 0, 0, 200, 0, 0, 0, 200, 9, 9, 9])
+    image.save(tmp_path / "truth.png")
+    rows = [{"path": "a.npy", "truth": "truth.png"}]
+    dumped(write_manifest(tmp_path / "m.csv", rows), tmp_path / "out", label_from="truth")
+    expected = alone(grey())[0].label(truth)
+    assert read_table(tmp_path / "out").y.tolist() == expected.labels.tolist()
 
 
 def test_labels_from_the_manifest_or_from_folders(tmp_path):

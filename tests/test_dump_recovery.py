@@ -208,7 +208,15 @@ def crashes(error, out, every=1):
             return
 
 
-@pytest.mark.parametrize("how", list(ERRORS))
+LONG = pytest.mark.long
+CASES = [
+    *[("local", "killed"), ("local", "full"), ("memory", "killed")],
+    *[pytest.param("memory", "full", marks=LONG), ("local", "interrupted")],
+    pytest.param("memory", "interrupted", marks=LONG),
+]
+
+
+@pytest.mark.parametrize(("out", "how"), CASES, indirect=["out"])
 def test_a_crash_at_any_step_is_resumed(how, source, out, reference):
     for faults, place in crashes(ERRORS[how], out):
         with contextlib.suppress(ERRORS[how]):
@@ -222,7 +230,7 @@ def test_a_crash_at_any_step_is_resumed(how, source, out, reference):
         assert is_complete(place, reference["few"]), faults.steps
 
 
-@pytest.mark.parametrize("how", ["killed", "full"])
+@pytest.mark.parametrize(("out", "how"), CASES[:4], indirect=["out"])
 def test_an_old_table_stays_until_the_new_one_is_complete(how, source, out, reference):
     seen = set()
     for faults, place in crashes(ERRORS[how], out):
@@ -272,6 +280,32 @@ def test_a_full_disk_while_the_lock_is_taken_does_not_keep_it(source, tmp_path, 
     assert dumped(source, tmp_path / "out").patches == 5
 
 
+def test_the_old_manifest_is_gone_for_good_before_a_part_is_replaced(
+    source, tmp_path, monkeypatch, reference
+):
+    """After a power cut, names that were not flushed to the disk may be the old ones."""
+    dumped(source, tmp_path / "out")
+    done = []
+    for operation in ("move", "remove", "settle"):
+        original = getattr(LocalStorage, operation)
+
+        def noting(store, *arguments, operation=operation, original=original):
+            done.append((operation, *arguments))
+            return original(store, *arguments)
+
+        monkeypatch.setattr(LocalStorage, operation, noting)
+    dumped(source, tmp_path / "out", OTHER, fresh=True)
+    gone = done.index(("remove", "manifest.json"))
+    moves = [k for k, (operation, *names) in enumerate(done) if operation == "move"]
+    assert done[moves[0]][-1] == "part-00000.parquet"
+    assert done[moves[-1]][-1] == "manifest.json"
+    settled = [k for k, step in enumerate(done) if step == ("settle",)]
+    assert any(gone < k < moves[0] for k in settled)
+    assert any(moves[-2] < k < moves[-1] for k in settled)  # all is there when it appears
+    assert settled[-1] > moves[-1]
+    assert is_complete(tmp_path / "out", reference["other"])
+
+
 # Killed processes ---------------------------------------------------------------------------
 
 RUN = """
@@ -300,7 +334,7 @@ def finished_parts(out):
     return len(list(Path(out).glob(f"{UNFINISHED}/*/part-*.parquet")))
 
 
-LOKY = pytest.param("loky", marks=pytest.mark.long)
+LOKY = pytest.param("loky", marks=LONG)
 
 
 @pytest.mark.parametrize("backend", ["threading", LOKY])
@@ -324,7 +358,7 @@ def test_killed_at_random_moments_and_resumed(backend, many, tmp_path):
     assert is_complete(out, reference)
 
 
-@pytest.mark.long
+@LONG
 def test_a_worker_that_is_killed_is_replaced(many, tmp_path, caplog):
     source, reference = many
     out = tmp_path / "out"
@@ -343,7 +377,7 @@ def test_a_worker_that_is_killed_is_replaced(many, tmp_path, caplog):
     assert is_complete(out, reference)
 
 
-@pytest.mark.long
+@LONG
 def test_workers_that_always_die_end_the_run(source, tmp_path, monkeypatch, reference):
     def dying(*arguments):  # a local function travels whole, this module could not be imported
         import os

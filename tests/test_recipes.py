@@ -19,6 +19,7 @@ BENCHMARKS = {
         *["--rounds", "1", "--side", "16", "--patches", "2", "--sides", "32"],
         *["--levels", "8", "--no-cold"],
     ],
+    "dump_endurance": ["--parts", "files", "--files", "60", "--side", "64"],
     "dump_throughput": ["--images", "2", "--side", "128", "--rounds", "1", "--jobs", "2"],
 }
 
@@ -86,6 +87,13 @@ def test_dask_cluster(tmp_path, monkeypatch, capsys):
     monkeypatch.chdir(tmp_path)
     assert load("recipes", "dask_cluster").main(RECIPES["dask_cluster"]) == 24
     assert "bit for bit" in capsys.readouterr().out
+
+
+def test_dump_endurance_loses_no_file(capsys):
+    found = load("benchmarks", "dump_endurance").main(BENCHMARKS["dump_endurance"])["files"]
+    assert found["files"] == 60
+    assert 0 < found["damaged"] < 60
+    assert "none in both" in capsys.readouterr().out
 
 
 def test_dump_throughput_compares_both(capsys):
