@@ -13,6 +13,10 @@ class UnreadableImage(ValueError):
     """A file, or a page of it, that cannot be used; the message is the reason."""
 
 
+class OutOfResources(RuntimeError):
+    """The machine, not the file, is at fault: the run stops, and can be resumed."""
+
+
 class Page:
     """One image of a file.
 
@@ -78,6 +82,9 @@ class Page:
         """Return rows as an array (rows, columns) or (rows, columns, samples)."""
         raise NotImplementedError
 
+    def forget(self) -> None:
+        """Let go of pixels that are kept for the next call of `rows`."""
+
 
 class WholePage(Page):
     """A page that is decoded all at once, when its first rows are asked for."""
@@ -99,6 +106,10 @@ class WholePage(Page):
                 )
             self._pixels = pixels
         return self._pixels[start:stop]
+
+    def forget(self) -> None:
+        """Let go of the decoded page."""
+        self._pixels = None
 
 
 class MappedPage(Page):

@@ -1,6 +1,7 @@
 """TIFF files as pages: mapped into memory, or decoded a row of strips or tiles at a time."""
 
 import contextlib
+import io
 import json
 import math
 import struct
@@ -9,6 +10,7 @@ from typing import BinaryIO
 
 import numpy as np
 import tifffile
+from PIL import Jpeg2KImagePlugin, JpegImagePlugin
 
 from mfeat._formats import ORIENTATION, TURNED
 from mfeat._pages import MappedPage, Page, UnreadableImage
@@ -19,6 +21,10 @@ _WHITE_IS_ZERO, _BLACK_IS_ZERO, _RGB, _PALETTE, _YCBCR = 0, 1, 2, 3, 6
 _REDUCED, _MASK = 1, 4
 _ALPHA_KINDS = (1, 2)
 _JPEG = 7
+_SIZED_CODECS = {
+    _JPEG: JpegImagePlugin.JpegImageFile,
+    **dict.fromkeys((33003, 33005, 34712), Jpeg2KImagePlugin.Jpeg2KImageFile),
+}
 _PHOTOMETRIC = 262
 _NO_DATA = 42113  # registered for the no-data value of geographic rasters
 _SEPARATE = 2
@@ -161,6 +167,21 @@ def _page_of(tiff: tifffile.TiffFile, page: tifffile.TiffPage, path: str | None,
     return _SegmentedPage(tiff, page, palette, number, inverted, **what)
 
 
+def _check_codec(page: tifffile.TiffPage, packed: bytes, place: str) -> None:
+    """Refuse a strip or tile whose codec has a size of its own, larger than the directory says."""
+    factory = _SIZED_CODECS.get(int(page.compression))
+    if factory is None:
+        return
+    limit = page.tilelength * page.tilewidth if page.is_tiled else page.rowsperstrip
+    limit *= 1 if page.is_tiled else page.imagewidth
+    try:
+        wide, tall = factory(io.BytesIO(packed)).size
+    except Exception as error:  # Pillow has errors of many kinds for damaged headers
+        raise UnreadableImage(f"damaged TIFF at {place}: {error}") from error
+    if wide * tall > max(limit, 256 * 256):
+        raise UnreadableImage(f"damaged TIFF at {place}: it holds {tall}x{wide} pixels")
+
+
 def _declared_missing(page: tifffile.TiffPage) -> float | None:
     """Return the value that a raster declares as its no-data value, as text in a private tag."""
     try:
@@ -209,6 +230,10 @@ class _SegmentedPage(Page):
             parts.append(self._latest[1][max(start - top, 0) : stop - top])
         return parts[0] if len(parts) == 1 else np.concatenate(parts)
 
+    def forget(self) -> None:
+        """Let go of the latest row of strips or tiles."""
+        self._latest = None
+
     def _decode(self, k: int) -> np.ndarray:
         """Return the rows of the k-th row of strips or tiles."""
         page = self._page
@@ -241,6 +266,7 @@ class _SegmentedPage(Page):
         handle = self._tiff.filehandle
         handle.seek(offset)
         packed = handle.read(size)  # before `page.decode` is made, which may move in the file
+        _check_codec(page, packed, place)
         try:
             data, where, _ = page.decode(packed, index, jpegtables=page.jpegtables)
         except Exception as error:  # each codec has errors of its own

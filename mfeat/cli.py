@@ -216,7 +216,8 @@ def _dump(options: argparse.Namespace) -> int:
 
     if options.dry_run:
         return _run("dump", run, "", "nothing is written")
-    kept = f"what is finished is kept in {options.out}; the same command goes on from there"
+    again = "the same command" + (" without --fresh" if options.fresh else "")
+    kept = f"what is finished is kept in {options.out}; {again} goes on from there"
     return _run("dump", run, "is complete", kept)
 
 

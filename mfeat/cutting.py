@@ -85,8 +85,10 @@ class Cut:
         )
 
 
-def cuts(settings: DumpSettings, entry: dict[str, Any], item: Item) -> Iterator[Cut]:
-    """Yield the patches of an item, band by band.
+def cuts(
+    settings: DumpSettings, entry: dict[str, Any], item: Item, files: "OpenFiles | None" = None
+) -> Iterator[Cut]:
+    """Yield the patches of an item, band by band; `files` may hold those of the item before.
 
     Raises
     ------
@@ -95,8 +97,9 @@ def cuts(settings: DumpSettings, entry: dict[str, Any], item: Item) -> Iterator[
         image every patch is given with this reason instead: other pieces may be readable.
     """
     with contextlib.ExitStack() as stack:
+        files = files or stack.enter_context(OpenFiles(settings))
         try:
-            files = _opened(settings, entry, item, stack)
+            rows = files.of(entry, item)
         except UnreadableImage as error:
             if not item.split:
                 raise
@@ -104,39 +107,73 @@ def cuts(settings: DumpSettings, entry: dict[str, Any], item: Item) -> Iterator[
                 yield _damaged(item, *band, str(error))
             return
         for band in _bands(settings, item):
-            yield from _cuts_of_band(settings, item, files, *band)
+            yield from _cuts_of_band(settings, item, rows, *band)
 
 
-def _opened(
-    settings: DumpSettings, entry: dict[str, Any], item: Item, stack: contextlib.ExitStack
-) -> "list[_Rows | None]":
-    """Open an image, its mask and its truth."""
+class OpenFiles(contextlib.AbstractContextManager):
+    """The files of one image, open and decoded: its pages and regions follow and share them."""
 
-    def opened(what: str, location: str, channel: str | int) -> _Rows:
-        with _told(what, location):
-            pages = stack.enter_context(open_pages(location, settings.max_pixels))
-            page = pages[item.page if item.page < len(pages) else 0]
-            if page.shape != (item.rows, item.cols):
-                raise UnreadableImage(
-                    f"it has {page.shape[0]}x{page.shape[1]} pixels, the image "
-                    f"{item.rows}x{item.cols}"
-                )
-            if what:
-                page = page.as_labels()
-                if page.samples != 1 or page.dtype.kind not in "bui":
-                    raise UnreadableImage(
-                        f"pixels of {page.samples} x {page.dtype}; one bool or integer a pixel is "
-                        "needed"
-                    )
-            return _Rows(page, channel, what, location)
+    def __init__(self, settings: DumpSettings):
+        self._settings = settings
+        self._files: dict[str, tuple[contextlib.ExitStack, list[Page]]] = {}
+        self._rows: dict[tuple[str, str], _Rows] = {}
+        self._page = 0
 
-    image = opened("", entry["location"], settings.channel)
-    mask = truth = None
-    if entry["mask_location"] is not None:
-        mask = opened("mask", entry["mask_location"], "luminance")
-    if settings.label_from == "truth":
-        truth = opened("truth", entry["truth_location"], "luminance")
-    return [image, mask, truth]
+    def of(self, entry: dict[str, Any], item: Item) -> "list[_Rows | None]":
+        """Return the rows of an image, its mask and its truth; others are closed."""
+        locations = (entry["location"], entry["mask_location"], entry["truth_location"])
+        if item.page != self._page or not self._files.keys() <= set(locations):
+            self._forget()
+        for location in self._files.keys() - set(locations):
+            self._files.pop(location)[0].close()
+        self._page = item.page
+        wanted = [True, locations[1] is not None, self._settings.label_from == "truth"]
+        return [
+            self._opened(what, location, item) if want else None
+            for what, location, want in zip(("", "mask", "truth"), locations, wanted, strict=True)
+        ]
+
+    def _opened(self, what: str, location: str, item: Item) -> "_Rows":
+        if (what, location) not in self._rows:
+            with _told(what, location):
+                page = self._page_of(location, item)
+                channel = self._settings.channel
+                if what:
+                    page, channel = page.as_labels(), "luminance"
+                    if page.samples != 1 or page.dtype.kind not in "bui":
+                        raise UnreadableImage(
+                            f"pixels of {page.samples} x {page.dtype}; one bool or integer a pixel "
+                            "is needed"
+                        )
+                self._rows[what, location] = _Rows(page, channel, what, location)
+        return self._rows[what, location]
+
+    def _page_of(self, location: str, item: Item) -> Page:
+        if location not in self._files:
+            with contextlib.ExitStack() as stack:
+                pages = stack.enter_context(open_pages(location, self._settings.max_pixels))
+                self._files[location] = stack.pop_all(), pages
+        pages = self._files[location][1]
+        if item.page >= len(pages) > 1:
+            raise UnreadableImage(f"it has {len(pages)} pages, so none of number {item.page}")
+        page = pages[item.page if len(pages) > 1 else 0]
+        if page.shape != (item.rows, item.cols):
+            raise UnreadableImage(
+                f"it has {page.shape[0]}x{page.shape[1]} pixels, the image {item.rows}x{item.cols}"
+            )
+        return page
+
+    def _forget(self) -> None:
+        """Let go of all pixels."""
+        self._rows.clear()
+        for _, pages in self._files.values():
+            pages[min(self._page, len(pages) - 1)].forget()
+
+    def __exit__(self, *_: Any) -> None:
+        self._forget()
+        for stack, _pages in self._files.values():
+            stack.close()
+        self._files.clear()
 
 
 def _cuts_of_band(
@@ -149,6 +186,8 @@ def _cuts_of_band(
         pixels, mask, truth = (
             None if file is None else file.rows(top, bottom)[:, left:right] for file in files
         )
+        if (item.height, item.width) != (item.rows, item.cols):
+            pixels = pixels.copy()  # a view would keep the whole image while its patches wait
     except UnreadableImage as error:
         starts = np.unique(positions[:, 0])
         if len(starts) == 1:
@@ -238,9 +277,12 @@ def _cut(
     if pixels.dtype.kind == "f" and not (finite := np.isfinite(pixels)).all():
         infinities = np.isinf(pixels) if known is None else np.isinf(pixels) & known
         valid = finite if known is None else known & finite
+    if infinities is not None and not infinities.any():
+        infinities = None
     _, _, size, positions = where
     fractions = window_shares(None if valid is None else valid.astype(np.uint8), positions, size)
+    if infinities is not None:  # their patches are rejected; labels of the others do not see them
+        known = ~infinities if known is None else known & ~infinities
     if known is not None:
         pixels = np.ma.MaskedArray(pixels, ~known)
-    has_infinities = infinities is not None and infinities.any()
-    return Cut(*where, fractions, pixels, truth, infinities if has_infinities else None)
+    return Cut(*where, fractions, pixels, truth, infinities)

@@ -112,3 +112,34 @@ def with_stamps(entries: pa.Table) -> pa.Table:
     for batch in files.to_batches(10_000):
         stamps += [stamp_of_entry(entry, known) for entry in batch.to_pylist()]
     return entries.add_column(2, "stamp", pa.array(stamps, pa.string()))
+
+
+def changed_inputs(before: pa.Table, now: pa.Table) -> list[str]:
+    """Return how two lists of inputs differ, a line each."""
+    if before.equals(now):
+        return []
+    added_columns = set(now.column_names) ^ set(before.column_names)
+    if added_columns:
+        return [f"columns of the manifest: {sorted(added_columns)} on one side only"]
+    key = ("source", "row", "col", "height", "width")
+    rows = [
+        {tuple(row[name] for name in key): row for row in table.to_pylist()}
+        for table in (before, now)
+    ]
+    removed = [k[0] for k in rows[0] if k not in rows[1]]
+    added = [k[0] for k in rows[1] if k not in rows[0]]
+    changed = []
+    for k in rows[0].keys() & rows[1].keys():
+        one, other = rows[0][k], rows[1][k]
+        what = [name for name in one if repr(one[name]) != repr(other[name])]  # NaN is NaN
+        if what:
+            names = {"stamp": "size or time"}
+            changed.append(f"{k[0]} ({', '.join(names.get(name, name) for name in what)})")
+    lines = []
+    for what, found in (("removed", removed), ("added", added), ("changed", sorted(changed))):
+        if found:
+            more = f", ... ({len(found)})" if len(found) > 5 else ""
+            lines.append(f"inputs {what}: {', '.join(found[:5])}{more}")
+    if not lines and list(rows[0]) != list(rows[1]):
+        lines.append("inputs: their order")
+    return lines  # none where NaN alone made the tables unequal

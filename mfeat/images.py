@@ -5,6 +5,7 @@ names. Integers keep their bits and floating-point numbers their type.
 """
 
 import contextlib
+import errno
 import os
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass
@@ -14,7 +15,7 @@ import numpy as np
 
 from mfeat import _checks, storage
 from mfeat._formats import bmp_pages, jpeg_pages, npy_pages, npz_pages, png_pages
-from mfeat._pages import Page, UnreadableImage
+from mfeat._pages import OutOfResources, Page, UnreadableImage
 from mfeat._tiff import tiff_pages
 
 #: Largest number of pixels that are decoded at once: a whole image, or a strip or row of tiles.
@@ -26,6 +27,9 @@ CHANNELS = ("luminance", "red", "green", "blue")
 # Luminance of red, green and blue in ten-thousandths: ITU-R BT.709-6 (2015), item 3.2. Integers,
 # so that a grey pixel stored as colour keeps its value exactly.
 _LUMINANCE = (2126, 7152, 722)
+
+# Pixels whose colours are mixed at a time.
+_BLOCK = 1 << 20
 
 # Formats by their first bytes; the last two of TIFF are BigTIFF, of NPZ an empty archive.
 _FORMATS: dict[bytes, Callable[[BinaryIO, str | None], list[Page]]] = {
@@ -75,15 +79,17 @@ def reading() -> Iterator[None]:
     """Turn whatever goes wrong with a file inside the block into an `UnreadableImage`."""
     try:
         yield
-    except UnreadableImage:
+    except (UnreadableImage, OutOfResources):
         raise
     except FileNotFoundError:
         raise UnreadableImage("there is no such file") from None
     except IsADirectoryError:
         raise UnreadableImage("it is a folder") from None
     except MemoryError:
-        raise UnreadableImage("too large for the memory of this machine") from None
+        raise OutOfResources("out of memory; use fewer jobs, or a smaller max_pixels") from None
     except (OSError, ValueError) as error:
+        if getattr(error, "errno", None) in (errno.EMFILE, errno.ENFILE, errno.ENOMEM):
+            raise OutOfResources(str(error)) from error
         raise UnreadableImage(_in_one_line(error)) from error
     except Exception as error:  # decoders have errors of their own for damaged files
         raise UnreadableImage(f"damaged: {_in_one_line(error)}") from error
@@ -158,7 +164,7 @@ def scan(
     UnreadableImage
         With the reason; also if a page lacks the channel.
     """
-    with open_pages(location, max_pixels) as pages:
+    with open_pages(storage.as_location(location), max_pixels) as pages:
         for page in pages:
             check_has_channel(page, channel)
         return [
@@ -211,6 +217,14 @@ def grey_rows(page: Page, start: int, stop: int, channel: str | int = "luminance
 
 
 def _luminance(pixels: np.ndarray) -> np.ndarray:
+    """Mix colours, in blocks of rows: the sums take more memory than the image."""
+    rows, cols = pixels.shape[:2]
+    step = max(1, _BLOCK // cols)
+    parts = [_mixed(pixels[start : start + step]) for start in range(0, rows, step)]
+    return parts[0] if len(parts) == 1 else np.concatenate(parts)
+
+
+def _mixed(pixels: np.ndarray) -> np.ndarray:
     red, green, blue = (pixels[..., k] for k in range(3))
     r, g, b = _LUMINANCE
     if pixels.dtype.kind in "bui" and pixels.dtype.itemsize <= 2:

@@ -4,7 +4,7 @@ import csv
 import io
 import math
 import re
-from typing import Any
+from typing import Any, BinaryIO
 
 import numpy as np
 import pyarrow as pa
@@ -38,7 +38,7 @@ def read_manifest(location: str, suffix: str) -> Sources:
     """
     try:
         with storage.open_input(location) as stream:
-            table = _read_csv(stream.read()) if suffix == ".csv" else pq.read_table(stream)
+            table = _read_csv(stream.read()) if suffix == ".csv" else _read_parquet(stream)
     except FileNotFoundError:
         raise FileNotFoundError(f"source {location} does not exist") from None
     except (pa.ArrowInvalid, UnicodeDecodeError, csv.Error) as error:
@@ -117,6 +117,14 @@ def _read_csv(content: bytes) -> pa.Table:
         for name, column in zip(names, columns, strict=True)
     ]
     return pa.Table.from_arrays(made, names)
+
+
+def _read_parquet(stream: BinaryIO) -> pa.Table:
+    """Read Parquet; columns of types that Arrow cannot choose rows of become plain ones."""
+    table = pq.read_table(stream).unify_dictionaries()
+    plain = {pa.string_view(): pa.string(), pa.binary_view(): pa.binary()}
+    fields = [field.with_type(plain.get(field.type, field.type)) for field in table.schema]
+    return table.cast(pa.schema(fields))
 
 
 def _typed(column: list[str | None]) -> pa.Array:

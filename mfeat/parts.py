@@ -16,8 +16,8 @@ import pyarrow as pa
 import pyarrow.parquet as pq
 
 from mfeat import __version__, stacks, storage
-from mfeat._pages import UnreadableImage
-from mfeat.cutting import BAND_PIXELS, Cut, cuts
+from mfeat._pages import OutOfResources, UnreadableImage
+from mfeat.cutting import BAND_PIXELS, Cut, OpenFiles, cuts
 from mfeat.entries import CARRIED, stamp_of_entry
 from mfeat.options import DumpSettings, dump_settings
 from mfeat.patches import Patches
@@ -155,6 +155,12 @@ def is_planned(store: Any, run: str) -> bool:
     return store.exists(f"{run_folder(run)}/{_PLAN}")
 
 
+def drop_plan(store: Any, run: str) -> None:
+    """Delete the plan of a run: what is left of its folder is no run any more."""
+    store.remove(f"{run_folder(run)}/{_PLAN}")
+    store.settle(run_folder(run))
+
+
 @lru_cache(2)
 def load_run(location: str, run: str) -> Run:
     """Return a planned run; each process reads it once."""
@@ -218,7 +224,10 @@ class _PartRun:
     def write(self) -> PartDone:
         run, folder = self._run, run_folder(self._run.name)
         with run.store.writing(f"{folder}/{part_name(self._part)}") as stream:
-            with PartWriter(stream, run.schema) as self._writer:
+            with (
+                PartWriter(stream, run.schema) as self._writer,
+                OpenFiles(run.settings) as self._files,
+            ):
                 for number, item in enumerate(self._items):
                     if run.name in CANCELLED:
                         raise Cancelled("interrupted")
@@ -257,13 +266,15 @@ class _PartRun:
             self._compute()
         self._plan = plan
         try:
-            for cut in cuts(self._run.settings, entry, item):
+            for cut in cuts(self._run.settings, entry, item, self._files):
                 self._keep(number, item, entry, cut)
         except UnreadableImage as error:
             self._reject(number, entry, region, str(error))
 
     def _keep(self, number: int, item: Item, entry: dict[str, Any], cut: Cut) -> None:
         """Reject patches with too little valid data; the others wait to be computed."""
+        if self._run.name in CANCELLED:  # asked here too, for images of many bands
+            raise Cancelled("interrupted")
         places = (cut.positions + np.array([cut.top, cut.left])).tolist()
         good = np.ones(len(places), dtype=bool)
         for k, fraction in enumerate(cut.fractions.tolist()):
@@ -293,7 +304,7 @@ class _PartRun:
     def _labels(self, entry: dict[str, Any], kept: Patches, cut: Cut) -> tuple[list, list]:
         if cut.truth is not None:
             found = kept.label(cut.truth, self._run.settings.truth_rule)
-            return found.labels.tolist(), found.fractions.tolist()
+            return found.labels.astype(np.int64).tolist(), found.fractions.tolist()
         label = entry["label"]
         return [label] * len(kept), [None if label is None else 1.0] * len(kept)
 
@@ -332,6 +343,8 @@ def vectors_or_reasons(
     """Return the rows of patches, and by place the reason why one has none."""
     try:
         return _vectors(plan, patches, min_valid)
+    except MemoryError:
+        raise OutOfResources("out of memory while vectors were computed; use fewer jobs") from None
     except ValueError as error:
         if len(patches) == 1:
             rows = np.full((1, plan.length), np.nan, dtype=plan.dtype)

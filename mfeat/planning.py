@@ -194,7 +194,7 @@ def make_plan(
     )
     notes: Counter[str] = Counter()
     items = list(_items(sources, settings, parallel, quiet, notes))
-    return Plan(sources, settings, schema, _in_parts(items, settings), dict(notes))
+    return Plan(sources, settings, schema, _in_parts(items, settings, sources), dict(notes))
 
 
 def _items(
@@ -210,7 +210,7 @@ def _items(
     needed = ["location", "row", "col", "height", "width", "pitch_x", "pitch_y"]
     known: dict[str, list[ImageInfo] | str] = {}
     regions = entries["row"].null_count < len(entries)
-    progress = tqdm(total=len(entries), desc="headers", unit="image", disable=quiet or None)
+    progress = tqdm(total=len(entries), desc="headers", unit="image", disable=quiet)
     for start in range(0, len(entries), 64 * _SCANNED_AT_ONCE):
         some = entries.select(needed).slice(start, 64 * _SCANNED_AT_ONCE).to_pylist()
         if not regions:
@@ -278,6 +278,13 @@ def _item(
     single = about["row"] is not None and settings.regions == "patch"
     size = region[2:] if single else settings.grid.size
     plan = plans.of(pitch_of(about))
+    wide = size[1] if info.mapped else cols
+    if size[0] * wide > settings.max_pixels:
+        reason = (
+            f"{page}too large: {size[0]} rows of {wide} pixels have to be held at once, the limit "
+            f"max_pixels is {settings.max_pixels}"
+        )
+        return _rejected(entry, reason, about, info), False
     try:
         check_scales(plan.fields, size, plan.pitch, plan.scale_unit)
         starts = None if single else settings.grid.starts(region[2:])
@@ -298,25 +305,35 @@ def _check_grid(sources: Sources, settings: DumpSettings) -> None:
         check_scales(plan.fields, settings.grid.size, plan.pitch, plan.scale_unit)
 
 
-def _in_parts(items: list[tuple[Item, bool]], settings: DumpSettings) -> pa.Table:
+def _in_parts(items: list[tuple[Item, bool]], settings: DumpSettings, sources: Sources) -> pa.Table:
     """Cut items where they may be cut and give each a part, in order."""
     pixels = settings.grid.size[0] * settings.grid.size[1]
+    locations = sources.entries["location"].combine_chunks().dictionary_encode().indices.to_numpy()
 
-    def cost(item: Item) -> int:
+    def image_of(item: Item) -> tuple[int, int]:
+        return int(locations[item.entry]), item.page
+
+    def cost(item: Item, decoded: bool) -> int:
         if item.reason is not None:
             return _COST_OF_REJECT
         own = pixels if item.stop else item.height * item.width
-        return item.patches * own + item.rows * item.cols + _COST_OF_FILE
+        image = 0 if decoded else item.rows * item.cols + _COST_OF_FILE
+        return item.patches * own + image
 
-    total = sum(cost(item) for item, _ in items)
+    before = itertools.chain([None], (image_of(item) for item, _ in items))
+    costs = [
+        cost(item, image_of(item) == last) for (item, _), last in zip(items, before, strict=False)
+    ]
+    total = sum(costs)
     target = min(max(total // _PARTS_WANTED, _PART_COSTS[0]), _PART_COSTS[1])
     columns: list[list] = [[] for _ in Item._fields]
     parts, part, filled = [], 0, 0
-    for item, divisible in items:
-        for piece in _pieces(item, target, cost(item)) if divisible else (item,):
+    for (item, divisible), own in zip(items, costs, strict=True):
+        for piece in _pieces(item, target, own) if divisible else (item,):
             if filled >= target:
                 part, filled = part + 1, 0
-            filled += cost(piece) if not piece.split else cost(item) * piece.patches // item.patches
+                own = cost(item, False)  # the image of the item before is decoded elsewhere
+            filled += own if not piece.split else own * piece.patches // item.patches
             for column, value in zip(columns, piece, strict=True):
                 column.append(value)
             parts.append(part)

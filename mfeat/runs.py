@@ -21,10 +21,11 @@ from joblib import Parallel, delayed
 from tqdm import tqdm
 
 from mfeat import __version__, storage
-from mfeat.entries import Sources
+from mfeat.entries import Sources, changed_inputs
 from mfeat.options import DumpSettings
 from mfeat.parts import (
     CANCELLED,
+    drop_plan,
     is_planned,
     load_entries,
     load_run,
@@ -35,6 +36,7 @@ from mfeat.parts import (
     write_part,
 )
 from mfeat.planning import make_plan
+from mfeat.publishing import OutputRefused, manifest_of, publish, remove_leftovers
 from mfeat.schema import (
     INPUTS,
     MANIFEST,
@@ -50,10 +52,6 @@ from mfeat.schema import (
 WHERE = ["location", "mask_location", "truth_location"]
 
 _log = logging.getLogger("mfeat")
-
-
-class OutputRefused(ValueError):
-    """The output holds something that this run would have to change; the message says what."""
 
 
 @dataclass(frozen=True)
@@ -123,25 +121,10 @@ def check_output(store: Any) -> None:
         if any(one.exists() and not one.is_dir() for one in (folder, *folder.parents)):
             raise OutputRefused(f"out {folder} is a file, or lies below one; name a folder")
     names = set(store.names()) - {UNFINISHED}
-    if names and not store.exists(UNFINISHED) and _manifest(store) is None:
+    if names and not store.exists(UNFINISHED) and manifest_of(store) is None:
         raise OutputRefused(
             f"out {store.location} holds other files, e.g. {min(names)}; name a new or empty folder"
         )
-
-
-def _manifest(store: Any, folder: str = "") -> dict[str, Any] | None:
-    """Return the manifest of a complete table, or None where there is none."""
-    name = f"{folder}/{MANIFEST}" if folder else MANIFEST
-    try:
-        with store.open(name) as stream:
-            found = json.loads(stream.read())
-    except FileNotFoundError:
-        return None
-    except ValueError:
-        raise OutputRefused(f"{store.location}/{name} is no manifest of a feature table") from None
-    if not isinstance(found, dict) or "table_version" not in found:
-        raise OutputRefused(f"{store.location}/{name} is no manifest of a feature table")
-    return found
 
 
 class TableRun:
@@ -167,11 +150,13 @@ class TableRun:
         run = None if fresh else self._unfinished()
         if fresh:
             for name in self._runs():
-                self._store.remove_tree(run_folder(name))
+                drop_plan(self._store, name)
+                remove_leftovers(self._store, name)
         elif run is not None:
             kept = json.loads(self._store_read(f"{run_folder(run)}/record.json"))
             self._refuse_differences(kept, run_folder(run), "an interrupted run")
-        elif (manifest := _manifest(self._store)) is not None:
+        elif (manifest := manifest_of(self._store)) is not None:
+            self._check_whole(manifest)
             self._refuse_differences(manifest["record"], "", "a complete table")
             return self._summary(manifest, kept_parts=len(manifest["parts"]))
         if run is None:
@@ -202,6 +187,15 @@ class TableRun:
     def _unfinished(self) -> str | None:
         runs = self._runs()
         return runs[0] if runs else None
+
+    def _check_whole(self, manifest: dict[str, Any]) -> None:
+        """Refuse to call a table complete that has lost a file since."""
+        listed = {*(part["name"] for part in manifest["parts"]), REJECTS, INPUTS}
+        if lost := sorted(listed - set(self._store.names())):
+            raise OutputRefused(
+                f"out {self._place} lacks {', '.join(lost[:5])}, which belong to its table; start "
+                "anew with fresh (--fresh)"
+            )
 
     def _refuse_differences(self, record: dict[str, Any], folder: str, what: str) -> None:
         """Refuse to go on with other settings or inputs than those of what is there."""
@@ -355,68 +349,3 @@ class TableRun:
             kept_parts=kept_parts,
             seconds=seconds,
         )
-
-
-def publish(store: Any, run: str) -> None:
-    """Let the table of a complete run take its place; can be repeated from wherever it stopped.
-
-    The run's own manifest says that it is complete. The old table goes first, the new manifest
-    comes last, and the plan goes before it, so that no half state looks like another.
-    """
-    folder = run_folder(run)
-    manifest = _manifest(store, folder)
-    store.remove(MANIFEST)
-    store.settle()  # else it might be back after a power cut, beside new parts
-    there = set(store.names(folder))
-    wanted = [part["name"] for part in manifest["parts"]]
-    for name in (*wanted, REJECTS, INPUTS):
-        if name in there:
-            store.move(f"{folder}/{name}", name)
-    for name in set(store.names()) - set(wanted):
-        if name.startswith("part-") and name.endswith(".parquet"):
-            store.remove(name)
-    store.remove(f"{folder}/plan.arrow")
-    store.settle()
-    store.move(f"{folder}/{MANIFEST}", MANIFEST)
-    store.settle()
-    remove_leftovers(store, run)
-
-
-def remove_leftovers(store: Any, run: str) -> None:
-    """Delete the folder of a run that nobody needs any more.
-
-    On network file systems files that some worker still maps cannot be deleted; the next call does.
-    """
-    try:
-        store.remove_tree(run_folder(run))
-    except OSError as error:
-        _log.warning("%s; it is not needed any more", error)
-
-
-def changed_inputs(before: pa.Table, now: pa.Table) -> list[str]:
-    """Return how two lists of inputs differ, a line each."""
-    if before.equals(now):
-        return []
-    added_columns = set(now.column_names) ^ set(before.column_names)
-    if added_columns:
-        return [f"columns of the manifest: {sorted(added_columns)} on one side only"]
-    key = ("source", "row", "col", "height", "width")
-    rows = [
-        {tuple(row[name] for name in key): row for row in table.to_pylist()}
-        for table in (before, now)
-    ]
-    removed = [k[0] for k in rows[0] if k not in rows[1]]
-    added = [k[0] for k in rows[1] if k not in rows[0]]
-    changed = []
-    for k in rows[0].keys() & rows[1].keys():
-        one, other = rows[0][k], rows[1][k]
-        what = [name for name in one if repr(one[name]) != repr(other[name])]  # NaN is NaN
-        if what:
-            names = {"stamp": "size or time"}
-            changed.append(f"{k[0]} ({', '.join(names.get(name, name) for name in what)})")
-    lines = []
-    for what, found in (("removed", removed), ("added", added), ("changed", sorted(changed))):
-        if found:
-            more = f", ... ({len(found)})" if len(found) > 5 else ""
-            lines.append(f"inputs {what}: {', '.join(found[:5])}{more}")
-    return lines or ["inputs: their order"]

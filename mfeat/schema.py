@@ -44,7 +44,7 @@ REJECTS_SCHEMA = pa.schema(
 _PER_IMAGE = "per image"
 
 _KEY = b"mfeat"
-_ROW_GROUP_BYTES = 16 << 20
+_ROW_GROUP_BYTES = 64 << 20
 _ROW_GROUP_ROWS = 8192
 
 

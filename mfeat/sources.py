@@ -54,6 +54,11 @@ def list_sources(source: Any, *, label_from: str | None = None, leave_out: str =
     location = storage.absolute(storage.as_location(source, "source"))
     path = storage.local_path(location)
     suffix = PurePosixPath(location).suffix.lower()
+    if "::" in location and suffix not in MANIFESTS:
+        raise ValueError(
+            f"source {location} is a chained URI, which cannot be listed; name its files in a "
+            "manifest"
+        )
     patterned = any(mark in location for mark in "*?[")
     if patterned and storage.exists(location):
         patterned = False  # a file may be called image[1].png
@@ -80,7 +85,9 @@ def list_sources(source: Any, *, label_from: str | None = None, leave_out: str =
         raise ValueError(f"labels are to come from a manifest's column label; {location} has none")
     if label_from == "folder":
         places = found.entries["location"].to_pylist()
-        labels = pa.array([PurePosixPath(one).parent.name or None for one in places], pa.string())
+        folders = (re.split(r"[\\/]", one)[-2:-1] for one in places)
+        labels = pa.array([folder[0] or None if folder else None for folder in folders])
+        labels = labels.cast(pa.string())
         place = found.entries.column_names.index("label")
         found = replace(found, entries=found.entries.set_column(place, "label", labels))
     if label_from == "truth" and found.entries["truth_location"].null_count:

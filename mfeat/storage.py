@@ -6,6 +6,7 @@ leaves half a file under its final name.
 """
 
 import contextlib
+import errno
 import json
 import logging
 import os
@@ -17,6 +18,8 @@ import uuid
 from collections.abc import Callable, Iterator
 from pathlib import Path
 from typing import Any, BinaryIO
+from urllib.parse import urlsplit
+from urllib.request import url2pathname
 
 import fsspec
 from fsspec.implementations.arrow import ArrowFSWrapper
@@ -45,7 +48,7 @@ def as_location(value: Any, name: str = "location") -> str:
 def local_path(location: str) -> str | None:
     """Return the local path that a location means, or None where it is a URI of another kind."""
     if location.startswith("file://"):
-        return location.removeprefix("file://")
+        return url2pathname(urlsplit(location).path)
     return None if "://" in location else location
 
 
@@ -174,6 +177,9 @@ class LocalStorage:
         handle = os.open(self.root / folder, os.O_RDONLY)
         try:
             os.fsync(handle)
+        except OSError as error:
+            if error.errno not in (errno.EINVAL, errno.ENOTSUP):  # mounts that cannot do it
+                raise
         finally:
             os.close(handle)
 
@@ -229,9 +235,12 @@ class LocalStorage:
             os.write(handle, json.dumps(owner).encode())
             yield lambda: None
         finally:
+            if os.name == "nt":  # open files cannot be deleted there
+                os.close(handle)
             with contextlib.suppress(OSError):
                 path.unlink()
-            os.close(handle)
+            if os.name != "nt":
+                os.close(handle)
             with contextlib.suppress(OSError):
                 path.parent.rmdir()  # only if nothing else is in it
                 if not was_there:

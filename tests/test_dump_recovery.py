@@ -458,7 +458,7 @@ def test_finished_parts_are_kept_and_a_truncated_one_is_redone(source, tmp_path,
 
 
 def test_a_resume_needs_no_part_of_the_settings_that_decide_nothing(source, tmp_path, reference):
-    interrupted(source, tmp_path / "out", jobs=2)
+    interrupted(source, tmp_path / "out")
     other_jobs = MinkowskiCurves(**FEW.get_params() | {"n_jobs": 2})
     assert dumped(source, tmp_path / "out", other_jobs, jobs=3).kept_parts == 2
     read = [pq.read_table(io) for io in sorted((tmp_path / "out").glob("part-*.parquet"))]
@@ -644,8 +644,8 @@ def test_a_file_that_changes_while_it_is_read_ends_the_run(tmp_path, monkeypatch
     source = write_images(tmp_path / "in")
     cuts = parts.cuts
 
-    def changing(settings, entry, item):
-        for cut in cuts(settings, entry, item):
+    def changing(settings, entry, item, *more):
+        for cut in cuts(settings, entry, item, *more):
             yield cut
             if entry["source"] == "b.npy":
                 with open(source / "b.npy", "r+b") as stream:  # in place: mapped pixels change

@@ -4,6 +4,7 @@ Files are written by Pillow, imagecodecs, tifffile and numpy. What these cannot 
 bits or interlaced, BMP with alpha, edited headers) is put together here.
 """
 
+import errno
 import functools
 import gc
 import io
@@ -23,7 +24,7 @@ import tifffile
 from PIL import Image
 
 from mfeat import images, storage
-from mfeat._pages import UnreadableImage
+from mfeat._pages import OutOfResources, UnreadableImage
 from mfeat.images import grey_rows, open_pages, read_image, scan
 
 ROWS, COLS = 19, 23
@@ -1113,7 +1114,6 @@ def test_one_bad_page_is_named_and_spoils_the_file(put):
 @pytest.mark.parametrize(
     ("error", "reason"),
     [
-        (MemoryError(), "too large for the memory of this machine"),
         (PermissionError(13, "Permission denied"), "Permission denied"),
         (RuntimeError("two\nlines"), "damaged: two lines"),
         (ZeroDivisionError(), "damaged: ZeroDivisionError"),
@@ -1123,6 +1123,13 @@ def test_one_bad_page_is_named_and_spoils_the_file(put):
 )
 def test_whatever_a_decoder_raises_becomes_one_line(error, reason):
     with pytest.raises(UnreadableImage, match=reason), images.reading():
+        raise error
+
+
+@pytest.mark.parametrize("error", [MemoryError(), OSError(errno.EMFILE, "Too many open files")])
+def test_a_fault_of_the_machine_is_no_damage(error):
+    expected = pytest.raises(OutOfResources, match=r"out of memory|Too many open files")
+    with expected, images.reading():
         raise error
 
 

@@ -142,7 +142,8 @@ LAYERS = {
         *["stacks", "storage", "vector"],
     },
     "workers": {"_checks"},
-    "runs": {"entries", "options", "parts", "planning", "schema", "storage"},
+    "publishing": {"parts", "schema"},
+    "runs": {"publishing", "entries", "options", "parts", "planning", "schema", "storage"},
     "dump": {"images", "options", "runs", "schema", "sources", "storage", "workers"},
     "estimate": {
         *["_pages", "cutting", "entries", "options", "parts", "planning", "schema", "sources"],

@@ -432,7 +432,7 @@ def test_stamps_in_memory_change_too(memory):
 # Manifests
 
 COLUMNS = [
-    *("source", "location", "stamp", "label", "group", "mask_location", "truth_location"),
+    *("source", "location", "stamp", "label", "group", "mask", "mask_location", "truth_location"),
     *("row", "col", "height", "width", "pitch_x", "pitch_y", "unit"),
 ]
 
