@@ -216,5 +216,5 @@ def test_uris_of_local_files_may_be_escaped(tmp_path):
 
 
 def test_chained_uris_are_refused_with_a_way_out():
-    with pytest.raises(ValueError, match="chained URI, .* name its files in a manifest"):
+    with pytest.raises(ValueError, match=r"chained URI, .* name its files in a manifest"):
         list_sources("zip://*.npy::file:///tmp/x.zip")
