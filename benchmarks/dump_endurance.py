@@ -7,7 +7,7 @@ files    thousands of files of all formats, among them more than 15 kinds of dam
 kills    runs are killed with SIGKILL at random moments, alone or with all their workers, and the
          same call is made again until the table is complete: it equals, byte for byte, that of a
          run left alone.
-memory   the peak memory of processes that dump few and many images.
+memory   the peak memory of processes that dump few and many images (on Linux).
 cluster  a Dask scheduler with two workers, one of which is killed: the same table.
 
 Each part stops with an AssertionError where a promise is broken.
@@ -45,20 +45,25 @@ PARTS = ("files", "kills", "memory", "cluster")
 SIZE = 32
 
 # What other processes run: arguments are the source, the output, the backend and the cost of a
-# part; they say when they begin and how much memory they took, in MB.
+# part; they say when they begin and the peak memory of themselves and of their workers, in MB.
+# VmHWM is that of the program alone; ru_maxrss would start with what its parent had.
 RUN = """
-import resource, sys
+import sys
+from joblib import Parallel, delayed
 from mfeat import dump, planning
+
+def peak():
+    with open("/proc/self/status") as status:
+        return int(next(line for line in status if line.startswith("VmHWM")).split()[1]) / 1024
+
 if int(sys.argv[4]):
     planning._PART_COSTS = (int(sys.argv[4]),) * 2
 print("begins", flush=True)
-summary = dump(sys.argv[1], sys.argv[2], size=32, jobs=2, backend=sys.argv[3])
-from joblib.externals.loky import get_reusable_executor
+dump(sys.argv[1], sys.argv[2], size=32, jobs=2, backend=sys.argv[3])
+workers = [0.0]
 if sys.argv[3] == "loky":
-    get_reusable_executor().shutdown(wait=True)  # only then the workers are counted
-peaks = [resource.getrusage(who).ru_maxrss / 1024
-         for who in (resource.RUSAGE_SELF, resource.RUSAGE_CHILDREN)]
-print(*peaks, flush=True)
+    workers = Parallel(n_jobs=2, backend="loky")(delayed(peak)() for _ in range(20))
+print(peak(), max(workers), flush=True)
 """
 
 
