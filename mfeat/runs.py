@@ -75,7 +75,7 @@ class DumpSummary:
     kept_parts : int
         Parts that an earlier run had finished.
     seconds : float
-        Time taken.
+        Time taken; 0 where the table was complete already.
     """
 
     out: str
@@ -95,12 +95,12 @@ class DumpSummary:
             f"{_number(self.patches, 'patch', 'patches')} of {_number(self.images, 'image')}, "
             f"{_number(self.features, 'number')} each, in {_number(self.parts, 'part')}: {self.out}"
         ]
-        if self.kept_parts == self.parts:
+        if not self.seconds:
             lines.append("the table was complete already; nothing was done")
-        elif self.kept_parts:
-            lines.append(f"{_number(self.kept_parts, 'part')} kept from an interrupted run")
-        if self.seconds and self.kept_parts < self.parts:
+        else:
             lines[0] += f", {self.seconds:.1f} s"
+        if self.seconds and self.kept_parts:
+            lines.append(f"{_number(self.kept_parts, 'part')} kept from an interrupted run")
         if self.rejects:
             lines.append(
                 f"{_number(self.rejects, 'reject')} ({_number(self.rejected_images, 'whole image')}"
