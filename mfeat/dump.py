@@ -4,7 +4,7 @@ import logging
 import time
 from typing import Any
 
-from mfeat import storage
+from mfeat import locations, storage
 from mfeat.images import MAX_PIXELS
 from mfeat.options import dump_settings
 from mfeat.runs import DumpSummary, TableRun, check_output
@@ -141,7 +141,7 @@ def dump(
         transformer, size=size, stride=stride, edge=edge, regions=regions, label_from=label_from,
         truth_rule=truth_rule, channel=channel, missing_value=missing_value, max_pixels=max_pixels,
     )  # fmt: skip
-    place = storage.absolute(storage.as_location(out, "out"))
+    place = locations.absolute(locations.as_location(out, "out"))
     sources = list_sources(source, label_from=label_from, leave_out=place)
     for remark in sources.remarks:
         _log.warning("%s", remark)

@@ -7,7 +7,7 @@ from typing import Any
 
 import pyarrow as pa
 
-from mfeat import storage
+from mfeat import locations
 
 #: Column of a manifest with images of labels, read under ``label_from="truth"``; also carried.
 TRUTH = "truth"
@@ -97,7 +97,7 @@ def stamp_of_entry(entry: dict[str, Any], known: dict[str, str | None] | None = 
     for name in names:
         if name is not None and name not in known:
             try:
-                known[name] = storage.stamp(name)
+                known[name] = locations.stamp(name)
             except (OSError, ValueError):
                 known[name] = None  # the reason is found when it is opened
     own, *more = (known[name] for name in names if name is not None)

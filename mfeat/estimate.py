@@ -11,7 +11,7 @@ import numpy as np
 import pyarrow.parquet as pq
 from joblib import Parallel
 
-from mfeat import storage
+from mfeat import locations
 from mfeat._pages import UnreadableImage
 from mfeat.cutting import cuts
 from mfeat.entries import CARRIED
@@ -143,7 +143,7 @@ def estimate(
     >>> found.images, found.patches, found.features
     (1, 4, 395)
     """
-    leave_out = storage.absolute(storage.as_location(out, "out")) if out else ""
+    leave_out = locations.absolute(locations.as_location(out, "out")) if out else ""
     sources = list_sources(source, label_from=settings.label_from, leave_out=leave_out)
     quiet = None if progress is None else not progress
     with workers(jobs, backend, cluster) as how, Parallel(**how) as parallel:

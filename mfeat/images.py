@@ -13,7 +13,7 @@ from typing import Any, BinaryIO
 
 import numpy as np
 
-from mfeat import _checks, storage
+from mfeat import _checks, locations
 from mfeat._formats import bmp_pages, jpeg_pages, npy_pages, npz_pages, png_pages
 from mfeat._pages import OutOfResources, Page, UnreadableImage
 from mfeat._tiff import tiff_pages
@@ -106,10 +106,10 @@ def open_pages(location: str, max_pixels: int = MAX_PIXELS) -> Iterator[list[Pag
     """
     with contextlib.ExitStack() as stack:
         with reading():
-            path = storage.local_path(location)
+            path = locations.local_path(location)
             if path is not None and os.path.exists(path) and not _is_plain(path):
                 raise UnreadableImage("no regular file, but a pipe or a device")
-            stream = stack.enter_context(storage.open_input(location))
+            stream = stack.enter_context(locations.open_input(location))
             pages = _pages_of(stream, path)
             for number, page in enumerate(pages):
                 _check_page(page, number, len(pages), max_pixels)
@@ -164,7 +164,7 @@ def scan(
     UnreadableImage
         With the reason; also if a page lacks the channel.
     """
-    with open_pages(storage.as_location(location), max_pixels) as pages:
+    with open_pages(locations.as_location(location), max_pixels) as pages:
         for page in pages:
             check_has_channel(page, channel)
         return [
@@ -288,7 +288,7 @@ def read_image(
     """
     channel = check_channel(channel)
     page = _checks.integer("page", page, minimum=0)
-    with open_pages(storage.as_location(location), max_pixels) as pages:
+    with open_pages(locations.as_location(location), max_pixels) as pages:
         if page >= len(pages):
             raise UnreadableImage(f"it has {len(pages)} pages, so none of number {page}")
         pixels = grey_rows(pages[page], 0, pages[page].shape[0], channel)

@@ -11,7 +11,7 @@ import pyarrow as pa
 import pyarrow.compute as pc
 import pyarrow.parquet as pq
 
-from mfeat import storage
+from mfeat import locations
 from mfeat.entries import TRUTH, Sources, entries_table, folder_of, join, kept_label
 
 #: Columns of a manifest that have a meaning; all others are carried into the table.
@@ -37,7 +37,7 @@ def read_manifest(location: str, suffix: str) -> Sources:
         If it cannot be used; rows and columns are named.
     """
     try:
-        with storage.open_input(location) as stream:
+        with locations.open_input(location) as stream:
             table = _read_csv(stream.read()) if suffix == ".csv" else _read_parquet(stream)
     except FileNotFoundError:
         raise FileNotFoundError(f"source {location} does not exist") from None
@@ -235,7 +235,7 @@ def _check_distinct(location: str, columns: dict[str, Any]) -> None:
     """Refuse rows that would give the same patches twice."""
     regions = [columns[name].to_pylist() for name in _REGION if name in columns]
     seen: dict[tuple, int] = {}
-    places = [storage.absolute(place) for place in columns["location"]]
+    places = [locations.absolute(place) for place in columns["location"]]
     for k, key in enumerate(zip(places, *regions, strict=True)):
         first = seen.setdefault(key, k)
         if first != k:

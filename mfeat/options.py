@@ -8,7 +8,7 @@ from typing import Any
 
 import numpy as np
 
-from mfeat import _checks, storage
+from mfeat import _checks, locations
 from mfeat.images import MAX_PIXELS, check_channel
 from mfeat.levels import DEFAULT_RANGES
 from mfeat.patches import LABEL_RULES, PatchGrid
@@ -179,8 +179,8 @@ def read_settings(path: Any) -> dict[str, Any]:
     ...     read_settings(file)
     {'size': 128, 'transformer': MinkowskiCurves(levels=8)}
     """
-    place = storage.as_location(path, "settings")
-    with storage.open_input(place) as stream:
+    place = locations.as_location(path, "settings")
+    with locations.open_input(place) as stream:
         try:
             found = tomllib.loads(stream.read().decode("utf-8-sig"))
         except (tomllib.TOMLDecodeError, UnicodeDecodeError) as error:

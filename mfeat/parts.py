@@ -15,7 +15,7 @@ import numpy as np
 import pyarrow as pa
 import pyarrow.parquet as pq
 
-from mfeat import __version__, stacks, storage
+from mfeat import __version__, locations, stacks, storage
 from mfeat._pages import OutOfResources, UnreadableImage
 from mfeat.cutting import BAND_PIXELS, Cut, OpenFiles, cuts
 from mfeat.entries import CARRIED, stamp_of_entry
@@ -138,7 +138,7 @@ def _write_arrow(store: Any, name: str, table: pa.Table) -> None:
 
 
 def _read_arrow(store: Any, name: str) -> pa.Table:
-    path = storage.local_path(store.location)
+    path = locations.local_path(store.location)
     if path is not None and os.name != "nt":  # mapped: workers on one machine share it
         return pa.ipc.open_file(pa.memory_map(f"{path}/{name}")).read_all()
     with store.open(name) as stream:

@@ -11,7 +11,7 @@ from typing import Any
 
 import pyarrow as pa
 
-from mfeat import storage
+from mfeat import locations
 from mfeat.entries import TRUTH, Sources, entries_table, join, with_stamps
 from mfeat.manifests import MANIFESTS, read_manifest
 
@@ -51,8 +51,8 @@ def list_sources(source: Any, *, label_from: str | None = None, leave_out: str =
     ...     list_sources(folder).entries["source"].to_pylist()
     ['scan9.tif', 'scan10.tif']
     """
-    location = storage.absolute(storage.as_location(source, "source"))
-    path = storage.local_path(location)
+    location = locations.absolute(locations.as_location(source, "source"))
+    path = locations.local_path(location)
     suffix = PurePosixPath(location).suffix.lower()
     if "::" in location and suffix not in MANIFESTS:
         raise ValueError(
@@ -60,7 +60,7 @@ def list_sources(source: Any, *, label_from: str | None = None, leave_out: str =
             "manifest"
         )
     patterned = any(mark in location for mark in "*?[")
-    if patterned and storage.exists(location):
+    if patterned and locations.exists(location):
         patterned = False  # a file may be called image[1].png
     if suffix in MANIFESTS and not patterned and not (path is not None and os.path.isdir(path)):
         found = read_manifest(location, suffix)
@@ -192,7 +192,7 @@ def _walk(folder: str, prefix: str, seen: set[str], leave_out: str) -> Iterator[
 
 
 def _list_remote(location: str, patterned: bool, leave_out: str) -> tuple[list[str], str]:
-    found, there = storage.filesystem(location)
+    found, there = locations.filesystem(location)
     protocol = location.split("://", 1)[0]
     if patterned:
         base = _fixed_part(there)
@@ -205,7 +205,7 @@ def _list_remote(location: str, patterned: bool, leave_out: str) -> tuple[list[s
         raise FileNotFoundError(f"source {location} does not exist")
     start = base.rstrip("/") + "/"
     if leave_out.startswith(f"{protocol}://"):
-        outside = storage.filesystem(leave_out)[1].rstrip("/") + "/"
+        outside = locations.filesystem(leave_out)[1].rstrip("/") + "/"
         paths = [path for path in paths if not str(path).startswith(outside)]
     names = [str(path).removeprefix(start) for path in paths if not patterned or found.isfile(path)]
     kept = [name for name in names if not any(p.startswith(".") for p in name.split("/"))]

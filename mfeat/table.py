@@ -10,7 +10,7 @@ import numpy as np
 import pyarrow as pa
 import pyarrow.parquet as pq
 
-from mfeat import storage
+from mfeat import locations, storage
 from mfeat.schema import MANIFEST, UNFINISHED, about, check_version, differences, restored
 from mfeat.transformer import MinkowskiCurves
 
@@ -112,9 +112,9 @@ def read_table(path: Any) -> FeatureTable:
     if isinstance(path, list | tuple):
         if not path:
             raise ValueError("path is an empty list; give one folder or more")
-        places = [storage.as_location(one, f"path[{k}]") for k, one in enumerate(path)]
+        places = [locations.as_location(one, f"path[{k}]") for k, one in enumerate(path)]
     else:
-        places = [storage.as_location(path, "path")]
+        places = [locations.as_location(path, "path")]
     opened = [_open_table(place) for place in places]
     first = opened[0].about
     for one in opened[1:]:
@@ -179,7 +179,7 @@ class _open_table:
                 f"{place} holds no complete feature table"
                 + (f": {why}" if unfinished else "; dump writes one")
             )
-        self._stamp = storage.stamp(f"{place}/{MANIFEST}")
+        self._stamp = locations.stamp(f"{place}/{MANIFEST}")
         with self._store.open(MANIFEST) as stream:
             manifest = json.loads(stream.read())
         check_version(manifest)
@@ -219,6 +219,6 @@ class _open_table:
                     ]
                 yield from file.iter_batches(_ROWS_AT_ONCE)
         if not self._store.exists(MANIFEST) or (
-            storage.stamp(f"{self.place}/{MANIFEST}") != self._stamp
+            locations.stamp(f"{self.place}/{MANIFEST}") != self._stamp
         ):
             raise ValueError(f"{self.place} was written anew while it was read; read it again")

@@ -25,7 +25,7 @@ import pyarrow.parquet as pq
 import pytest
 from joblib.externals.loky import reusable_executor
 
-from mfeat import MinkowskiCurves, dump, parts, planning, read_table, runs, storage
+from mfeat import MinkowskiCurves, dump, locations, parts, planning, read_table, runs, storage
 from mfeat.parts import InputChanged
 from mfeat.runs import OutputRefused
 from mfeat.storage import LocalStorage, OutputInUse, RemoteStorage, output
@@ -920,25 +920,25 @@ def test_a_folder_that_is_written_into_while_it_is_deleted(tmp_path, monkeypatch
 @pytest.mark.parametrize("wrong", [None, 3, b"x", ""])
 def test_places_are_paths_or_uris(wrong):
     with pytest.raises(TypeError, match="there must be a path or a URI; got"):
-        storage.as_location(wrong, "there")
+        locations.as_location(wrong, "there")
     with pytest.raises(ValueError, match="null character"):
-        storage.as_location("a\0b")
+        locations.as_location("a\0b")
 
 
 def test_a_stamp_changes_with_the_file(tmp_path, monkeypatch):
     path = tmp_path / "a"
     path.write_bytes(b"one")
-    first = storage.stamp(str(path))
-    assert storage.stamp(f"file://{path}") == first
+    first = locations.stamp(str(path))
+    assert locations.stamp(f"file://{path}") == first
     os.utime(path, (5, 5))
-    assert storage.stamp(str(path)) != first
+    assert locations.stamp(str(path)) != first
     with pytest.raises(FileNotFoundError):
-        storage.stamp(str(tmp_path / "b"))
+        locations.stamp(str(tmp_path / "b"))
     place = f"memory://{uuid.uuid4().hex}"
     found, root = fsspec.core.url_to_fs(place)
     found.pipe_file(root, b"one")
-    first = storage.stamp(place)
+    first = locations.stamp(place)
     assert json.dumps(first)
     found.pipe_file(root, b"two")
-    assert storage.stamp(place) != first
+    assert locations.stamp(place) != first
     found.rm(root)

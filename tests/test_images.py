@@ -23,7 +23,7 @@ import pytest
 import tifffile
 from PIL import Image
 
-from mfeat import images, storage
+from mfeat import images, locations
 from mfeat._pages import OutOfResources, UnreadableImage
 from mfeat.images import grey_rows, open_pages, read_image, scan
 
@@ -1325,13 +1325,13 @@ def test_the_limit_of_another_library_does_not_stand_beside_ours(put, monkeypatc
 
 def watched(monkeypatch):
     """Collect the files that are opened."""
-    opened, original = [], storage.open_input
+    opened, original = [], locations.open_input
 
     def open_input(location):
         opened.append(original(location))
         return opened[-1]
 
-    monkeypatch.setattr(storage, "open_input", open_input)
+    monkeypatch.setattr(locations, "open_input", open_input)
     return opened
 
 
@@ -1368,6 +1368,6 @@ def test_files_are_closed_after_a_refusal(put, monkeypatch):
 
 def test_an_open_file_would_be_noticed(put):
     location = put(b"", "left open")
-    [message] = warnings_of(lambda: storage.open_input(location) and None)
+    [message] = warnings_of(lambda: locations.open_input(location) and None)
     assert "unclosed file" in message
     assert "left open" in message
