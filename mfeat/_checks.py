@@ -304,3 +304,8 @@ def show(values: np.ndarray, limit: int = 6) -> str:
     else:
         inner = ", ".join(f"{v:.6g}" for v in values[:3]) + f", ..., {values[-1]:.6g}"
     return f"[{inner}]" + (f" ({values.size})" if values.size > limit else "")
+
+
+def number(count: int, one: str, many: str | None = None) -> str:
+    """Return a number with its noun, in the singular or plural."""
+    return f"{count} {one if count == 1 else many or one + 's'}"

@@ -91,7 +91,12 @@ def _add_dump(commands: Any) -> None:
         choices=REGIONS,
         help="a region of the manifest is one patch, or has a grid inside (default patch)",
     )
-    what.add_argument("--label-from", choices=LABELS_FROM, help="where labels come from")
+    what.add_argument(
+        "--label-from",
+        choices=LABELS_FROM,
+        help="manifest: its column label (taken anyway); folder: the name of the folder that an "
+        "image lies in; truth: images of labels",
+    )
     what.add_argument(
         "--truth-rule",
         choices=LABEL_RULES,
@@ -126,7 +131,7 @@ def _add_dump(commands: Any) -> None:
     what.add_argument(
         "--settings",
         metavar="FILE.toml",
-        help=f"a file with {', '.join(KEYS)} and a table [features]; flags go before it",
+        help=f"a file with {', '.join(KEYS)} and a table [features]; flags override it",
     )
     how = table.add_argument_group("how to run")
     how.add_argument("--jobs", type=int, metavar="N", help="workers (default: all processors)")
@@ -203,11 +208,10 @@ def _dump(options: argparse.Namespace) -> int:
         how = {name: arguments.pop(name) for name in ("jobs", "backend") if name in arguments}
         how["cluster"] = options.cluster
         if options.dry_run:
-            found = estimate(
-                options.source, dump_settings(**arguments), out=options.out or "", **how
-            )
+            settings = dump_settings(**arguments)
+            found = estimate(options.source, settings, out=options.out or "", **how)
             lines = "".join(f"# {_printable(line)}\n" for line in str(found).splitlines())
-            return f"{lines}\n{found.settings.toml()}".rstrip()
+            return f"{lines}\n{settings.toml()}".rstrip()
         summary = dump(options.source, options.out, fresh=options.fresh, **arguments, **how)
         print(f"mfeat dump: {summary}", file=sys.stderr)
         if options.strict and summary.rejects:

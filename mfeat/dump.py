@@ -24,7 +24,7 @@ class RejectsFound(RuntimeError):
     """
 
     def __init__(self, summary: "DumpSummary"):
-        super().__init__(f"{summary.rejects} rejects are listed in {REJECTS}")
+        super().__init__(f"{summary.rejects} rejects are listed in {summary.out}/{REJECTS}")
         self.summary = summary
 
 
@@ -62,7 +62,8 @@ def dump(
     out : path-like or str
         Folder of the table; new, empty, or one that an interrupted call was writing.
     transformer : MinkowskiCurves, optional
-        What to compute; default ``MinkowskiCurves()``. Patches below its `min_valid` are rejected.
+        What to compute; default ``MinkowskiCurves()``. Patches below its `min_valid` are rejected,
+        whatever its `below_min_valid` says.
         The pitch of a manifest takes the place of its `pitch`.
     size : int or (int, int), default 64
         Rows and columns of a patch.

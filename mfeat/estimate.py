@@ -12,6 +12,7 @@ import pyarrow.parquet as pq
 from joblib import Parallel
 
 from mfeat import locations
+from mfeat._checks import number
 from mfeat._pages import UnreadableImage
 from mfeat.cutting import cuts
 from mfeat.entries import CARRIED
@@ -68,15 +69,16 @@ class Estimate:
         own = ", ".join(self.columns[: len(self.columns) - self.features])
         names = self.columns[-self.features :]
         lines = [
-            f"{self.images} images with {self.patches} patches in {self.parts} parts",
+            f"{number(self.images, 'image')} with {number(self.patches, 'patch', 'patches')} in "
+            f"{number(self.parts, 'part')}",
             f"{len(self.columns)} columns: {own}; {self.features} numbers, {names[0]} to "
             f"{names[-1]}",
-            f"about {_bytes(self.size_bytes)} and {_duration(self.seconds)} with {self.workers} "
-            "workers, from a sample",
+            f"about {_bytes(self.size_bytes)} and {_duration(self.seconds)} with "
+            f"{number(self.workers, 'worker')}, from a sample",
         ]
         if self.rejects:
             total = sum(self.rejects.values())
-            lines.append(f"{total} files to be rejected by their headers:")
+            lines.append(f"{number(total, 'file')} to be rejected by their headers:")
             shown = list(self.rejects.items())[:_SHOWN_REASONS]
             lines += [f"  {count} x {reason}" for reason, count in shown]
             if len(shown) < len(self.rejects):

@@ -48,7 +48,8 @@ def read_manifest(location: str, suffix: str) -> Sources:
         twice = sorted({name for name in names if names.count(name) > 1})
         raise ValueError(f"manifest {location} has columns of the same name: {twice}")
     if "path" not in names:
-        raise ValueError(f"manifest {location} has no column path; it has {names}")
+        hint = "; separate columns with commas" if len(names) == 1 and ";" in names[0] else ""
+        raise ValueError(f"manifest {location} has no column path; it has {names}{hint}")
     base = folder_of(location)
     columns: dict[str, Any] = {name: table[name] for name in MANIFEST_COLUMNS if name in names}
     for name in ("label", "group", *_REGION):

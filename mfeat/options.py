@@ -1,5 +1,7 @@
 """What a dump does: its settings, checked, from arguments or a TOML file, and printed back."""
 
+import ast
+import contextlib
 import json
 import math
 import tomllib
@@ -214,6 +216,11 @@ def feature_value(text: str) -> tuple[str, Any]:
     except tomllib.TOMLDecodeError:
         found = {}
     single = found.get("value")
+    if not found and value.strip() in ("True", "False"):
+        single, found = value.strip() == "True", {"value": None}
+    if not found and value.strip().startswith("("):  # tuples, as the documentation writes them
+        with contextlib.suppress(ValueError, SyntaxError):
+            single, found = list(ast.literal_eval(value.strip())), {"value": None}
     if list(found) != ["value"] or (isinstance(single, float) and not math.isfinite(single)):
         return name.strip(), value.strip()  # text without quotes, such as rank or nan
     return name.strip(), single
@@ -248,7 +255,8 @@ def uniform_pitch(settings: DumpSettings, pitch: np.ndarray) -> tuple[float, flo
     if own != (1.0, 1.0) and not (same and own == tuple(pitch[0])):
         raise ValueError(
             f"the transformer has pitch {own} (rows, columns), the manifest has pitches from "
-            f"{tuple(pitch.min(axis=0))} to {tuple(pitch.max(axis=0))}; leave one of them out"
+            f"{tuple(pitch.min(axis=0).tolist())} to {tuple(pitch.max(axis=0).tolist())}; leave "
+            "one of them out"
         )
     if not same and settings.transformer.level_rule == "fitted":
         raise ValueError(

@@ -197,7 +197,14 @@ def write_part(location: str, run: str, part: int, version: str) -> PartDone:
             f"the run was planned by mfeat {version}, this worker has {__version__}; install the "
             "same version on every machine"
         )
-    return _PartRun(load_run(location, run), part).write()
+    try:
+        planned = load_run(location, run)
+    except FileNotFoundError:
+        raise RuntimeError(
+            f"a worker cannot see {location}: workers need storage that all of them reach (one of "
+            "memory:// is seen by its own process only)"
+        ) from None
+    return _PartRun(planned, part).write()
 
 
 class _PartRun:

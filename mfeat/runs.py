@@ -10,6 +10,7 @@ import logging
 import re
 import time
 import uuid
+from collections import Counter
 from collections.abc import Callable, Iterator
 from concurrent.futures.process import BrokenProcessPool
 from dataclasses import dataclass, field
@@ -21,6 +22,7 @@ from joblib import Parallel, delayed
 from tqdm import tqdm
 
 from mfeat import __version__, storage
+from mfeat._checks import number
 from mfeat.entries import Sources, changed_inputs
 from mfeat.options import DumpSettings
 from mfeat.parts import (
@@ -53,6 +55,9 @@ WHERE = ["location", "mask_location", "truth_location"]
 
 _log = logging.getLogger("mfeat")
 
+# Reasons of rejects that a summary shows, and of those that it counts: many name a position.
+_SHOWN, _KNOWN_REASONS = 5, 1000
+
 
 @dataclass(frozen=True)
 class DumpSummary:
@@ -68,8 +73,10 @@ class DumpSummary:
         Files of the table.
     rejects, rejected_images : int
         Rows of ``rejects.parquet``, and how many of them are whole images.
+    reasons : list of (str, int, str)
+        The most frequent reasons of rejects, how often each stands there, and one source.
     notes : dict of str to int
-        Remarks on images, and how many images each concerns.
+        Remarks on images (pages of files), and how many each concerns.
     fingerprint : str
         Of the settings.
     kept_parts : int
@@ -85,6 +92,7 @@ class DumpSummary:
     parts: int
     rejects: int
     rejected_images: int
+    reasons: list[tuple[str, int, str]]
     notes: dict[str, int]
     fingerprint: str
     kept_parts: int = 0
@@ -92,26 +100,25 @@ class DumpSummary:
 
     def __str__(self) -> str:
         lines = [
-            f"{_number(self.patches, 'patch', 'patches')} of {_number(self.images, 'image')}, "
-            f"{_number(self.features, 'number')} each, in {_number(self.parts, 'part')}: {self.out}"
+            f"{number(self.patches, 'patch', 'patches')} of {number(self.images, 'image')}, "
+            f"{number(self.features, 'number')} each, in {number(self.parts, 'part')}: {self.out}"
         ]
         if not self.seconds:
             lines.append("the table was complete already; nothing was done")
         else:
             lines[0] += f", {self.seconds:.1f} s"
         if self.seconds and self.kept_parts:
-            lines.append(f"{_number(self.kept_parts, 'part')} kept from an interrupted run")
+            lines.append(f"{number(self.kept_parts, 'part')} kept from an interrupted run")
         if self.rejects:
             lines.append(
-                f"{_number(self.rejects, 'reject')} ({_number(self.rejected_images, 'whole image')}"
-                f") listed with reasons in {REJECTS}"
+                f"{number(self.rejects, 'reject')} ({number(self.rejected_images, 'whole image')}"
+                f") listed with reasons in {REJECTS}:"
             )
+            lines += [f"  {count} x {why}, e.g. {where}" for why, count, where in self.reasons]
+        if not self.patches:
+            lines.append("the table has no row")
         notes = sorted(self.notes.items())
-        return "\n".join(lines + [f"{_number(count, 'image')}: {note}" for note, count in notes])
-
-
-def _number(count: int, one: str, many: str | None = None) -> str:
-    return f"{count} {one if count == 1 else many or one + 's'}"
+        return "\n".join(lines + [f"{number(count, 'image')}: {note}" for note, count in notes])
 
 
 def check_output(store: Any) -> None:
@@ -298,6 +305,8 @@ class TableRun:
         folder, planned = run_folder(run), load_run(self._place, run)
         count = planned.n_parts
         total = images = 0
+        reasons: Counter[str] = Counter()
+        examples: dict[str, str] = {}
         names = set(self._store.names(folder))
         with (
             self._store.writing(f"{folder}/{REJECTS}") as stream,
@@ -311,6 +320,11 @@ class TableRun:
                 writer.write_table(table)
                 total += len(table)
                 images += table["row"].null_count
+                for source, reason in zip(table["source"], table["reason"], strict=True):
+                    if len(examples) < _KNOWN_REASONS or reason.as_py() in examples:
+                        reasons[reason.as_py()] += 1
+                        examples.setdefault(reason.as_py(), source.as_py())
+        common = [[why, count, examples[why]] for why, count in reasons.most_common(_SHOWN)]
         parts = [
             {"name": part_name(k), "rows": self._rows_of(f"{folder}/{part_name(k)}")}
             for k in range(count)
@@ -324,7 +338,7 @@ class TableRun:
             "rows": sum(part["rows"] for part in parts),
             "features": len(made["features"]),
             "images": planned.entries.num_rows,
-            "rejects": {"all": total, "images": images},
+            "rejects": {"all": total, "images": images, "reasons": common},
             "notes": planned.notes,
             "parts": parts,
             "record": self._record,
@@ -344,6 +358,7 @@ class TableRun:
             parts=len(manifest["parts"]),
             rejects=manifest["rejects"]["all"],
             rejected_images=manifest["rejects"]["images"],
+            reasons=[tuple(one) for one in manifest["rejects"]["reasons"]],
             notes=manifest["notes"],
             fingerprint=manifest["fingerprint"],
             kept_parts=kept_parts,

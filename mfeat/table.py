@@ -55,6 +55,13 @@ class FeatureTable:
     def __len__(self) -> int:
         return len(self.X)
 
+    def __repr__(self) -> str:
+        labels = "no" if self.y is None else len(set(self.y) - {None})
+        return (
+            f"FeatureTable({len(self)} patches, {len(self.names)} numbers, {labels} labels, "
+            f"{len(set(self.groups))} groups, {self.fingerprint[:12]})"
+        )
+
     def labelled(self) -> "FeatureTable":
         """Return the rows that have a label."""
         if self.y is None:

@@ -48,11 +48,19 @@ def _dask_client(address: str) -> Any:
         from dask.distributed import Client
     except ImportError:
         raise ImportError(
-            "a cluster needs Dask: python -m pip install 'mfeat[cluster]', here and on every worker"
+            "a cluster needs Dask: python -m pip install dask distributed, here and on every worker"
         ) from None
     if not isinstance(address, str) or not address:
         raise TypeError(f"cluster must be the address of a Dask scheduler; got {address!r}")
     try:
-        return Client(address, timeout=20, set_as_default=True)
+        client = Client(address, timeout=20, set_as_default=True)
     except (OSError, ValueError, TimeoutError) as error:
         raise ValueError(f"no Dask scheduler answers at {address}: {error}") from None
+    try:
+        client.wait_for_workers(1, timeout=10)
+    except TimeoutError:
+        client.close()
+        raise ValueError(
+            f"the scheduler at {address} has no worker; start some with: dask worker {address}"
+        ) from None
+    return client

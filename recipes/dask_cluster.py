@@ -4,7 +4,7 @@ On machines of your own, start `dask scheduler` on one and `dask worker ADDRESS`
 them see the same files under the same path, and give the address to `dump` or `mfeat dump
 --cluster`. Workers read images and write parts themselves; the client only hears which part is
 done. This recipe writes one table with a cluster, one with a single worker, and compares their
-numbers bit for bit.
+numbers bit for bit. Dask comes with `pip install '.[cluster]'` in a clone.
 """
 
 import argparse

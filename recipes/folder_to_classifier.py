@@ -3,7 +3,7 @@
 Without arguments, simulated coated panels are written and used; give a folder with one subfolder a
 class, or a manifest with labels, to use images of your own:
 
-    python recipes/folder_to_classifier.py path/to/images --label-from folder
+    python recipes/folder_to_classifier.py path/to/images --label-from folder --out out/mine
 """
 
 import argparse
@@ -31,7 +31,10 @@ def main(argv: list[str] | None = None) -> float:
     parser.add_argument("--size", type=int, default=128, help="side of a patch in pixels")
     parser.add_argument("--stride", type=int, default=64, help="step from patch to patch")
     parser.add_argument("--folds", type=int, default=5)
+    parser.add_argument("--fresh", action="store_true", help="in place of a table that is there")
     options = parser.parse_args(argv)
+    if options.source and not options.label_from and Path(options.source).is_dir():
+        parser.error("images of a folder need --label-from folder")
 
     source, label_from = options.source, options.label_from
     if source is None:
@@ -59,6 +62,7 @@ def main(argv: list[str] | None = None) -> float:
         stride=options.stride,
         label_from=label_from,
         truth_rule="any",
+        fresh=options.fresh,
     )
     print(summary)
 

@@ -141,8 +141,10 @@ def test_streams_of_a_process_hold_no_progress_bar(scans, table):
     assert lines[0].startswith("mfeat: ")
     assert "holds manifest.csv; give that file to use it as the manifest" in lines[0]
     assert lines[1].startswith("mfeat dump: 12 patches of 4 images")
-    assert len(lines) == 3  # the last one tells of the reject
+    assert len(lines) == 4  # the last two tell of the reject
     assert "1 reject" in lines[2]
+    assert lines[3].startswith("  1 x not an image")
+    assert lines[3].endswith("e.g. manifest.csv")
     assert b"\r" not in err.replace(os.linesep.encode(), b"")
     assert b"patch/s" not in err
 
@@ -205,7 +207,7 @@ def test_strict_without_rejects_is_done(scans, table, run):
         (["--set", "levels=many"], "levels must be a sequence of numbers; got 'many'"),
         (["--set", "levels=0"], "levels must be >= 1 and <= 65535; got 0"),
         (["--set", "smooth=1,2"], "smooth must be a tuple of Gaussian scales, () for none; got "),
-        (["--set", "raw=True"], "'raw' parameter of MinkowskiCurves must be an instance of 'bool'"),
+        (["--set", "raw=yes"], "'raw' parameter of MinkowskiCurves must be an instance of 'bool'"),
         (["--set", "level_rule=fitted"], "learns its levels from training patches: call fit"),
         (["--set", 'channels=["a"]'], "transformer has channels, but dump reads one channel"),
         (["--set", "smooth=[40]"], "field smooth_40: its widest Gaussian has a standard deviation"),
@@ -468,10 +470,10 @@ def test_a_table_can_be_made_of_the_printed_settings(scans, tmp_path, run):
     assert run(scans, "--out", tmp_path / "flags", "--settings", printed)[0] == 0  # complete
 
 
-def test_a_dry_run_takes_the_pitch_of_the_manifest(scans, run):
+def test_a_dry_run_prints_the_pitch_that_was_given_not_that_of_the_manifest(scans, run):
     (scans / "list.csv").write_text("path,pitch_x,pitch_y,unit\nnoise0.npy,2,0.5,um\n")
     out = run(scans / "list.csv", "--dry-run", *SHORT)[1]
-    assert tomllib.loads(out)["features"]["pitch"] == [0.5, 2.0]
+    assert tomllib.loads(out)["features"]["pitch"] == 1.0  # good for other manifests
 
 
 def test_names_of_columns_do_not_break_the_printed_settings(scans, run):

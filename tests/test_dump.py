@@ -547,7 +547,7 @@ def test_what_cannot_be_used_is_said_before_anything_is_written(options, error, 
 def test_without_dask_it_is_said_what_to_install(tmp_path, monkeypatch):
     np.save(tmp_path / "a.npy", grey())
     monkeypatch.setitem(sys.modules, "dask.distributed", None)
-    with pytest.raises(ImportError, match=r"pip install 'mfeat\[cluster\]'"):
+    with pytest.raises(ImportError, match="pip install dask distributed"):
         dump(tmp_path / "a.npy", tmp_path / "out", FEW, cluster="tcp://127.0.0.1:1")
 
 
@@ -646,7 +646,7 @@ def test_every_file_is_in_the_table_or_in_the_rejects(kinds, tmp_path):
 def test_strict_raises_after_the_table_is_complete(tmp_path):
     np.save(tmp_path / "a.npy", grey())
     (tmp_path / "b.png").write_bytes(b"")
-    with pytest.raises(RejectsFound, match=r"1 rejects are listed in rejects\.parquet") as caught:
+    with pytest.raises(RejectsFound, match=r"1 rejects are listed in .*rejects\.parquet") as caught:
         dumped(tmp_path, tmp_path / "out", strict=True)
     assert caught.value.summary.rejects == 1
     assert len(read_table(tmp_path / "out")) == 6

@@ -12,7 +12,7 @@ import pytest
 import tifffile
 from PIL import Image
 
-from mfeat import MinkowskiCurves, cutting, dump, parts, read_table
+from mfeat import MinkowskiCurves, __version__, cutting, dump, parts, read_table
 from mfeat.images import read_image
 from mfeat.runs import OutputRefused
 from mfeat.sources import list_sources
@@ -218,3 +218,41 @@ def test_uris_of_local_files_may_be_escaped(tmp_path):
 def test_chained_uris_are_refused_with_a_way_out():
     with pytest.raises(ValueError, match=r"chained URI, .* name its files in a manifest"):
         list_sources("zip://*.npy::file:///tmp/x.zip")
+
+
+def test_the_summary_names_the_most_frequent_reasons(tmp_path):
+    for name in ("x.png", "y.png", "z.png"):
+        (tmp_path / name).write_bytes(b"")
+    (tmp_path / "text.png").write_text("hello")
+    summary = dumped(tmp_path, tmp_path / "out")
+    assert summary.reasons[0] == ("empty file", 3, "x.png")
+    assert summary.reasons[1][1:] == (1, "text.png")
+    assert "3 x empty file, e.g. x.png" in str(summary)
+    assert "the table has no row" in str(summary)
+    again = dumped(tmp_path, tmp_path / "out")
+    assert again.reasons == summary.reasons
+
+
+def test_a_worker_that_cannot_see_the_output_says_so(tmp_path):
+    with pytest.raises(RuntimeError, match="a worker cannot see .*storage that all of them reach"):
+        parts.write_part(str(tmp_path / "elsewhere"), "0" * 12, 0, __version__)
+
+
+def test_manifests_with_semicolons_are_told_apart(tmp_path):
+    (tmp_path / "m.csv").write_text("path;label\na.npy;x\n")
+    with pytest.raises(ValueError, match="no column path; .*separate columns with commas"):
+        list_sources(tmp_path / "m.csv")
+
+
+def test_a_scheduler_without_workers_is_told(tmp_path, monkeypatch):
+    distributed = pytest.importorskip("dask.distributed")
+    np.save(tmp_path / "a.npy", noise(16, 16))
+    wait = distributed.Client.wait_for_workers
+    monkeypatch.setattr(
+        distributed.Client, "wait_for_workers", lambda self, n, timeout: wait(self, n, timeout=0.2)
+    )
+    with (
+        distributed.LocalCluster(n_workers=0, processes=False, dashboard_address=None) as cluster,
+        pytest.raises(ValueError, match="has no worker; start some with: dask worker"),
+    ):
+        dumped(tmp_path / "a.npy", tmp_path / "out", cluster=cluster.scheduler_address)

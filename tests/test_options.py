@@ -328,7 +328,10 @@ def test_files_that_hold_no_settings_are_refused(tmp_path):
         ("level_rule='rank'", ("level_rule", "rank")),
         ("contour_estimator=crofton-4", ("contour_estimator", "crofton-4")),
         ("levels={raw = 4, slope = [1, 2]}", ("levels", {"raw": 4, "slope": [1, 2]})),
-        ("smooth=(1, 2)", ("smooth", "(1, 2)")),  # the transformer will say what is wrong
+        ("smooth=(1, 2)", ("smooth", [1, 2])),
+        ("band=()", ("band", [])),
+        ("raw=False", ("raw", False)),
+        ("smooth=(1, 2", ("smooth", "(1, 2")),  # the transformer will say what is wrong
         ("levels=a=b", ("levels", "a=b")),
         ("below_min_valid=nan", ("below_min_valid", "nan")),  # no parameter may be NaN
     ],

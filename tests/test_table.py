@@ -72,6 +72,13 @@ def vectors():
 # What a table holds -------------------------------------------------------------------------
 
 
+def test_a_table_shows_itself_in_one_line(made):
+    table = read_table(made)
+    shown = f"FeatureTable({len(table)} patches, {len(table.names)} numbers, 2 labels, 2 groups, "
+    assert repr(table) == f"{shown}{table.fingerprint[:12]})"
+    assert "no labels" in repr(FeatureTable(**vars(table) | {"y": None}))
+
+
 def test_a_table_is_what_scikit_learn_takes(made, vectors):
     table = read_table(made)
     assert isinstance(table, FeatureTable)
