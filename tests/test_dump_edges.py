@@ -234,13 +234,13 @@ def test_the_summary_names_the_most_frequent_reasons(tmp_path):
 
 
 def test_a_worker_that_cannot_see_the_output_says_so(tmp_path):
-    with pytest.raises(RuntimeError, match="a worker cannot see .*storage that all of them reach"):
+    with pytest.raises(RuntimeError, match="workers need storage that all of them"):
         parts.write_part(str(tmp_path / "elsewhere"), "0" * 12, 0, __version__)
 
 
 def test_manifests_with_semicolons_are_told_apart(tmp_path):
     (tmp_path / "m.csv").write_text("path;label\na.npy;x\n")
-    with pytest.raises(ValueError, match="no column path; .*separate columns with commas"):
+    with pytest.raises(ValueError, match="separate columns with commas"):
         list_sources(tmp_path / "m.csv")
 
 
