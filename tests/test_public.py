@@ -10,7 +10,17 @@ from pathlib import Path
 import pytest
 
 import mfeat
-from mfeat import demo, estimate, functionals, images, levels, patches, sources, surfaces
+from mfeat import (
+    demo,
+    descriptors,
+    estimate,
+    functionals,
+    images,
+    levels,
+    patches,
+    sources,
+    surfaces,
+)
 
 ROOT = Path(__file__).parents[1]
 PACKAGE = ROOT / "mfeat"
@@ -35,6 +45,7 @@ DOCUMENTED = [
     images.read_image,
     sources.list_sources,
     estimate.estimate,
+    *descriptors.DESCRIPTORS.values(),
 ]
 
 
@@ -117,6 +128,17 @@ LAYERS = {
     "stacks": {"_checks", "_kernels"},
     "vector": {
         *["_checks", "_kernels", "counts", "fields", "functionals", "levels", "plan", "stacks"]
+    },
+    "_descriptor_base": {"_checks", "stacks"},
+    "_filters": set(),
+    "_haralick": set(),
+    "_descriptors_grey": {"_checks", "_descriptor_base", "_haralick"},
+    "_descriptors_filters": {"_descriptor_base", "_filters"},
+    "_descriptors_local": {"_checks", "_descriptor_base", "_filters"},
+    "_descriptors_spectral": {"_checks", "_descriptor_base", "_filters"},
+    "descriptors": {
+        *["_descriptor_base", "_descriptors_filters", "_descriptors_grey", "_descriptors_local"],
+        "_descriptors_spectral",
     },
     "curves": {"_checks", "counts", "fields", "functionals", "levels"},
     "transformer": {"fields", "functionals", "levels", "plan", "settings", "stacks", "vector"},
