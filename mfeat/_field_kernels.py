@@ -78,6 +78,56 @@ def smooth_stack(images, row_weights, column_weights, padded, half, out):
 
 
 @kernel
+def write_weights(sigma, weights):
+    """Write half of the sampled Gaussian kernel, centre first; returns how many weights it has.
+
+    The kernel reaches four standard deviations, and with its mirror image sums to 1.
+    """
+    count = int(4.0 * sigma + 0.5) + 1
+    total = 0.0
+    for k in range(count):
+        weights[k] = np.exp(-0.5 * (k / sigma) ** 2) if k > 0 else 1.0
+        total += weights[k] if k == 0 else 2.0 * weights[k]
+    for k in range(count):
+        weights[k] /= total
+    return count
+
+
+@kernel
+def smooth_each(images, row_sigmas, column_sigmas, weights, padded, half, out):
+    """Smooth each image of a stack (n, h, w) by a Gaussian of its own; 0 leaves it as it is.
+
+    `weights` is scratch for the widest kernel, `padded` for a row with it on both sides.
+    """
+    for k in range(len(images)):
+        if row_sigmas[k] == 0.0:
+            out[k] = images[k]
+            continue
+        count = write_weights(row_sigmas[k], weights)
+        smooth_rows(images[k], weights[:count], padded, half)
+        count = write_weights(column_sigmas[k], weights)
+        smooth_columns(half, weights[:count], out[k])
+
+
+@kernel
+def contrast_stack(images, means, squares, valid, floors):
+    """Turn images (n, h, w) into (image - mean) / deviation, by the local moments of each pixel.
+
+    `means` and `squares` are smoothed images and smoothed squares; `floors` (n) are variances that
+    are added, so that quiet places are not blown up. Zero where a pixel is missing or the floor is.
+    """
+    for k in range(len(images)):
+        for i in range(images.shape[1]):
+            for j in range(images.shape[2]):
+                if valid[k, i, j] and floors[k] > 0.0:
+                    mean = means[k, i, j]
+                    variance = max(squares[k, i, j] - mean * mean, 0.0) + floors[k]
+                    images[k, i, j] = (images[k, i, j] - mean) / np.sqrt(variance)
+                else:
+                    images[k, i, j] = 0.0
+
+
+@kernel
 def normalise_stack(smoothed, support, valid):
     """Divide smoothed values by the smoothed map of valid pixels; zero where a pixel is missing.
 

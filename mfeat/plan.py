@@ -12,14 +12,20 @@ from typing import Any, NamedTuple
 
 import numpy as np
 
+from mfeat.basis import TERMS
 from mfeat.fields import Field
-from mfeat.functionals import FUNCTIONALS
 
 #: Raised whenever the same settings would give other numbers or names than before.
-VECTOR_VERSION = 1
+VECTOR_VERSION = 2
 
 #: The four directed crossing densities, in the order of the vector.
 DIRECTIONS = ("horizontal", "vertical", "falling", "rising")
+
+#: Functionals that have one value a level, in the order of the vector; directed ones come after.
+VECTOR_FUNCTIONALS = tuple(TERMS)
+
+#: How curves enter the vector: their values at levels, or their products with Hermite functions.
+BASES = ("levels", "hermite")
 
 #: Families whose mean is a feature under `location_scale`: smoothing keeps the mean of the raw
 #: field, and bands and curvature have means near zero.
@@ -32,17 +38,21 @@ class Feature(NamedTuple):
     Attributes
     ----------
     name : str
-        Column name, e.g. "smooth_2_contour_07".
+        Column name, e.g. "smooth_2_contour_07", or "smooth_2.5_contour_h0".
     field : str
-        Family: "raw", "smooth", "band", "slope" or "curvature".
+        Family: "raw", "smooth", "band", "slope", "curvature" or "contrast".
     scale : float
-        Gaussian scale of the field; 0 for none.
+        Scale of the field; 0 for none.
     functional : str
-        "area", "contour", "euler", "crossings_..." or, without levels, "mean" or "std".
+        "area", "contour", "euler", "anisotropy", "crossings_..." or, without levels, "mean", "std",
+        "log_std", "log_length" or "log_sigma".
     level : float or None
-        The level in the units of the level rule; None for "mean" and "std".
+        The level in the units of the level rule; None without levels, and for Hermite functions.
     unit : str
-        Dimension in terms of the image's values (v) and the unit of the pitch (l).
+        Dimension in terms of the image's values (v) and the unit of the pitch (l); "1" for pure
+        numbers and logarithms.
+    term : int or None
+        The number of the Hermite function, under basis "hermite".
     """
 
     name: str
@@ -51,10 +61,15 @@ class Feature(NamedTuple):
     functional: str
     level: float | None
     unit: str
+    term: int | None = None
 
 
-_UNITS = {"area": "1", "contour": "1/l", "euler": "1/l^2"}
-_VALUE_UNITS = {"raw": "v", "smooth": "v", "band": "v", "slope": "v/l", "curvature": "v/l^2"}
+#: Powers of a length that functionals are divided by, for their units and for separating scale.
+LENGTH_POWERS = {"area": 0, "contour": 1, "euler": 2, "anisotropy": 1}
+_UNITS = ("1", "1/l", "1/l^2")
+_VALUE_UNITS = {
+    "raw": "v", "smooth": "v", "band": "v", "slope": "v/l", "curvature": "v/l^2", "contrast": "1",
+}  # fmt: skip
 
 
 @dataclass(frozen=True, eq=False)
@@ -69,12 +84,16 @@ class VectorPlan:
     functionals: tuple[str, ...]
     level_rule: str
     level_values: dict[str, np.ndarray]
-    location_scale: bool
+    location_scale: bool | str
+    separate_scale: bool
+    basis: str
+    terms: dict[str, int]
     directional: bool
     connectivity: Any
     contour_estimator: str
     pitch: tuple[float, float]
     scale_unit: str
+    scale_rule: str
     remove_tilt: bool
     dtype: np.dtype
     channels: tuple[str, ...] | None = None
@@ -82,14 +101,38 @@ class VectorPlan:
 
     def level_functionals(self) -> tuple[str, ...]:
         """Return the functionals that have one value a level, in the order of the vector."""
-        ordered = tuple(name for name in FUNCTIONALS if name in self.functionals)
+        ordered = tuple(name for name in VECTOR_FUNCTIONALS if name in self.functionals)
         return ordered + (tuple(f"crossings_{d}" for d in DIRECTIONS) if self.directional else ())
 
     def moments(self, field: Field) -> tuple[str, ...]:
         """Return the moments of a field that are features."""
-        if not self.location_scale:
+        if self.location_scale is False:
             return ()
-        return ("mean", "std") if field.family in _LOCATED else ("std",)
+        if not self.separate_scale:
+            return ("mean", "std") if field.family in _LOCATED else ("std",)
+        matched = self.scale_rule == "matched" and field.scale > 0.0
+        found = []
+        if not (field == self.reference and self.location_scale == "ratio"):
+            found.append("log_std")
+        if not (matched and field.family == "smooth"):  # has the length that its scale names
+            found.append("log_length")
+        if matched and field == self._first_at(field.scale):
+            found.append("log_sigma")
+        return tuple(found)
+
+    @cached_property
+    def reference(self) -> Field | None:
+        """The field whose deviation those of the others are divided by: the first with a unit."""
+        return next((field for field in self.fields if field.family != "contrast"), None)
+
+    def _first_at(self, scale: float) -> Field:
+        return next(field for field in self.fields if field.scale == scale)
+
+    def numbers(self, functional: str, field: Field) -> int:
+        """Return how many numbers a functional of a field has."""
+        if self.basis == "hermite":
+            return self.terms[functional]
+        return len(self.level_values[field.name])
 
     def levels_of(self, field: Field, channel: str | None) -> np.ndarray:
         """Return the levels to place on a field of a channel: learned ones where there are some."""
@@ -105,41 +148,47 @@ class VectorPlan:
     @cached_property
     def columns(self) -> dict[Field, int]:
         """Where the numbers of each field start."""
-        per_level = len(self.level_functionals())
         found, column = {}, 0
         for field in self.fields:
             found[field] = column
-            count = len(self.level_values[field.name])
-            column += len(self.moments(field)) + per_level * count
+            column += self._width(field)
         return found
 
     @cached_property
     def length(self) -> int:
         """How many numbers the vector of one channel has."""
-        per_level = len(self.level_functionals())
-        return sum(
-            len(self.moments(field)) + per_level * len(self.level_values[field.name])
-            for field in self.fields
-        )
+        return sum(map(self._width, self.fields))
+
+    def _width(self, field: Field) -> int:
+        own = sum(self.numbers(functional, field) for functional in self.level_functionals())
+        return len(self.moments(field)) + own
 
     def features(self) -> list[Feature]:
         """Return one entry a number of the vector of one channel, in order."""
         found = []
         for field in self.fields:
             prefix = field.name
-            unit = _VALUE_UNITS[field.family]
             for moment in self.moments(field):
+                unit = "1" if moment.startswith("log") else _VALUE_UNITS[field.family]
                 name = f"{prefix}_{moment}"
                 found.append(Feature(name, field.family, field.scale, moment, None, unit))
-            levels = self.level_values[prefix]
-            digits = max(2, len(str(len(levels) - 1)))
+            levels = self.level_values[prefix].tolist()
             for functional in self.level_functionals():
-                for k, level in enumerate(levels):
-                    name = f"{prefix}_{functional}_{k:0{digits}d}"
-                    unit_of = _UNITS.get(functional, "1/l")
-                    found.append(
-                        Feature(name, field.family, field.scale, functional, float(level), unit_of)
-                    )
+                unit = "1" if self.separate_scale else _UNITS[LENGTH_POWERS.get(functional, 1)]
+                own = (field.family, field.scale, functional)
+                count = self.numbers(functional, field)
+                digits = len(str(count - 1))
+                if self.basis == "hermite":
+                    found += [
+                        Feature(f"{prefix}_{functional}_h{k:0{digits}d}", *own, None, unit, k)
+                        for k in range(count)
+                    ]
+                else:
+                    digits = max(2, digits)
+                    found += [
+                        Feature(f"{prefix}_{functional}_{k:0{digits}d}", *own, level, unit)
+                        for k, level in enumerate(levels)
+                    ]
         return found
 
     def all_features(self) -> list[Feature]:
@@ -161,10 +210,14 @@ class VectorPlan:
             "level_rule": self.level_rule,
             "levels": {name: values.tolist() for name, values in self.level_values.items()},
             "location_scale": self.location_scale,
+            "separate_scale": self.separate_scale,
+            "basis": self.basis,
+            "terms": dict(self.terms) if self.basis == "hermite" else None,
             "connectivity": self.connectivity,
             "contour_estimator": self.contour_estimator,
             "pitch": list(self.pitch),
             "scale_unit": self.scale_unit,
+            "scale_rule": self.scale_rule,
             "remove_tilt": self.remove_tilt,
             "dtype": str(self.dtype),
             "channels": None if self.channels is None else list(self.channels),

@@ -286,7 +286,7 @@ def _item(
         )
         return _rejected(entry, reason, about, info), False
     try:
-        check_scales(plan.fields, size, plan.pitch, plan.scale_unit)
+        check_scales(plan.fields, size, plan.pitch, plan.scale_unit, plan.scale_rule)
         starts = None if single else settings.grid.starts(region[2:])
     except ValueError as error:
         return _rejected(entry, f"{page}{error}", about, info), False
@@ -302,7 +302,7 @@ def _check_grid(sources: Sources, settings: DumpSettings) -> None:
     entries = sources.entries
     if settings.regions == "grid" or entries["row"].null_count:
         plan = settings.transformer._plan()
-        check_scales(plan.fields, settings.grid.size, plan.pitch, plan.scale_unit)
+        check_scales(plan.fields, settings.grid.size, plan.pitch, plan.scale_unit, plan.scale_rule)
 
 
 def _in_parts(items: list[tuple[Item, bool]], settings: DumpSettings, sources: Sources) -> pa.Table:

@@ -7,10 +7,11 @@ from typing import Any
 import numpy as np
 
 from mfeat import _checks
+from mfeat.basis import LEVEL_RANGE, MAX_TERMS, TERMS
 from mfeat.fields import FAMILIES, Field, scales
-from mfeat.functionals import CONNECTIVITIES, FUNCTIONALS
+from mfeat.functionals import CONNECTIVITIES
 from mfeat.levels import level_values
-from mfeat.plan import VectorPlan, learned_key
+from mfeat.plan import DIRECTIONS, VECTOR_FUNCTIONALS, VectorPlan, learned_key
 
 # Plans by their parameters: checking and resolving them again for each patch of a stream would
 # cost more than the patch.
@@ -47,7 +48,7 @@ def with_learned(
 
     Fields may be left out after `fit`; levels, pitch and new fields need another `fit`.
     """
-    for name in ("pitch", "scale_unit", "remove_tilt", "channels"):
+    for name in ("pitch", "scale_unit", "scale_rule", "remove_tilt", "channels"):
         if getattr(plan, name) != getattr(fitted, name):
             raise ValueError(
                 f"parameters were changed after fit: {name} was {getattr(fitted, name)!r} when the "
@@ -84,29 +85,36 @@ def _resolve(estimator: Any) -> VectorPlan:
     _check_jobs(estimator.n_jobs)
     fields = _fields(estimator)
     families = dict.fromkeys(field.family for field in fields)
+    terms = _terms(estimator)
     if isinstance(estimator.levels, dict) or isinstance(estimator.level_range, dict):
         per_family = {
             family: level_values(
                 _of_family("levels", estimator.levels, family),
                 estimator.level_rule,
-                _range_of_family(estimator, family),
+                _range(estimator, _range_of_family(estimator, family)),
             )
             for family in families
         }
     else:  # one array for all, by which `vector` knows that they are alike
-        shared = level_values(estimator.levels, estimator.level_rule, estimator.level_range)
+        shared = level_values(
+            estimator.levels, estimator.level_rule, _range(estimator, estimator.level_range)
+        )
         per_family = dict.fromkeys(families, shared)
     plan = VectorPlan(
         fields=fields,
         functionals=_functionals(estimator.functionals),
         level_rule=estimator.level_rule,
         level_values={field.name: per_family[field.family] for field in fields},
-        location_scale=bool(estimator.location_scale),
+        location_scale=_location_scale(estimator),
+        separate_scale=bool(estimator.separate_scale),
+        basis=estimator.basis,
+        terms=terms,
         directional=bool(estimator.directional),
         connectivity=_checks.choice("connectivity", estimator.connectivity, CONNECTIVITIES),
         contour_estimator=estimator.contour_estimator,
         pitch=_checks.pitch(estimator.pitch),
         scale_unit=estimator.scale_unit,
+        scale_rule=estimator.scale_rule,
         remove_tilt=bool(estimator.remove_tilt),
         dtype=np.dtype(estimator.dtype),
         channels=_channels(estimator.channels),
@@ -119,6 +127,49 @@ def _resolve(estimator: Any) -> VectorPlan:
     return plan
 
 
+def _location_scale(estimator: Any) -> bool | str:
+    if isinstance(estimator.location_scale, str) and not estimator.separate_scale:
+        raise ValueError(
+            'location_scale="ratio" takes ratios of scales, which separate_scale=True separates; '
+            "set that, or location_scale to True or False"
+        )
+    given = estimator.location_scale
+    return given if isinstance(given, str) else bool(given)
+
+
+def _terms(estimator: Any) -> dict[str, int]:
+    """Return the number of Hermite functions by functional; directed crossings follow contour."""
+    if estimator.basis == "hermite" and estimator.level_rule != "standard":
+        raise ValueError(
+            f'basis "hermite" needs level_rule "standard", which places levels as its functions '
+            f'are; got {estimator.level_rule!r}. Use basis="levels" with other rules'
+        )
+    given = estimator.terms
+    if isinstance(given, dict):
+        unknown = [name for name in given if name not in TERMS]
+        if unknown:
+            raise ValueError(f"terms has entries {unknown}; functionals are {', '.join(TERMS)}")
+        own = TERMS | given
+    else:
+        own = TERMS if given is None else dict.fromkeys(TERMS, given)
+    found = {
+        name: _checks.integer(f"terms[{name!r}]", count, minimum=1, maximum=MAX_TERMS)
+        for name, count in own.items()
+    }
+    return found | {f"crossings_{direction}": found["contour"] for direction in DIRECTIONS}
+
+
+def _range(estimator: Any, given: Any) -> Any:
+    """Return a range of levels; Hermite functions need a wider one where none is given."""
+    if given is None and estimator.basis == "hermite" and _is_number(estimator.levels):
+        return LEVEL_RANGE
+    return given
+
+
+def _is_number(levels: Any) -> bool:
+    return isinstance(levels, int | np.integer | float | np.floating)
+
+
 def _check_jobs(n_jobs: Any) -> None:
     if n_jobs is None:
         return
@@ -129,19 +180,19 @@ def _check_jobs(n_jobs: Any) -> None:
 def _fields(estimator: Any) -> tuple[Field, ...]:
     fields = [Field("raw")] if estimator.raw else []
     for family in FAMILIES[1:]:
-        zero = family in ("slope", "curvature")
+        zero = family in ("slope", "curvature")  # differences need no smoothing
         given = scales(family, getattr(estimator, family), zero=zero)
         fields += [Field(family, scale) for scale in given]
     if not fields:
         raise ValueError(
-            "no field is left: raw is False and smooth, band, slope and curvature are (); "
+            "no field is left: raw is False and smooth, band, slope, curvature and contrast are (); "
             "give at least one"
         )
     return tuple(fields)
 
 
 def _functionals(given: Any) -> tuple[str, ...]:
-    names = tuple(_checks.choice("functionals", name, FUNCTIONALS) for name in given)
+    names = tuple(_checks.choice("functionals", name, VECTOR_FUNCTIONALS) for name in given)
     if len(set(names)) < len(names):
         raise ValueError(f"functionals holds a name twice: {names!r}")
     return names

@@ -11,10 +11,17 @@ from sklearn.exceptions import NotFittedError
 from sklearn.utils._param_validation import Options, StrOptions
 
 from mfeat import stacks
-from mfeat.fields import SCALE_UNITS
+from mfeat.fields import SCALE_RULES, SCALE_UNITS
 from mfeat.functionals import CONTOUR_ESTIMATORS, FUNCTIONALS
 from mfeat.levels import RULES, pooled_levels
-from mfeat.plan import Feature, VectorPlan, canonical_sha256, learned_key
+from mfeat.plan import (
+    BASES,
+    VECTOR_FUNCTIONALS,
+    Feature,
+    VectorPlan,
+    canonical_sha256,
+    learned_key,
+)
 from mfeat.settings import resolve, with_learned
 from mfeat.vector import groups_of, rows_of, samples_of
 
@@ -29,15 +36,26 @@ _GROUPS_AT_ONCE = 32
 class MinkowskiCurves(TransformerMixin, BaseEstimator):
     """Turn image patches into vectors of Minkowski curves.
 
-    Each patch becomes several scalar fields (the image itself, Gaussian smoothings, bands, slope,
-    curvature); of each field the area, contour length and Euler number of its level sets are taken
-    at every level, as densities in physical units. The vector's length, names and order follow
-    from the parameters alone.
+    Each patch becomes several scalar fields (smoothings, bands, slope, curvature, contrast, the
+    image itself); of each field the area, contour length, Euler number and anisotropy of its level
+    sets are taken at every level, exactly counted. The vector holds these curves, or few numbers
+    that describe them. Its length, names and order follow from the parameters alone.
+
+    The defaults were chosen by measurement, see the README: compact, alike for a patch under other
+    light, orientation, noise and focus. `full_curves` gives the parameters of whole curves of fixed
+    fields, in physical units.
 
     Parameters
     ----------
-    functionals : tuple of {"area", "contour", "euler"}, default ("area", "contour", "euler")
-        Functionals to take; their order in the vector is fixed.
+    functionals : tuple of str, default ("area", "contour", "euler", "anisotropy")
+        Functionals to take; their order in the vector is fixed. "anisotropy" is by how much
+        contours lie across one direction, whichever that is: see `mfeat.functionals.anisotropy_of`.
+    basis : {"hermite", "levels"}, default "hermite"
+        "levels": each curve enters by its values at all levels. "hermite": by its products with a
+        few Hermite functions, see `mfeat.basis`; level rule "standard" only.
+    terms : int or dict, optional
+        Number of Hermite functions, 1 to 16, for all functionals or by functional; default
+        ``{"area": 4, "contour": 2, "euler": 4, "anisotropy": 1}``.
     levels : int, sequence of float, or dict, default 16
         Number of levels (1 to 65,535), or the levels themselves in the units of the rule. A dict
         gives either one per field family, e.g. ``{"raw": 32, "slope": 8}``.
@@ -48,25 +66,43 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
         quantiles of the field over the training patches, learned in `fit`.
     level_range : (float, float) or dict, optional
         Range of a number of levels in the units of the rule; default (-2.5, 2.5) for "standard",
-        (0, 1) for "rank" and "fitted"; required for "fixed". A dict gives one per field family.
-    raw : bool, default True
+        (-3, 3) for it under basis "hermite", (0, 1) for "rank" and "fitted"; required for "fixed".
+        A dict gives one per field family.
+    raw : bool, default False
         Whether the image itself is a field.
-    smooth : tuple of float, default (1, 2, 4)
-        Scales of the Gaussian smoothings; () for none.
-    band : tuple of float, default (1, 2)
+    smooth : tuple of float, default (2.5, 3.7)
+        Scales of the smoothings; () for none.
+    band : tuple of float, default ()
         Scales of the bands: the smoothing at s minus that at 2 s.
-    slope : tuple of float, default (0, 2)
+    slope : tuple of float, default ()
         Scales at which the gradient magnitude is taken (0: of the image itself), in data units per
         length.
-    curvature : tuple of float, default ()
+    curvature : tuple of float, default (2.5, 3.7)
         Scales at which minus half the Laplacian is taken, in data units per length^2.
+    contrast : tuple of float, default (2.5, 3.7)
+        Scales at which the smoothed image is divided by its own local contrast: its difference
+        from the local mean, over the local standard deviation, both in a Gaussian window of 1.4
+        times the scale (2.5 times under "fixed"). Uneven light and gain do not matter.
+    scale_rule : {"matched", "fixed"}, default "matched"
+        "fixed": a scale is the standard deviation of a Gaussian. "matched": a scale is a length of
+        detail, the correlation length that each patch is smoothed to by a Gaussian of its own, at
+        most a quarter of its side wide: see `mfeat.matching`. Focus, noise and sharpness of the
+        measurement matter less.
     remove_tilt : bool, default False
         Whether each patch's least-squares plane is levelled before fields are taken, about its
         mean. For height maps: tilt and coarse form otherwise enter the raw and smoothed fields
         fully, slope through its magnitude, and bands and curvature through the patch's border.
-    location_scale : bool, default True
+    location_scale : bool or "ratio", default True
         Whether the standard deviation of each field, and the mean of raw and slope fields, are
-        features.
+        features. With `separate_scale` these are instead: "log_std", for the first field (that has
+        a unit) the logarithm of its standard deviation, for others of the ratio to that; contrast
+        fields, being pure numbers, are not divided; "log_length", of a field's length of detail;
+        "log_sigma", of the Gaussian that a matched scale took. "ratio" leaves the first field's
+        out, so that gain does not matter at all.
+    separate_scale : bool, default True
+        Whether the shape of curves is separated from their scale: contour and anisotropy are
+        multiplied by the field's length of detail, the Euler number by its square, which makes
+        pure numbers of them. Gaussian fields then have the same curves, whatever their size.
     directional : bool, default False
         Whether the crossing densities of four directions are features; they tell orientations
         apart and change when the part is turned.
@@ -121,17 +157,26 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
     >>> import numpy as np
     >>> from mfeat import MinkowskiCurves
     >>> patches = np.random.default_rng(0).normal(size=(5, 64, 64))
-    >>> transformer = MinkowskiCurves(levels=8)
+    >>> transformer = MinkowskiCurves()
     >>> X = transformer.fit_transform(patches)
     >>> X.shape, X.dtype
-    ((5, 203), dtype('float32'))
-    >>> [str(name) for name in transformer.get_feature_names_out()[:4]]
-    ['raw_mean', 'raw_std', 'raw_area_00', 'raw_area_01']
+    ((5, 78), dtype('float32'))
+    >>> [str(name) for name in transformer.get_feature_names_out()[:3]]
+    ['smooth_2.5_log_std', 'smooth_2.5_log_sigma', 'smooth_2.5_area_h0']
+
+    Whole curves, in physical units:
+
+    >>> from mfeat.transformer import full_curves
+    >>> curves = MinkowskiCurves(**full_curves(), pitch=0.01)
+    >>> curves.fit_transform(patches).shape
+    (5, 395)
     """
 
     # Constraints that scikit-learn can word well; `mfeat.settings` checks the others.
     _parameter_constraints: ClassVar[dict] = {
         "functionals": [tuple, list],
+        "basis": [StrOptions(set(BASES))],
+        "terms": "no_validation",
         "levels": "no_validation",
         "level_rule": [StrOptions(set(RULES))],
         "level_range": "no_validation",
@@ -140,8 +185,11 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
         "band": "no_validation",
         "slope": "no_validation",
         "curvature": "no_validation",
+        "contrast": "no_validation",
+        "scale_rule": [StrOptions(set(SCALE_RULES))],
         "remove_tilt": ["boolean"],
-        "location_scale": ["boolean"],
+        "location_scale": ["boolean", StrOptions({"ratio"})],
+        "separate_scale": ["boolean"],
         "directional": ["boolean"],
         "connectivity": [StrOptions({"mean"}), Options(Integral, {4, 8})],
         "contour_estimator": [StrOptions(set(CONTOUR_ESTIMATORS))],
@@ -156,17 +204,22 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
 
     def __init__(
         self,
-        functionals=FUNCTIONALS,
+        functionals=VECTOR_FUNCTIONALS,
+        basis="hermite",
+        terms=None,
         levels=16,
         level_rule="standard",
         level_range=None,
-        raw=True,
-        smooth=(1, 2, 4),
-        band=(1, 2),
-        slope=(0, 2),
-        curvature=(),
+        raw=False,
+        smooth=(2.5, 3.7),
+        band=(),
+        slope=(),
+        curvature=(2.5, 3.7),
+        contrast=(2.5, 3.7),
+        scale_rule="matched",
         remove_tilt=False,
         location_scale=True,
+        separate_scale=True,
         directional=False,
         connectivity="mean",
         contour_estimator="crofton-4",
@@ -179,6 +232,8 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
         n_jobs=None,
     ):
         self.functionals = functionals
+        self.basis = basis
+        self.terms = terms
         self.levels = levels
         self.level_rule = level_rule
         self.level_range = level_range
@@ -187,8 +242,11 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
         self.band = band
         self.slope = slope
         self.curvature = curvature
+        self.contrast = contrast
+        self.scale_rule = scale_rule
         self.remove_tilt = remove_tilt
         self.location_scale = location_scale
+        self.separate_scale = separate_scale
         self.directional = directional
         self.connectivity = connectivity
         self.contour_estimator = contour_estimator
@@ -287,9 +345,9 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
         Examples
         --------
         >>> from mfeat import MinkowskiCurves
-        >>> MinkowskiCurves(levels=2).feature_table()[4]
-        Feature(name='raw_contour_00', field='raw', scale=0.0, functional='contour', level=-2.5,
-        unit='1/l')
+        >>> MinkowskiCurves().feature_table()[2]
+        Feature(name='smooth_2.5_area_h0', field='smooth', scale=2.5, functional='area', level=None,
+        unit='1', term=0)
         """
         return self._plan().all_features()
 
@@ -392,6 +450,26 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
         tags.requires_fit = self.level_rule == "fitted"
         tags.transformer_tags.preserves_dtype = []
         return tags
+
+
+def full_curves() -> dict[str, Any]:
+    """Return parameters of `MinkowskiCurves` for whole curves of fixed fields.
+
+    The raw field, Gaussians of 1, 2 and 4 pitches, their octave bands, and slopes; area, contour
+    and Euler number at every level, in physical units; mean and standard deviation as they are.
+
+    Examples
+    --------
+    >>> from mfeat import MinkowskiCurves
+    >>> from mfeat.transformer import full_curves
+    >>> MinkowskiCurves(**full_curves() | {"levels": 2}).get_feature_names_out()[:4].tolist()
+    ['raw_mean', 'raw_std', 'raw_area_00', 'raw_area_01']
+    """
+    return {
+        "functionals": FUNCTIONALS, "basis": "levels", "raw": True, "smooth": (1, 2, 4),
+        "band": (1, 2), "slope": (0, 2), "curvature": (), "contrast": (), "scale_rule": "fixed",
+        "separate_scale": False,
+    }  # fmt: skip
 
 
 def _told(group: stacks.Group, reasons: dict[int, str]) -> list[tuple[int, int, str]]:

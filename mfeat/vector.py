@@ -5,11 +5,13 @@ image the same numbers in whatever stack it comes.
 """
 
 from collections.abc import Iterator
+from typing import NamedTuple
 
 import numpy as np
 
 from mfeat import _kernels
 from mfeat._checks import read_only
+from mfeat.basis import project
 from mfeat.counts import (
     STATISTICS,
     index_stack,
@@ -17,6 +19,7 @@ from mfeat.counts import (
 )
 from mfeat.fields import Field, check_scales, derive
 from mfeat.functionals import (
+    anisotropy_of,
     area_of,
     contour_of,
     crossing_densities,
@@ -25,11 +28,15 @@ from mfeat.functionals import (
     per_window,
 )
 from mfeat.levels import FieldStack, PlacedLevels, place_levels, sample_of
-from mfeat.plan import DIRECTIONS, VectorPlan, learned_key
+from mfeat.matching import detail_lengths, mean_square_slopes
+from mfeat.plan import DIRECTIONS, LENGTH_POWERS, VectorPlan, learned_key
 from mfeat.stacks import Collected, Group, Stack, group_patches, valid_fractions
 
 #: Derived fields of up to this many pixels are joined and worked on together.
 JOIN_PIXELS = 1 << 15
+
+#: Stands for the logarithm of the deviation of a field without relief: that of 1e-30.
+LOG_OF_NOTHING = float(np.log(1e-30))
 
 NO_WINDOW = "one of its fields has no window of four valid pixels"
 
@@ -68,10 +75,24 @@ def densities(plan: VectorPlan, table: np.ndarray, windows: np.ndarray) -> np.nd
         found.append(per_area(length, windows, plan.pitch))
     if "euler" in names:
         found.append(per_area(euler_of(table, plan.connectivity), windows, plan.pitch))
+    if "anisotropy" in names:
+        found.append(anisotropy_of(table, windows, plan.pitch))
     if plan.directional:
         directed = crossing_densities(table, windows, plan.pitch)
         found.extend(directed[name] for name in DIRECTIONS)
     return np.array(found).reshape(len(names), *table.shape[:-2], table.shape[-1])
+
+
+class _Counted(NamedTuple):
+    """One field of a stack of n images after counting: what its part of the vectors needs."""
+
+    field: Field
+    table: np.ndarray
+    windows: np.ndarray
+    mean: np.ndarray
+    deviation: np.ndarray  # 0 where there is no relief
+    length: np.ndarray  # of detail; 1 where it is not asked for, or without relief
+    log_sigma: np.ndarray | None
 
 
 def vectors(plan: VectorPlan, group: Group, stack: Stack) -> np.ndarray:
@@ -79,34 +100,91 @@ def vectors(plan: VectorPlan, group: Group, stack: Stack) -> np.ndarray:
 
     An image in one of whose fields no window counts gets NaN for that field.
     """
-    count = len(stack.values)
-    out = np.empty((count, plan.length))
-    waiting: dict[int, list] = {}  # by number of levels: functionals of many fields in one go
-    for names, fields in _joined(plan, group, stack):
-        own_levels = [plan.levels_of(field, group.channel_name) for field in names]
-        values = own_levels[0]
-        if any(other is not values for other in own_levels):
-            values = np.repeat(np.stack(own_levels), count, axis=0)
-        levels = place_levels(fields, plan.level_rule, values)
-        table, windows = count_stack(fields, levels, stack.valid is not None)
-        for k, field in enumerate(names):
-            own = slice(k * count, (k + 1) * count)
-            column = plan.columns[field]
-            for moment in plan.moments(field):
-                number = fields.deviation if moment == "std" else fields.offset + fields.mean
-                out[:, column] = number[own]
-                if stack.valid is not None:
-                    out[windows[own] == 0, column] = np.nan
-                column += 1
-            part = (column, table[own], windows[own])
-            waiting.setdefault(values.shape[-1], []).append(part)
-    for number, parts in waiting.items():
-        columns, tables, windows = zip(*parts, strict=True)
-        found = densities(plan, levels_from_top(np.stack(tables)), np.stack(windows))
-        # (functional, field, image, level) to the columns of (field, functional, level)
-        places = np.add.outer(columns, np.arange(len(found) * number))
-        out[:, places.ravel()] = found.transpose(2, 1, 0, 3).reshape(count, -1)
+    out = np.empty((len(stack.values), plan.length))
+    done = [one for part in _joined(plan, group, stack) for one in _counted(plan, group, *part)]
+    _write_moments(plan, {one.field: one for one in done}, out)
+    alike: dict[int, list[_Counted]] = {}
+    for one in done:
+        alike.setdefault(one.table.shape[-1] - 1, []).append(one)
+    for some in alike.values():
+        _write_curves(plan, some, out)
     return out
+
+
+def _counted(
+    plan: VectorPlan, group: Group, names: list[Field], fields: FieldStack
+) -> Iterator[_Counted]:
+    """Place levels on fields, count, and yield the fields one by one."""
+    count = len(fields.values) // len(names)
+    own_levels = [plan.levels_of(field, group.channel_name) for field in names]
+    values = own_levels[0]
+    if any(other is not values for other in own_levels):
+        values = np.repeat(np.stack(own_levels), count, axis=0)
+    levels = place_levels(fields, plan.level_rule, values)
+    missing = not fields.valid.all()
+    table, windows = count_stack(fields, levels, missing)
+    lengths = np.ones(len(windows))
+    if plan.separate_scale:
+        tau = mean_square_slopes(fields.centred, fields.valid, plan.pitch)
+        lengths = detail_lengths(fields.deviation, tau)
+    for k, field in enumerate(names):
+        own = slice(k * count, (k + 1) * count)
+        sigma = None if fields.log_sigma is None else fields.log_sigma[own]
+        mean = (fields.offset + fields.mean)[own]
+        yield _Counted(
+            field, table[own], windows[own], mean, fields.deviation[own], lengths[own], sigma
+        )
+
+
+def _write_moments(plan: VectorPlan, done: dict[Field, _Counted], out: np.ndarray) -> None:
+    """Write mean, deviation and scale of each field; NaN where no window counts.
+
+    Deviations are logarithms relative to the reference, but for its own, and those of contrast,
+    which are pure numbers. A field without relief beside one with relief is as far below it as
+    numbers go.
+    """
+    logs = {field: _log(one.deviation) for field, one in done.items()}
+    for field, one in done.items():
+        for column, moment in enumerate(plan.moments(field), plan.columns[field]):
+            if moment == "mean":
+                number = one.mean
+            elif moment == "std":
+                number = one.deviation
+            elif moment == "log_length":
+                number = np.log(one.length)
+            elif moment == "log_sigma":
+                number = one.log_sigma
+            elif field == plan.reference or field.family == "contrast":
+                number = logs[field]
+            else:
+                number = logs[field] - logs[plan.reference]
+            out[:, column] = np.where(one.windows == 0, np.nan, number)
+
+
+def _log(deviation: np.ndarray) -> np.ndarray:
+    return np.where(deviation > 0.0, np.log(np.where(deviation > 0.0, deviation, 1.0)),
+                    LOG_OF_NOTHING)  # fmt: skip
+
+
+def _write_curves(plan: VectorPlan, done: list[_Counted], out: np.ndarray) -> None:
+    """Write the curves of fields with equal numbers of levels."""
+    windows = np.stack([one.windows for one in done])
+    table = levels_from_top(np.stack([one.table for one in done]))
+    found = densities(plan, table, windows)  # (functional, field, image, level)
+    if plan.separate_scale:
+        length = np.stack([one.length for one in done])[:, :, None]
+        for k, functional in enumerate(plan.level_functionals()):
+            found[k] *= length ** LENGTH_POWERS.get(functional, 1)
+    starts = [plan.columns[one.field] + len(plan.moments(one.field)) for one in done]
+    column = 0
+    for functional, curves in zip(plan.level_functionals(), found, strict=True):
+        if plan.basis == "hermite":
+            levels = plan.level_values[done[0].field.name]
+            curves = project(functional, curves, levels, plan.terms[functional])
+        width = curves.shape[-1]
+        places = np.add.outer(starts, column + np.arange(width))
+        out[:, places.ravel()] = curves.transpose(1, 0, 2).reshape(len(out), -1)
+        column += width
 
 
 def _joined(
@@ -131,8 +209,9 @@ def _joined(
 def fields_of(plan: VectorPlan, stack: Stack) -> Iterator[tuple[Field, FieldStack]]:
     """Yield the fields of a stack, in the order of the plan."""
     return derive(
-        plan.fields, stack.values, stack.valid, plan.pitch, plan.scale_unit, plan.remove_tilt
-    )
+        plan.fields, stack.values, stack.valid,
+        plan.pitch, plan.scale_unit, plan.scale_rule, plan.remove_tilt,
+    )  # fmt: skip
 
 
 def refusals(stack: Stack, min_valid: float) -> dict[int, str]:
@@ -216,7 +295,9 @@ def groups_of(plan: VectorPlan, patches: Collected) -> list[Group]:
     groups = group_patches(patches, plan.table_size)
     for group in groups:
         try:
-            check_scales(plan.fields, group.images[0].shape, plan.pitch, plan.scale_unit)
+            check_scales(
+                plan.fields, group.images[0].shape, plan.pitch, plan.scale_unit, plan.scale_rule
+            )
         except ValueError as error:
             raise ValueError(f"{group.name(0)}: {error}") from None
     return groups

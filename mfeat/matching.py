@@ -1,0 +1,171 @@
+"""Matched smoothing: as much of it for each image as brings its detail to a given length.
+
+The length of detail of a field is its correlation length L = s / sqrt(tau), s its standard
+deviation and tau the mean square of its slope in one direction. A Gaussian field of covariance
+s^2 exp(-r^2/(2 l^2)) has L = l (Rice 1944/45; Adler 1981). Smoothing makes L grow, so there is one
+Gaussian that makes it a given length; an image that is out of focus, or noisier, needs less of it,
+or more, and what is left is alike.
+"""
+
+import math
+from collections.abc import Callable
+
+import numpy as np
+
+from mfeat import _field_kernels, _kernels
+from mfeat.smoothing import TRUNCATE, Smoothings, moments_of, sigma_pixels
+
+#: Gaussians that are tried, in pitches (of rectangular pixels: the geometric mean). Between two of
+#: them the right one is interpolated.
+LADDER = (0.0, 0.6, 0.8, 1.1, 1.5, 2.1, 2.9, 4.0, 5.6, 8.0, 11.0, 16.0)
+
+#: Gaussians narrower than this many pixels leave pixels as they are (exp(-8) = 3e-4 at a
+#: neighbour).
+SMALLEST_SIGMA = 0.25
+
+#: No Gaussian is wider than this share of an image's shorter side: little would be left.
+WIDEST_GAUSSIAN = 0.25
+
+_NO_LENGTH = 1e300  # stands for the length of detail of an image without relief
+
+# A pixel and the window of its slope smooth a little by themselves: this variance, in pitches^2,
+# is added to that of the Gaussian, so that logarithms of scales go down to no smoothing at all.
+_OWN_VARIANCE = 0.35
+
+
+def mean_square_slopes(
+    values: np.ndarray, valid: np.ndarray, pitch: tuple[float, float]
+) -> np.ndarray:
+    """Return tau of each image of a stack (n, h, w): half the mean square of its gradient.
+
+    The gradient is that of the slope field, on 2x2 windows. 0 without a valid window.
+    """
+    count, rows, cols = values.shape
+    slope = np.empty((count, rows - 1, cols - 1))
+    defined = np.empty(slope.shape, dtype=np.uint8)
+    _field_kernels.slope_stack(values, valid, pitch[0], pitch[1], slope, defined)
+    np.square(slope, out=slope)
+    mean, deviation, scratch = np.empty(count), np.empty(count), np.empty((2, cols))
+    _kernels.moments(slope, defined, scratch[0], scratch[1], mean, deviation)
+    return np.nan_to_num(mean) / 2.0
+
+
+def detail_lengths(deviation: np.ndarray, tau: np.ndarray) -> np.ndarray:
+    """Return correlation lengths; 1 where a field has no relief or no slope."""
+    defined = (deviation > 0.0) & (tau > 0.0)
+    return np.where(defined, deviation, 1.0) / np.sqrt(np.where(defined, tau, 1.0))
+
+
+def log_smoothing(sigma: np.ndarray) -> np.ndarray:
+    """Return the logarithm of Gaussians in pitches, with what a pixel smooths by itself.
+
+    Examples
+    --------
+    >>> import numpy as np
+    >>> from mfeat.matching import log_smoothing
+    >>> log_smoothing(np.array([0.0, 2.0])).round(3)
+    array([-0.525,  0.735])
+    """
+    return np.log(sigma**2 + _OWN_VARIANCE) / 2.0
+
+
+def matched_sigmas(
+    lengths: tuple[float, ...],
+    measure: Callable[[float], np.ndarray],
+    count: int,
+    widest: float,
+) -> dict[float, np.ndarray]:
+    """Return the Gaussian in pitches, for each length and image, that gives the image that length.
+
+    Parameters
+    ----------
+    lengths : tuple of float
+        Wanted lengths of detail.
+    measure : callable
+        Gives the lengths of all images after a Gaussian of so many pitches.
+    count : int
+        Number of images.
+    widest : float
+        No Gaussian is wider than this.
+
+    Returns
+    -------
+    dict of float to ndarray of shape (count,)
+        0 where the image has that length already, `widest` where nothing that is allowed gives it.
+    """
+    found = {length: np.full(count, np.nan) for length in lengths}
+    below_sigma, below = 0.0, np.log(measure(0.0))
+    for own in found.items():
+        own[1][np.log(own[0]) <= below] = 0.0
+    rungs = [sigma for sigma in LADDER if 0.0 < sigma < widest] + [widest]
+    for sigma in rungs:
+        if not any(np.isnan(own).any() for own in found.values()):
+            break
+        here = np.maximum(np.log(measure(sigma)), below + 1e-9)  # it must grow
+        low, high = log_smoothing(np.array([below_sigma, sigma]))
+        for length, own in found.items():
+            share = (np.log(length) - below) / (here - below)
+            between = np.isnan(own) & (share <= 1.0)
+            position = 2.0 * (low + np.clip(share, 0.0, 1.0) * (high - low))
+            exact = np.sqrt(np.maximum(np.exp(position) - _OWN_VARIANCE, 0.0))
+            own[between] = exact[between]
+        below_sigma, below = sigma, here
+    for own in found.values():
+        own[np.isnan(own)] = widest
+        own[own < SMALLEST_SIGMA] = 0.0
+    return found
+
+
+class MatchedSmoothings:
+    """Smoothings by which each image of a stack gets the length of detail that a scale names."""
+
+    def __init__(self, pixels: Smoothings, lengths: tuple[float, ...]):
+        self._pixels = pixels
+        shape = pixels.valid.shape
+        self._unit = 1.0 if pixels.scale_unit == "pitch" else math.sqrt(math.prod(pixels.pitch))
+        self._sigmas = matched_sigmas(
+            tuple(length / self._unit for length in lengths),
+            self._measured,
+            shape[0],
+            WIDEST_GAUSSIAN * min(shape[1:]),
+        )
+        self._done: dict[float, np.ndarray] = {}
+
+    def _measured(self, sigma: float) -> np.ndarray:
+        """Return the lengths of detail, in pitches, after a Gaussian of so many pitches."""
+        pixels = self._pixels
+        length = math.sqrt(math.prod(pixels.pitch))
+        smooth = pixels.centred()
+        if sigma > 0.0:
+            smooth = pixels.smoothed(smooth, sigma * self._unit)
+        deviation = moments_of(smooth, pixels.valid)[1]
+        tau = mean_square_slopes(smooth, pixels.valid, pixels.pitch)
+        flat = (deviation <= pixels.error) | (tau == 0.0)
+        return np.where(flat, _NO_LENGTH, detail_lengths(deviation, tau) / length)
+
+    def at(self, scale: float) -> np.ndarray:
+        """Return the centred images, each smoothed so that its length of detail is `scale`."""
+        if scale == 0.0:
+            return self._pixels.centred()
+        if scale not in self._done:
+            pixels, sigmas = self._pixels, self._sigmas[scale / self._unit]
+            smoothed = self._smooth_each(pixels.centred(), sigmas)
+            if pixels.missing:
+                support = self._smooth_each(pixels.valid.astype(np.float64), sigmas)
+                _field_kernels.normalise_stack(smoothed, support, pixels.valid)
+            self._done[scale] = smoothed
+        return self._done[scale]
+
+    def log_sigma(self, scale: float) -> np.ndarray | None:
+        """Return the logarithm of each image's Gaussian, see `log_smoothing`; None for none."""
+        return log_smoothing(self._sigmas[scale / self._unit]) if scale else None
+
+    def _smooth_each(self, stack: np.ndarray, sigmas: np.ndarray) -> np.ndarray:
+        in_rows, in_cols = sigma_pixels(1.0, self._pixels.pitch, "pitch")
+        widest = float(sigmas.max()) * max(in_rows, in_cols)
+        reach = int(TRUNCATE * widest + 0.5)
+        weights, padded = np.empty(reach + 1), np.empty(stack.shape[2] + 2 * reach)
+        half, out = np.empty(stack.shape[1:]), np.empty_like(stack)
+        along = (sigmas * in_cols, sigmas * in_rows)
+        _field_kernels.smooth_each(stack, *along, weights, padded, half, out)
+        return out
