@@ -69,10 +69,13 @@ class Field(NamedTuple):
 
 @lru_cache(maxsize=1024)
 def _field_name(family: str, scale: float) -> str:
-    if family == "raw":
-        return "raw"
+    return "raw" if family == "raw" else f"{family}_{scale_name(scale)}"
+
+
+def scale_name(scale: float) -> str:
+    """Return a scale as names of features hold it, e.g. "2" or "1.6"."""
     text = f"{scale:g}"
-    return f"{family}_{text if float(text) == scale else repr(scale)}"
+    return text if float(text) == scale else repr(scale)
 
 
 def scales(name: str, value: Any, *, zero: bool) -> tuple[float, ...]:
@@ -179,20 +182,17 @@ def _scale_hint(scale_unit: str) -> str:
     return 'Scales are in multiples of the pitch (scale_unit="pitch")'
 
 
-def derive(
-    fields: tuple[Field, ...],
+def prepared(
     values: np.ndarray,
     valid: np.ndarray | None,
     pitch: tuple[float, float],
     scale_unit: str,
-    scale_rule: str,
     remove_tilt: bool,
-) -> Iterator[tuple[Field, FieldStack]]:
-    """Yield each field of a stack of images, in the order of `fields`.
+) -> Smoothings:
+    """Return a stack of images, ready to be smoothed and to have fields derived.
 
     Parameters
     ----------
-    fields : tuple of Field
     values : ndarray of shape (n, h, w)
         Images in a type of `mfeat._checks.compiled_type`.
     valid : ndarray of shape (n, h, w), uint8, or None
@@ -200,49 +200,72 @@ def derive(
         pixels are smoothed by normalised convolution, those without by plain convolution.
     pitch : (float, float)
     scale_unit : {"pitch", "length"}
-    scale_rule : {"matched", "fixed"}
     remove_tilt : bool
         Whether each image's least-squares plane is levelled first, about its mean.
-
-    Notes
-    -----
-    Memory: one float64 array of the stack's size for each distinct smoothing, and five more.
     """
-    shape = values.shape[1:]
-    check_scales(fields, shape, pitch, scale_unit, scale_rule)
-    missing = valid is not None
     low, high = _checks.value_ranges(values, valid)
-    if valid is None:
-        valid = np.ones(values.shape, dtype=np.uint8)
     # Half of each before they are added: the sum of two large values would overflow.
     offset = low.astype(np.float64) / 2 + high.astype(np.float64) / 2
     half_range = high.astype(np.float64) / 2 - low.astype(np.float64) / 2
     error = ROUNDING * half_range
     if values.dtype.kind == "f":  # integers are exact, however far from zero
         error = np.maximum(error, 2.0**-52 * (np.abs(offset) + half_range))
+    return Smoothings(
+        values=values,
+        valid=np.ones(values.shape, dtype=np.uint8) if valid is None else valid,
+        missing=valid is not None,
+        offset=offset,
+        error=error,
+        constant=low == high,
+        pitch=pitch,
+        scale_unit=scale_unit,
+        remove_tilt=remove_tilt,
+    )
+
+
+def derive(
+    fields: tuple[Field, ...], pixels: Smoothings, scale_rule: str
+) -> Iterator[tuple[Field, FieldStack]]:
+    """Yield each field of a stack of images, in the order of `fields`.
+
+    Parameters
+    ----------
+    fields : tuple of Field
+        Their scales must have been checked for the shape of the images, see `check_scales`.
+    pixels : Smoothings
+        The images, see `prepared`; what it smooths for one field serves others, too.
+    scale_rule : {"matched", "fixed"}
+
+    Notes
+    -----
+    Memory: one float64 array of the stack's size for each distinct smoothing, and five more.
+    """
+    values, valid, offset, pitch = pixels.values, pixels.valid, pixels.offset, pixels.pitch
+    shape = values.shape[1:]
     nothing = np.zeros(len(values))
-    pixels = Smoothings(values, valid, missing, offset, error, pitch, scale_unit, remove_tilt)
-    source = pixels
+    source: Smoothings | MatchedSmoothings = pixels
     if scale_rule == "matched":
         source = MatchedSmoothings(pixels, _lengths(fields))
     for field in fields:
         order = _SHRINK[field.family]
-        rounding = _GAIN[field.family] * error / min(pitch) ** order
-        sigma = source.log_sigma(field.scale)
-        if field.family == "raw" and remove_tilt:
+        rounding = _GAIN[field.family] * pixels.error / min(pitch) ** order
+        if field.family == "raw" and pixels.remove_tilt:
             yield field, FieldStack(pixels.centred(), valid, offset, rounding)
         elif field.family == "raw":
-            yield field, FieldStack(values, valid, offset, rounding, pixels.centred, low == high)
+            yield (
+                field,
+                FieldStack(values, valid, offset, rounding, pixels.centred, pixels.constant),
+            )
         elif field.family == "band":
             band = source.at(field.scale) - source.at(BAND_RATIO * field.scale)
-            yield field, FieldStack(band, valid, nothing, rounding, log_sigma=sigma)
+            yield field, FieldStack(band, valid, nothing, rounding)
         elif field.family == "smooth":
             smooth = source.at(field.scale)
-            yield field, FieldStack(smooth, valid, offset, rounding, log_sigma=sigma)
+            yield field, FieldStack(smooth, valid, offset, rounding)
         elif field.family == "contrast":
             window = CONTRAST_WINDOW[scale_rule] * field.scale
             contrast, rounding = _contrast(pixels, source.at(field.scale), valid, window, rounding)
-            yield field, FieldStack(contrast, valid, nothing, rounding, log_sigma=sigma)
+            yield field, FieldStack(contrast, valid, nothing, rounding)
         else:
             smaller = (len(values), shape[0] - order, shape[1] - order)
             derived, defined = np.empty(smaller), np.empty(smaller, dtype=np.uint8)
@@ -252,7 +275,7 @@ def derive(
                 else _field_kernels.curvature_stack
             )
             by_kernel(source.at(field.scale), valid, pitch[0], pitch[1], derived, defined)
-            yield field, FieldStack(derived, defined, nothing, rounding, log_sigma=sigma)
+            yield field, FieldStack(derived, defined, nothing, rounding)
 
 
 def _lengths(fields: tuple[Field, ...]) -> tuple[float, ...]:

@@ -52,8 +52,6 @@ class FieldStack:
         For raw fields only: returns `values` minus `offset` as float64, zero where missing.
     constant : ndarray of shape (n,), bool, optional
         Which fields are constant, where that is known exactly and rounding has no part in it.
-    log_sigma : ndarray of shape (n,), optional
-        Of matched fields: the logarithm of the Gaussian that each image took.
     """
 
     values: np.ndarray
@@ -62,19 +60,14 @@ class FieldStack:
     rounding: np.ndarray
     raw: Callable[[], np.ndarray] | None = None
     constant: np.ndarray | None = None
-    log_sigma: np.ndarray | None = None
 
     @classmethod
     def join(cls, parts: "list[FieldStack]") -> "FieldStack":
         """Return several stacks of derived fields of one size as one, in their order."""
         if len(parts) == 1:
             return parts[0]
-        names = ["values", "valid", "offset", "rounding"]
-        if parts[0].log_sigma is not None:
-            names.append("log_sigma")
-        return cls(
-            **{name: np.concatenate([getattr(part, name) for part in parts]) for name in names}
-        )
+        names = ("values", "valid", "offset", "rounding")
+        return cls(*(np.concatenate([getattr(part, name) for part in parts]) for name in names))
 
     @property
     def derived(self) -> bool:

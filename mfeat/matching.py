@@ -1,10 +1,14 @@
 """Matched smoothing: as much of it for each image as brings its detail to a given length.
 
-The length of detail of a field is its correlation length L = s / sqrt(tau), s its standard
-deviation and tau the mean square of its slope in one direction. A Gaussian field of covariance
-s^2 exp(-r^2/(2 l^2)) has L = l (Rice 1944/45; Adler 1981). Smoothing makes L grow, so there is one
-Gaussian that makes it a given length; an image that is out of focus, or noisier, needs less of it,
-or more, and what is left is alike.
+The length of detail of an image is the root mean square of its gradient over that of its curvature
+(minus half the Laplacian). It is made of the spectral moments of a random surface (M. S.
+Longuet-Higgins, The statistical analysis of a random, moving surface, Phil. Trans. R. Soc. A 249
+(1957), 321-387; P. R. Nayak, Random process model of rough surfaces, J. Lubrication Technology 93
+(1971), 398-407), and is l for an isotropic Gaussian field of covariance s^2 exp(-r^2/(2 l^2)):
+E|grad f|^2 = 2 s^2/l^2, and E(Laplacian f)^2 = 8 s^2/l^4.
+
+Smoothing makes it grow, so there is one Gaussian that makes it a given length. An image that is out
+of focus needs less of that, one that is noisier needs more, and what is left is alike.
 """
 
 import math
@@ -12,7 +16,7 @@ from collections.abc import Callable
 
 import numpy as np
 
-from mfeat import _field_kernels, _kernels
+from mfeat import _field_kernels
 from mfeat.smoothing import TRUNCATE, Smoothings, moments_of, sigma_pixels
 
 #: Gaussians that are tried, in pitches (of rectangular pixels: the geometric mean). Between two of
@@ -33,40 +37,33 @@ _NO_LENGTH = 1e300  # stands for the length of detail of an image without relief
 _OWN_VARIANCE = 0.35
 
 
+def roughness(
+    values: np.ndarray, valid: np.ndarray, pitch: tuple[float, float]
+) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Return the root mean squares of deviation, gradient and curvature of a stack (n, h, w).
+
+    Gradient and curvature are those of the fields of these names; 0 where there is none.
+    """
+    deviation = moments_of(values, valid)[1]
+    slope = np.sqrt(2.0 * mean_square_slopes(values, valid, pitch))
+    count, rows, cols = values.shape
+    curvature = np.zeros((count, max(rows - 2, 0), max(cols - 2, 0)))
+    defined = np.zeros(curvature.shape, dtype=np.uint8)
+    _field_kernels.curvature_stack(values, valid, pitch[0], pitch[1], curvature, defined)
+    np.square(curvature, out=curvature)
+    return deviation, slope, np.sqrt(moments_of(curvature, defined)[0])
+
+
 def mean_square_slopes(
     values: np.ndarray, valid: np.ndarray, pitch: tuple[float, float]
 ) -> np.ndarray:
-    """Return tau of each image of a stack (n, h, w): half the mean square of its gradient.
-
-    The gradient is that of the slope field, on 2x2 windows. 0 without a valid window.
-    """
+    """Return half the mean square of the gradient of each image of a stack: tau of the theory."""
     count, rows, cols = values.shape
     slope = np.empty((count, rows - 1, cols - 1))
     defined = np.empty(slope.shape, dtype=np.uint8)
     _field_kernels.slope_stack(values, valid, pitch[0], pitch[1], slope, defined)
     np.square(slope, out=slope)
-    mean, deviation, scratch = np.empty(count), np.empty(count), np.empty((2, cols))
-    _kernels.moments(slope, defined, scratch[0], scratch[1], mean, deviation)
-    return np.nan_to_num(mean) / 2.0
-
-
-def detail_lengths(deviation: np.ndarray, tau: np.ndarray) -> np.ndarray:
-    """Return correlation lengths; 1 where a field has no relief or no slope."""
-    defined = (deviation > 0.0) & (tau > 0.0)
-    return np.where(defined, deviation, 1.0) / np.sqrt(np.where(defined, tau, 1.0))
-
-
-def log_smoothing(sigma: np.ndarray) -> np.ndarray:
-    """Return the logarithm of Gaussians in pitches, with what a pixel smooths by itself.
-
-    Examples
-    --------
-    >>> import numpy as np
-    >>> from mfeat.matching import log_smoothing
-    >>> log_smoothing(np.array([0.0, 2.0])).round(3)
-    array([-0.525,  0.735])
-    """
-    return np.log(sigma**2 + _OWN_VARIANCE) / 2.0
+    return moments_of(slope, defined)[0] / 2.0
 
 
 def matched_sigmas(
@@ -102,11 +99,11 @@ def matched_sigmas(
         if not any(np.isnan(own).any() for own in found.values()):
             break
         here = np.maximum(np.log(measure(sigma)), below + 1e-9)  # it must grow
-        low, high = log_smoothing(np.array([below_sigma, sigma]))
+        low, high = (np.log(wide**2 + _OWN_VARIANCE) for wide in (below_sigma, sigma))
         for length, own in found.items():
             share = (np.log(length) - below) / (here - below)
             between = np.isnan(own) & (share <= 1.0)
-            position = 2.0 * (low + np.clip(share, 0.0, 1.0) * (high - low))
+            position = low + np.clip(share, 0.0, 1.0) * (high - low)
             exact = np.sqrt(np.maximum(np.exp(position) - _OWN_VARIANCE, 0.0))
             own[between] = exact[between]
         below_sigma, below = sigma, here
@@ -138,10 +135,9 @@ class MatchedSmoothings:
         smooth = pixels.centred()
         if sigma > 0.0:
             smooth = pixels.smoothed(smooth, sigma * self._unit)
-        deviation = moments_of(smooth, pixels.valid)[1]
-        tau = mean_square_slopes(smooth, pixels.valid, pixels.pitch)
-        flat = (deviation <= pixels.error) | (tau == 0.0)
-        return np.where(flat, _NO_LENGTH, detail_lengths(deviation, tau) / length)
+        deviation, slope, curvature = roughness(smooth, pixels.valid, pixels.pitch)
+        flat = (deviation <= pixels.error) | (slope == 0.0) | (curvature == 0.0)
+        return np.where(flat, _NO_LENGTH, slope / np.where(flat, 1.0, curvature) / length)
 
     def at(self, scale: float) -> np.ndarray:
         """Return the centred images, each smoothed so that its length of detail is `scale`."""
@@ -155,10 +151,6 @@ class MatchedSmoothings:
                 _field_kernels.normalise_stack(smoothed, support, pixels.valid)
             self._done[scale] = smoothed
         return self._done[scale]
-
-    def log_sigma(self, scale: float) -> np.ndarray | None:
-        """Return the logarithm of each image's Gaussian, see `log_smoothing`; None for none."""
-        return log_smoothing(self._sigmas[scale / self._unit]) if scale else None
 
     def _smooth_each(self, stack: np.ndarray, sigmas: np.ndarray) -> np.ndarray:
         in_rows, in_cols = sigma_pixels(1.0, self._pixels.pitch, "pitch")

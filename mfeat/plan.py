@@ -13,7 +13,7 @@ from typing import Any, NamedTuple
 import numpy as np
 
 from mfeat.basis import TERMS
-from mfeat.fields import Field
+from mfeat.fields import Field, check_scales, scale_name
 
 #: Raised whenever the same settings would give other numbers or names than before.
 VECTOR_VERSION = 2
@@ -40,12 +40,13 @@ class Feature(NamedTuple):
     name : str
         Column name, e.g. "smooth_2_contour_07", or "smooth_2.5_contour_h0".
     field : str
-        Family: "raw", "smooth", "band", "slope", "curvature" or "contrast".
+        Family: "raw", "smooth", "band", "slope", "curvature", "contrast"; or "rough" for numbers of
+        the scale.
     scale : float
         Scale of the field; 0 for none.
     functional : str
         "area", "contour", "euler", "anisotropy", "crossings_..." or, without levels, "mean", "std",
-        "log_std", "log_length" or "log_sigma".
+        "log_contrast", "log_std", "log_slope" or "log_curvature".
     level : float or None
         The level in the units of the level rule; None without levels, and for Hermite functions.
     unit : str
@@ -86,6 +87,7 @@ class VectorPlan:
     level_values: dict[str, np.ndarray]
     location_scale: bool | str
     separate_scale: bool
+    roughness: tuple[float, ...]
     basis: str
     terms: dict[str, int]
     directional: bool
@@ -99,6 +101,12 @@ class VectorPlan:
     channels: tuple[str, ...] | None = None
     learned: dict[str, np.ndarray] | None = None
 
+    def check_scales(self, shape: tuple[int, int]) -> None:
+        """Refuse scales that cannot act on images of a shape, and images too small for a field."""
+        check_scales(self.fields, shape, self.pitch, self.scale_unit, self.scale_rule)
+        rough = tuple(Field("smooth", scale) for scale in self.roughness if self.scale_features)
+        check_scales(rough, shape, self.pitch, self.scale_unit, "fixed")
+
     def level_functionals(self) -> tuple[str, ...]:
         """Return the functionals that have one value a level, in the order of the vector."""
         ordered = tuple(name for name in VECTOR_FUNCTIONALS if name in self.functionals)
@@ -106,27 +114,24 @@ class VectorPlan:
 
     def moments(self, field: Field) -> tuple[str, ...]:
         """Return the moments of a field that are features."""
-        if self.location_scale is False:
+        if self.separate_scale or not self.location_scale:
             return ()
-        if not self.separate_scale:
-            return ("mean", "std") if field.family in _LOCATED else ("std",)
-        matched = self.scale_rule == "matched" and field.scale > 0.0
-        found = []
-        if not (field == self.reference and self.location_scale == "ratio"):
-            found.append("log_std")
-        if not (matched and field.family == "smooth"):  # has the length that its scale names
-            found.append("log_length")
-        if matched and field == self._first_at(field.scale):
-            found.append("log_sigma")
-        return tuple(found)
+        return ("mean", "std") if field.family in _LOCATED else ("std",)
 
     @cached_property
-    def reference(self) -> Field | None:
-        """The field whose deviation those of the others are divided by: the first with a unit."""
-        return next((field for field in self.fields if field.family != "contrast"), None)
-
-    def _first_at(self, scale: float) -> Field:
-        return next(field for field in self.fields if field.scale == scale)
+    def scale_features(self) -> list[tuple[float, str]]:
+        """Gaussian and name of the numbers that tell the scale, where it is kept apart."""
+        if not self.separate_scale or not self.location_scale:
+            return []
+        found = []
+        for scale in self.roughness:
+            first = scale == self.roughness[0]
+            if first and self.location_scale is True:
+                found.append((scale, "log_contrast"))
+            if not (first and self.location_scale == "ratio"):
+                found.append((scale, "log_std"))
+            found += [(scale, "log_slope"), (scale, "log_curvature")]
+        return found
 
     def numbers(self, functional: str, field: Field) -> int:
         """Return how many numbers a functional of a field has."""
@@ -148,7 +153,7 @@ class VectorPlan:
     @cached_property
     def columns(self) -> dict[Field, int]:
         """Where the numbers of each field start."""
-        found, column = {}, 0
+        found, column = {}, len(self.scale_features)
         for field in self.fields:
             found[field] = column
             column += self._width(field)
@@ -157,7 +162,7 @@ class VectorPlan:
     @cached_property
     def length(self) -> int:
         """How many numbers the vector of one channel has."""
-        return sum(map(self._width, self.fields))
+        return len(self.scale_features) + sum(map(self._width, self.fields))
 
     def _width(self, field: Field) -> int:
         own = sum(self.numbers(functional, field) for functional in self.level_functionals())
@@ -165,12 +170,14 @@ class VectorPlan:
 
     def features(self) -> list[Feature]:
         """Return one entry a number of the vector of one channel, in order."""
-        found = []
+        found = [
+            Feature(f"rough_{scale_name(scale)}_{name}", "rough", scale, name, None, "1")
+            for scale, name in self.scale_features
+        ]
         for field in self.fields:
             prefix = field.name
             for moment in self.moments(field):
-                unit = "1" if moment.startswith("log") else _VALUE_UNITS[field.family]
-                name = f"{prefix}_{moment}"
+                name, unit = f"{prefix}_{moment}", _VALUE_UNITS[field.family]
                 found.append(Feature(name, field.family, field.scale, moment, None, unit))
             levels = self.level_values[prefix].tolist()
             for functional in self.level_functionals():
@@ -211,6 +218,7 @@ class VectorPlan:
             "levels": {name: values.tolist() for name, values in self.level_values.items()},
             "location_scale": self.location_scale,
             "separate_scale": self.separate_scale,
+            "roughness": list(self.roughness),
             "basis": self.basis,
             "terms": dict(self.terms) if self.basis == "hermite" else None,
             "connectivity": self.connectivity,

@@ -18,7 +18,6 @@ from sklearn.base import clone
 from tqdm import tqdm
 
 from mfeat.entries import CARRIED, Sources
-from mfeat.fields import check_scales
 from mfeat.images import ImageInfo, UnreadableImage, scan
 from mfeat.options import DumpSettings, uniform_pitch
 from mfeat.plan import VectorPlan
@@ -286,7 +285,7 @@ def _item(
         )
         return _rejected(entry, reason, about, info), False
     try:
-        check_scales(plan.fields, size, plan.pitch, plan.scale_unit, plan.scale_rule)
+        plan.check_scales(size)
         starts = None if single else settings.grid.starts(region[2:])
     except ValueError as error:
         return _rejected(entry, f"{page}{error}", about, info), False
@@ -302,7 +301,7 @@ def _check_grid(sources: Sources, settings: DumpSettings) -> None:
     entries = sources.entries
     if settings.regions == "grid" or entries["row"].null_count:
         plan = settings.transformer._plan()
-        check_scales(plan.fields, settings.grid.size, plan.pitch, plan.scale_unit, plan.scale_rule)
+        plan.check_scales(settings.grid.size)
 
 
 def _in_parts(items: list[tuple[Item, bool]], settings: DumpSettings, sources: Sources) -> pa.Table:

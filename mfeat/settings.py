@@ -107,6 +107,7 @@ def _resolve(estimator: Any) -> VectorPlan:
         level_values={field.name: per_family[field.family] for field in fields},
         location_scale=_location_scale(estimator),
         separate_scale=bool(estimator.separate_scale),
+        roughness=scales("roughness", estimator.roughness, zero=True),
         basis=estimator.basis,
         terms=terms,
         directional=bool(estimator.directional),
@@ -128,12 +129,12 @@ def _resolve(estimator: Any) -> VectorPlan:
 
 
 def _location_scale(estimator: Any) -> bool | str:
-    if isinstance(estimator.location_scale, str) and not estimator.separate_scale:
+    given = estimator.location_scale
+    if isinstance(given, str) and not estimator.separate_scale:
         raise ValueError(
-            'location_scale="ratio" takes ratios of scales, which separate_scale=True separates; '
+            f"location_scale={given!r} chooses among numbers that separate_scale=True keeps apart; "
             "set that, or location_scale to True or False"
         )
-    given = estimator.location_scale
     return given if isinstance(given, str) else bool(given)
 
 
@@ -185,8 +186,8 @@ def _fields(estimator: Any) -> tuple[Field, ...]:
         fields += [Field(family, scale) for scale in given]
     if not fields:
         raise ValueError(
-            "no field is left: raw is False and smooth, band, slope, curvature and contrast are (); "
-            "give at least one"
+            "no field is left: raw is False and smooth, band, slope, curvature and contrast are "
+            "(); give at least one"
         )
     return tuple(fields)
 

@@ -53,17 +53,36 @@ def moments_of(values: np.ndarray, valid: np.ndarray) -> tuple[np.ndarray, np.nd
 
 
 class Smoothings:
-    """Gaussian smoothings of one stack, each computed once and shared between the families."""
+    """Gaussian smoothings of one stack, each computed once and shared between the families.
 
-    def __init__(self, values, valid, missing, offset, error, pitch, scale_unit, remove_tilt):
+    Attributes
+    ----------
+    values, valid : ndarray of shape (n, h, w)
+        Pixels as they are, and where they are valid (uint8).
+    missing : bool
+        Whether some pixel is not valid.
+    offset : ndarray of shape (n,)
+        Middle of the range of each image, subtracted before anything is computed.
+    error : ndarray of shape (n,)
+        Bound of the rounding error of what is computed.
+    constant : ndarray of shape (n,), bool
+        Which images have equal pixels.
+    pitch, scale_unit, remove_tilt
+        As in `mfeat.fields.prepared`.
+    """
+
+    def __init__(
+        self, *, values, valid, missing, offset, error, constant, pitch, scale_unit, remove_tilt
+    ):
+        self.values = values
         self.valid = valid
         self.missing = missing
+        self.offset = offset
         self.error = error
+        self.constant = constant
         self.pitch = pitch
         self.scale_unit = scale_unit
-        self._values = values
-        self._offset = offset
-        self._remove_tilt = remove_tilt
+        self.remove_tilt = remove_tilt
         self._done: dict[float, np.ndarray] = {}
         self._supports: dict[float, np.ndarray] = {}
 
@@ -73,10 +92,10 @@ class Smoothings:
         They are levelled if that is asked for.
         """
         if 0.0 not in self._done:
-            centred = self._values - self._offset[:, None, None]
+            centred = self.values - self.offset[:, None, None]
             if self.missing:
                 centred[self.valid == 0] = 0.0
-            if self._remove_tilt:
+            if self.remove_tilt:
                 level(centred, self.valid)
             self._done[0.0] = centred
         return self._done[0.0]
@@ -88,9 +107,6 @@ class Smoothings:
         if scale not in self._done:
             self._done[scale] = self.smoothed(self.centred(), scale)
         return self._done[scale]
-
-    def log_sigma(self, _scale: float) -> None:
-        """Return None: the Gaussian is the same for all images."""
 
     def smoothed(self, stack: np.ndarray, scale: float) -> np.ndarray:
         """Return a stack smoothed at a scale, over missing pixels by normalised convolution."""

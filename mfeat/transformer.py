@@ -70,39 +70,44 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
         A dict gives one per field family.
     raw : bool, default False
         Whether the image itself is a field.
-    smooth : tuple of float, default (2.5, 3.7)
+    smooth : tuple of float, default (1.5, 2, 2.8)
         Scales of the smoothings; () for none.
     band : tuple of float, default ()
         Scales of the bands: the smoothing at s minus that at 2 s.
     slope : tuple of float, default ()
         Scales at which the gradient magnitude is taken (0: of the image itself), in data units per
         length.
-    curvature : tuple of float, default (2.5, 3.7)
+    curvature : tuple of float, default (1.5, 2, 2.8)
         Scales at which minus half the Laplacian is taken, in data units per length^2.
-    contrast : tuple of float, default (2.5, 3.7)
+    contrast : tuple of float, default (1.5, 2, 2.8)
         Scales at which the smoothed image is divided by its own local contrast: its difference
         from the local mean, over the local standard deviation, both in a Gaussian window of 1.4
         times the scale (2.5 times under "fixed"). Uneven light and gain do not matter.
     scale_rule : {"matched", "fixed"}, default "matched"
         "fixed": a scale is the standard deviation of a Gaussian. "matched": a scale is a length of
-        detail, the correlation length that each patch is smoothed to by a Gaussian of its own, at
-        most a quarter of its side wide: see `mfeat.matching`. Focus, noise and sharpness of the
-        measurement matter less.
+        detail (root mean square gradient over curvature), which each patch is given by a Gaussian
+        of its own, at most a quarter of its side wide: see `mfeat.matching`. Focus, noise and
+        sharpness of the measurement matter less.
     remove_tilt : bool, default False
         Whether each patch's least-squares plane is levelled before fields are taken, about its
         mean. For height maps: tilt and coarse form otherwise enter the raw and smoothed fields
         fully, slope through its magnitude, and bands and curvature through the patch's border.
-    location_scale : bool or "ratio", default True
-        Whether the standard deviation of each field, and the mean of raw and slope fields, are
-        features. With `separate_scale` these are instead: "log_std", for the first field (that has
-        a unit) the logarithm of its standard deviation, for others of the ratio to that; contrast
-        fields, being pure numbers, are not divided; "log_length", of a field's length of detail;
-        "log_sigma", of the Gaussian that a matched scale took. "ratio" leaves the first field's
-        out, so that gain does not matter at all.
+    location_scale : bool, "scale" or "ratio", default True
+        Which numbers tell location and scale, beside the curves. With `separate_scale`: True: the
+        logarithms of contrast, standard deviation, gradient and curvature under each Gaussian of
+        `roughness`; "scale": without the contrast, for height maps whose zero means nothing;
+        "ratio": only ratios, on which gain has no influence. Without `separate_scale`, True: the
+        standard deviation of each field, and the mean of raw and slope fields. False: none.
     separate_scale : bool, default True
         Whether the shape of curves is separated from their scale: contour and anisotropy are
-        multiplied by the field's length of detail, the Euler number by its square, which makes
-        pure numbers of them. Gaussian fields then have the same curves, whatever their size.
+        multiplied by the field's correlation length (standard deviation over root mean square slope
+        in one direction), the Euler number by its square, which makes pure numbers of them.
+        Gaussian fields then have the same curves, whatever their size.
+    roughness : tuple of float, default (1.5, 3)
+        Gaussian scales under which the numbers of the scale are taken: "log_std", the logarithm of
+        the standard deviation; "log_slope" and "log_curvature", of the root mean squares of
+        gradient and curvature; all but the first divided by the first's deviation. "log_contrast":
+        of the first deviation over the root mean square of the pixels.
     directional : bool, default False
         Whether the crossing densities of four directions are features; they tell orientations
         apart and change when the part is turned.
@@ -160,9 +165,9 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
     >>> transformer = MinkowskiCurves()
     >>> X = transformer.fit_transform(patches)
     >>> X.shape, X.dtype
-    ((5, 78), dtype('float32'))
-    >>> [str(name) for name in transformer.get_feature_names_out()[:3]]
-    ['smooth_2.5_log_std', 'smooth_2.5_log_sigma', 'smooth_2.5_area_h0']
+    ((5, 106), dtype('float32'))
+    >>> [str(name) for name in transformer.get_feature_names_out()[[1, 7, 8]]]
+    ['rough_1.5_log_std', 'smooth_1.5_area_h0', 'smooth_1.5_area_h1']
 
     Whole curves, in physical units:
 
@@ -188,8 +193,9 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
         "contrast": "no_validation",
         "scale_rule": [StrOptions(set(SCALE_RULES))],
         "remove_tilt": ["boolean"],
-        "location_scale": ["boolean", StrOptions({"ratio"})],
+        "location_scale": ["boolean", StrOptions({"scale", "ratio"})],
         "separate_scale": ["boolean"],
+        "roughness": "no_validation",
         "directional": ["boolean"],
         "connectivity": [StrOptions({"mean"}), Options(Integral, {4, 8})],
         "contour_estimator": [StrOptions(set(CONTOUR_ESTIMATORS))],
@@ -211,15 +217,16 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
         level_rule="standard",
         level_range=None,
         raw=False,
-        smooth=(2.5, 3.7),
+        smooth=(1.5, 2, 2.8),
         band=(),
         slope=(),
-        curvature=(2.5, 3.7),
-        contrast=(2.5, 3.7),
+        curvature=(1.5, 2, 2.8),
+        contrast=(1.5, 2, 2.8),
         scale_rule="matched",
         remove_tilt=False,
         location_scale=True,
         separate_scale=True,
+        roughness=(1.5, 3),
         directional=False,
         connectivity="mean",
         contour_estimator="crofton-4",
@@ -247,6 +254,7 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
         self.remove_tilt = remove_tilt
         self.location_scale = location_scale
         self.separate_scale = separate_scale
+        self.roughness = roughness
         self.directional = directional
         self.connectivity = connectivity
         self.contour_estimator = contour_estimator
@@ -345,8 +353,8 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
         Examples
         --------
         >>> from mfeat import MinkowskiCurves
-        >>> MinkowskiCurves().feature_table()[2]
-        Feature(name='smooth_2.5_area_h0', field='smooth', scale=2.5, functional='area', level=None,
+        >>> MinkowskiCurves().feature_table()[7]
+        Feature(name='smooth_1.5_area_h0', field='smooth', scale=1.5, functional='area', level=None,
         unit='1', term=0)
         """
         return self._plan().all_features()

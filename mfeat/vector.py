@@ -17,7 +17,7 @@ from mfeat.counts import (
     index_stack,
     levels_from_top,
 )
-from mfeat.fields import Field, check_scales, derive
+from mfeat.fields import Field, derive, prepared
 from mfeat.functionals import (
     anisotropy_of,
     area_of,
@@ -28,8 +28,9 @@ from mfeat.functionals import (
     per_window,
 )
 from mfeat.levels import FieldStack, PlacedLevels, place_levels, sample_of
-from mfeat.matching import detail_lengths, mean_square_slopes
+from mfeat.matching import mean_square_slopes, roughness
 from mfeat.plan import DIRECTIONS, LENGTH_POWERS, VectorPlan, learned_key
+from mfeat.smoothing import Smoothings, moments_of
 from mfeat.stacks import Collected, Group, Stack, group_patches, valid_fractions
 
 #: Derived fields of up to this many pixels are joined and worked on together.
@@ -91,8 +92,7 @@ class _Counted(NamedTuple):
     windows: np.ndarray
     mean: np.ndarray
     deviation: np.ndarray  # 0 where there is no relief
-    length: np.ndarray  # of detail; 1 where it is not asked for, or without relief
-    log_sigma: np.ndarray | None
+    length: np.ndarray  # correlation length; 1 where it is not asked for, or without relief
 
 
 def vectors(plan: VectorPlan, group: Group, stack: Stack) -> np.ndarray:
@@ -101,14 +101,53 @@ def vectors(plan: VectorPlan, group: Group, stack: Stack) -> np.ndarray:
     An image in one of whose fields no window counts gets NaN for that field.
     """
     out = np.empty((len(stack.values), plan.length))
-    done = [one for part in _joined(plan, group, stack) for one in _counted(plan, group, *part)]
-    _write_moments(plan, {one.field: one for one in done}, out)
+    pixels = pixels_of(plan, stack)
+    _write_scale(plan, pixels, out)
+    fields = derive(plan.fields, pixels, plan.scale_rule)
     alike: dict[int, list[_Counted]] = {}
-    for one in done:
-        alike.setdefault(one.table.shape[-1] - 1, []).append(one)
+    for part in _joined(plan, group, fields):
+        for one in _counted(plan, group, *part):
+            column = plan.columns[one.field]
+            for moment in plan.moments(one.field):
+                number = one.mean if moment == "mean" else one.deviation
+                out[:, column] = np.where(one.windows == 0, np.nan, number)
+                column += 1
+            alike.setdefault(one.table.shape[-1], []).append(one)
     for some in alike.values():
         _write_curves(plan, some, out)
     return out
+
+
+def _write_scale(plan: VectorPlan, pixels: Smoothings, out: np.ndarray) -> None:
+    """Write the numbers that tell the scale of each image: logarithms, all at fixed Gaussians.
+
+    The deviation at the first Gaussian is in the pixels' unit; the others, and gradients and
+    curvatures, are divided by it. The contrast is its share of the root mean square of the pixels.
+    """
+    reference, before = np.empty(0), None
+    for column, (scale, name) in enumerate(plan.scale_features):
+        if scale != before:
+            found = roughness(pixels.at(scale), pixels.valid, pixels.pitch)
+            flat = found[0] <= pixels.error
+            deviation, slope, curvature = (_log(np.where(flat, 0.0, one)) for one in found)
+            if before is None:
+                reference = deviation
+            own = {"log_std": deviation, "log_slope": slope, "log_curvature": curvature}
+            before = scale
+        if name == "log_contrast":
+            mean = moments_of(pixels.centred(), pixels.valid)[0] + pixels.offset
+            number = deviation - np.log(np.hypot(np.exp(deviation), mean))
+        elif name == "log_std" and scale == plan.roughness[0]:
+            number = deviation
+        else:
+            number = np.where(flat, 0.0, own[name] - reference)
+        out[:, column] = number
+
+
+def _log(size: np.ndarray) -> np.ndarray:
+    """Return logarithms, and `LOG_OF_NOTHING` of 0."""
+    some = size > 0.0
+    return np.where(some, np.log(np.where(some, size, 1.0)), LOG_OF_NOTHING)
 
 
 def _counted(
@@ -121,49 +160,25 @@ def _counted(
     if any(other is not values for other in own_levels):
         values = np.repeat(np.stack(own_levels), count, axis=0)
     levels = place_levels(fields, plan.level_rule, values)
-    missing = not fields.valid.all()
-    table, windows = count_stack(fields, levels, missing)
+    table, windows = count_stack(fields, levels, not fields.valid.all())
     lengths = np.ones(len(windows))
     if plan.separate_scale:
         tau = mean_square_slopes(fields.centred, fields.valid, plan.pitch)
-        lengths = detail_lengths(fields.deviation, tau)
+        lengths = _correlation_lengths(fields.deviation, tau)
     for k, field in enumerate(names):
         own = slice(k * count, (k + 1) * count)
-        sigma = None if fields.log_sigma is None else fields.log_sigma[own]
         mean = (fields.offset + fields.mean)[own]
-        yield _Counted(
-            field, table[own], windows[own], mean, fields.deviation[own], lengths[own], sigma
-        )
+        yield _Counted(field, table[own], windows[own], mean, fields.deviation[own], lengths[own])
 
 
-def _write_moments(plan: VectorPlan, done: dict[Field, _Counted], out: np.ndarray) -> None:
-    """Write mean, deviation and scale of each field; NaN where no window counts.
+def _correlation_lengths(deviation: np.ndarray, tau: np.ndarray) -> np.ndarray:
+    """Return s / sqrt(tau), by which Gaussian theory scales curves; 1 for fields without relief.
 
-    Deviations are logarithms relative to the reference, but for its own, and those of contrast,
-    which are pure numbers. A field without relief beside one with relief is as far below it as
-    numbers go.
+    Sources: Rice (1944/45), Adler (1981), Tomita (1986): contour sqrt(tau)/(2 s) exp(-v^2/2), Euler
+    number tau v/((2 pi)^1.5 s^2) exp(-v^2/2) at the level v in standard deviations.
     """
-    logs = {field: _log(one.deviation) for field, one in done.items()}
-    for field, one in done.items():
-        for column, moment in enumerate(plan.moments(field), plan.columns[field]):
-            if moment == "mean":
-                number = one.mean
-            elif moment == "std":
-                number = one.deviation
-            elif moment == "log_length":
-                number = np.log(one.length)
-            elif moment == "log_sigma":
-                number = one.log_sigma
-            elif field == plan.reference or field.family == "contrast":
-                number = logs[field]
-            else:
-                number = logs[field] - logs[plan.reference]
-            out[:, column] = np.where(one.windows == 0, np.nan, number)
-
-
-def _log(deviation: np.ndarray) -> np.ndarray:
-    return np.where(deviation > 0.0, np.log(np.where(deviation > 0.0, deviation, 1.0)),
-                    LOG_OF_NOTHING)  # fmt: skip
+    defined = (deviation > 0.0) & (tau > 0.0)
+    return np.where(defined, deviation, 1.0) / np.sqrt(np.where(defined, tau, 1.0))
 
 
 def _write_curves(plan: VectorPlan, done: list[_Counted], out: np.ndarray) -> None:
@@ -188,7 +203,7 @@ def _write_curves(plan: VectorPlan, done: list[_Counted], out: np.ndarray) -> No
 
 
 def _joined(
-    plan: VectorPlan, group: Group, stack: Stack
+    plan: VectorPlan, group: Group, fields: Iterator[tuple[Field, FieldStack]]
 ) -> Iterator[tuple[list[Field], FieldStack]]:
     """Yield the fields of a stack; few pixels of equal size and number of levels as one stack.
 
@@ -196,22 +211,19 @@ def _joined(
     two calls of three.
     """
     alike: dict[tuple, list[tuple[Field, FieldStack]]] = {}
-    for field, fields in fields_of(plan, stack):
-        if fields.derived and fields.values.size <= JOIN_PIXELS:
+    for field, found in fields:
+        if found.derived and found.values.size <= JOIN_PIXELS:
             number = len(plan.levels_of(field, group.channel_name))
-            alike.setdefault((fields.values.shape, number), []).append((field, fields))
+            alike.setdefault((found.values.shape, number), []).append((field, found))
         else:
-            yield [field], fields
+            yield [field], found
     for parts in alike.values():
-        yield [field for field, _ in parts], FieldStack.join([fields for _, fields in parts])
+        yield [field for field, _ in parts], FieldStack.join([found for _, found in parts])
 
 
-def fields_of(plan: VectorPlan, stack: Stack) -> Iterator[tuple[Field, FieldStack]]:
-    """Yield the fields of a stack, in the order of the plan."""
-    return derive(
-        plan.fields, stack.values, stack.valid,
-        plan.pitch, plan.scale_unit, plan.scale_rule, plan.remove_tilt,
-    )  # fmt: skip
+def pixels_of(plan: VectorPlan, stack: Stack) -> Smoothings:
+    """Return a stack of images, ready to have the fields of a plan derived."""
+    return prepared(stack.values, stack.valid, plan.pitch, plan.scale_unit, plan.remove_tilt)
 
 
 def refusals(stack: Stack, min_valid: float) -> dict[int, str]:
@@ -279,7 +291,7 @@ def samples_of(
     refused: dict[int, str] = {}
     for stack in group.stacks():
         refused |= refusals(stack, min_valid)
-        for field, fields in fields_of(plan, stack):
+        for field, fields in derive(plan.fields, pixels_of(plan, stack), plan.scale_rule):
             if stack.valid is not None:
                 for place in stack.places[valid_fractions(fields.valid) == 0.0].tolist():
                     refused.setdefault(place, NO_WINDOW)
@@ -295,9 +307,7 @@ def groups_of(plan: VectorPlan, patches: Collected) -> list[Group]:
     groups = group_patches(patches, plan.table_size)
     for group in groups:
         try:
-            check_scales(
-                plan.fields, group.images[0].shape, plan.pitch, plan.scale_unit, plan.scale_rule
-            )
+            plan.check_scales(group.images[0].shape)
         except ValueError as error:
             raise ValueError(f"{group.name(0)}: {error}") from None
     return groups
