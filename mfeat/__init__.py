@@ -2,6 +2,8 @@
 
 __version__ = "0.1.0"  # before the imports: tables and their workers carry it
 
+from mfeat.compare import compare
+from mfeat.comparison import Comparison, read_comparison
 from mfeat.counts import PatternCounts, count_patterns
 from mfeat.curves import Curves, minkowski_curves
 from mfeat.dump import dump
@@ -10,13 +12,16 @@ from mfeat.table import FeatureTable, read_table
 from mfeat.transformer import MinkowskiCurves
 
 __all__ = [
+    "Comparison",
     "Curves",
     "FeatureTable",
     "MinkowskiCurves",
     "PatchGrid",
     "PatternCounts",
+    "compare",
     "count_patterns",
     "dump",
     "minkowski_curves",
+    "read_comparison",
     "read_table",
 ]

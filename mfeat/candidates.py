@@ -66,6 +66,8 @@ def candidates_of(descriptors: Any, own: MinkowskiCurves) -> dict[str, Any]:
         for name in found:
             if not isinstance(name, str) or not name:
                 raise TypeError(f"names of descriptors must be text; got {name!r}")
+            if name.startswith(f"{OWN}: "):
+                raise ValueError(f"{name!r} is a name that variants of an ablation have; rename it")
     elif isinstance(descriptors, Sequence) and not isinstance(descriptors, str):
         if len(set(map(str, descriptors))) < len(descriptors):
             raise ValueError(f"descriptors holds a name twice: {list(descriptors)!r}")

@@ -14,6 +14,10 @@ from pathlib import Path
 from typing import Any
 
 from mfeat import __version__, demo
+from mfeat.candidates import CLASSIFIERS, OWN
+from mfeat.compare import compare
+from mfeat.conditions import CONDITIONS
+from mfeat.descriptors import DESCRIPTORS
 from mfeat.dump import RejectsFound, dump
 from mfeat.estimate import estimate
 from mfeat.images import MAX_PIXELS
@@ -28,8 +32,10 @@ from mfeat.options import (
 )
 from mfeat.parts import InputChanged
 from mfeat.patches import EDGE_RULES, LABEL_RULES
+from mfeat.report import REPORT_HTML, verdict
 from mfeat.storage import OutputInUse
 from mfeat.transformer import MinkowskiCurves
+from mfeat.trials import PROTOCOLS
 from mfeat.workers import BACKENDS
 
 
@@ -56,6 +62,7 @@ def build_parser() -> argparse.ArgumentParser:
     write.add_argument("--seed", type=int, default=0, help="seed of the first panel (default 0)")
     write.set_defaults(work=_demo)
     _add_dump(commands)
+    _add_compare(commands)
     return parser
 
 
@@ -86,40 +93,7 @@ def _add_dump(commands: Any) -> None:
         choices=EDGE_RULES,
         help="drop what the grid does not reach, or shift the last patches (default drop)",
     )
-    what.add_argument(
-        "--regions",
-        choices=REGIONS,
-        help="a region of the manifest is one patch, or has a grid inside (default patch)",
-    )
-    what.add_argument(
-        "--label-from",
-        choices=LABELS_FROM,
-        help="manifest: its column label (taken anyway); folder: the name of the folder that an "
-        "image lies in; truth: images of labels",
-    )
-    what.add_argument(
-        "--truth-rule",
-        choices=LABEL_RULES,
-        help="label of a patch from an image of labels (default majority)",
-    )
-    what.add_argument(
-        "--channel",
-        type=_channel,
-        metavar="NAME",
-        help="luminance, red, green, blue, or a number (default luminance)",
-    )
-    what.add_argument(
-        "--missing-value",
-        type=float,
-        metavar="V",
-        help="pixels of this value are missing, as NaN are",
-    )
-    what.add_argument(
-        "--max-pixels",
-        type=int,
-        metavar="N",
-        help=f"reject images that need more pixels decoded at once (default {MAX_PIXELS})",
-    )
+    _add_reading(what)
     what.add_argument(
         "--set",
         action="append",
@@ -152,6 +126,130 @@ def _add_dump(commands: Any) -> None:
         help="start anew; the old table stays until the new one is complete",
     )
     table.set_defaults(work=_dump)
+
+
+def _add_reading(group: Any) -> None:
+    """Add the flags that say how images are read and labelled."""
+    group.add_argument(
+        "--regions",
+        choices=REGIONS,
+        help="a region of the manifest is one patch, or has a grid inside (default patch)",
+    )
+    group.add_argument(
+        "--label-from",
+        choices=LABELS_FROM,
+        help="manifest: its column label (taken anyway); folder: the name of the folder that an "
+        "image lies in; truth: images of labels",
+    )
+    group.add_argument(
+        "--truth-rule",
+        choices=LABEL_RULES,
+        help="label of a patch from an image of labels (default majority)",
+    )
+    group.add_argument(
+        "--channel",
+        type=_channel,
+        metavar="NAME",
+        help="luminance, red, green, blue, or a number (default luminance)",
+    )
+    group.add_argument(
+        "--missing-value",
+        type=float,
+        metavar="V",
+        help="pixels of this value are missing, as NaN are",
+    )
+    group.add_argument(
+        "--max-pixels",
+        type=int,
+        metavar="N",
+        help=f"reject images that need more pixels decoded at once (default {MAX_PIXELS})",
+    )
+
+
+def _add_compare(commands: Any) -> None:
+    table = commands.add_parser(
+        "compare",
+        help="compare descriptors on your own images, under changes of light, focus and more",
+        description="Compare texture descriptors: on images each of which is a class, or on "
+        "labelled patches. Writes every single result, and a report with charts; prints the "
+        "report. An interrupted run goes on when the same command is given again.",
+    )
+    table.add_argument(
+        "source",
+        metavar="SOURCE",
+        help="a folder, a quoted pattern, a manifest (see mfeat dump), or a table made by dump",
+    )
+    table.add_argument("--out", metavar="DIR", required=True, help="folder or URI of the results")
+    what = table.add_argument_group("what to compare")
+    what.add_argument(
+        "--descriptor",
+        action="append",
+        metavar="NAME",
+        dest="descriptors",
+        help=f"{OWN}, {', '.join(DESCRIPTORS)}, or an import path package.module:name; again for "
+        "each (default: all). The first is the one that the others are compared with",
+    )
+    what.add_argument(
+        "--ablation",
+        action="store_true",
+        help=f"variants of {OWN}, too: each part left out, alone, or done otherwise",
+    )
+    what.add_argument(
+        "--condition",
+        action="append",
+        choices=tuple(CONDITIONS),
+        dest="conditions",
+        help="change of the test patches; again for each (default: all that suit the images)",
+    )
+    what.add_argument(
+        "--classifier",
+        action="append",
+        choices=tuple(CLASSIFIERS),
+        dest="classifiers",
+        help="again for each (default: both)",
+    )
+    what.add_argument(
+        "--protocol",
+        choices=PROTOCOLS,
+        help="halves: every image is a class, one half trains; groups: labelled patches, no group "
+        "on both sides (default: groups where there are labels)",
+    )
+    what.add_argument(
+        "--size",
+        type=_sides,
+        action="append",
+        metavar="N",
+        help="side of a patch, or ROWSxCOLUMNS; again for each (default 64)",
+    )
+    what.add_argument(
+        "--train",
+        type=int,
+        action="append",
+        metavar="N",
+        help="training patches a class; again for each (default: those of 2, 4, 8, 16 that all "
+        "classes have)",
+    )
+    what.add_argument("--test", type=int, metavar="N", help="test patches a class (default 16)")
+    what.add_argument(
+        "--patches", type=int, metavar="N", help="labelled patches a class at most (default 100)"
+    )
+    what.add_argument("--repeats", type=int, metavar="N", help="random repeats (default 10)")
+    what.add_argument("--folds", type=int, metavar="N", help="folds of groups (default 5)")
+    what.add_argument("--seed", type=int, metavar="N", help="of all that is random (default 0)")
+    what.add_argument(
+        "--set",
+        action="append",
+        default=[],
+        metavar="NAME=VALUE",
+        dest="features",
+        help=f"a parameter of {OWN}, e.g. --set levels=32",
+    )
+    _add_reading(table.add_argument_group("how images are read"))
+    how = table.add_argument_group("how to run")
+    how.add_argument("--jobs", type=int, metavar="N", help="workers (default: all processors)")
+    how.add_argument("--backend", choices=BACKENDS, help="threads or processes (default loky)")
+    how.add_argument("--fresh", action="store_true", help="start anew, in place of what DIR holds")
+    table.set_defaults(work=_compare)
 
 
 def _sides(text: str) -> int | tuple[int, ...]:
@@ -223,6 +321,33 @@ def _dump(options: argparse.Namespace) -> int:
     again = "the same command" + (" without --fresh" if options.fresh else "")
     kept = f"what is finished is kept in {options.out}; {again} goes on from there"
     return _run("dump", run, "is complete", kept)
+
+
+#: Flags of `compare` that are parameters of the same name.
+_COMPARED = (
+    *("descriptors", "conditions", "classifiers", "protocol", "size", "train", "test", "patches"),
+    *("repeats", "folds", "seed", "regions", "label_from", "truth_rule", "channel"),
+    *("missing_value", "max_pixels", "jobs", "backend"),
+)
+
+
+def _compare(options: argparse.Namespace) -> int:
+    def run() -> str:
+        given = {name: getattr(options, name) for name in _COMPARED}
+        arguments = {name: value for name, value in given.items() if value is not None}
+        if options.features:
+            features = dict(feature_value(text) for text in options.features)
+            arguments["transformer"] = with_features(MinkowskiCurves(), features, "--set")
+        if "" not in sys.path:
+            sys.path.insert(0, "")  # modules of the current folder, for import paths
+        found = compare(
+            options.source, options.out, ablation=options.ablation, fresh=options.fresh, **arguments
+        )
+        print(f"mfeat compare: {verdict(found)}", file=sys.stderr)
+        return f"{found.out}/{REPORT_HTML}"
+
+    kept = f"what is finished is kept in {options.out}; the same command goes on from there"
+    return _run("compare", run, "is complete", kept)
 
 
 def _printable(text: str) -> str:

@@ -13,8 +13,16 @@ from joblib import Parallel, delayed
 from tqdm import tqdm
 
 from mfeat import __version__, _checks, locations, storage
-from mfeat.candidates import OWN, candidates_of, classifiers_of
-from mfeat.comparison import COMPARISON, COSTS, RESULTS, Comparison, read_comparison
+from mfeat.candidates import candidates_of, classifiers_of
+from mfeat.comparison import (
+    COMPARISON,
+    COSTS,
+    RESULTS,
+    VARIANT,
+    Comparison,
+    is_variant,
+    read_comparison,
+)
 from mfeat.conditions import conditions_for
 from mfeat.contest import RESULTS_SCHEMA, Contest, results_of
 from mfeat.costs import measure_costs
@@ -82,7 +90,8 @@ def compare(
         What "minkowski" means; default ``MinkowskiCurves()``, or the transformer of the table.
     ablation : bool, default False
         Whether variants of `transformer` take part, too: with each functional, field family,
-        level rule and part of the vector left out or alone.
+        level rule and part of the vector left out, alone, or done otherwise; at the largest
+        training size.
     protocol : {"halves", "groups"}, optional
         "halves": every image is a class; patches of one half train, those of the other are tested.
         "groups": labelled patches, no group on both sides. Default "groups" where there are labels.
@@ -162,7 +171,7 @@ def compare(
     sources, settings = _inputs(source, place, transformer, reading)
     chosen = candidates_of(descriptors, settings.transformer)
     if ablation:
-        chosen |= {f"{OWN}: {k}": v for k, v in variants_of(settings.transformer).items()}
+        chosen |= {f"{VARIANT}{k}": v for k, v in variants_of(settings.transformer).items()}
     plan = _Plan(
         sources=sources,
         settings=settings,
@@ -466,6 +475,6 @@ def _write_results(
 ) -> None:
     """Do what a worker does: one candidate at one size."""
     contest = replace(contest, scenes=unpacked(arrays))
-    results = results_of(name, transformer, contest)
+    results = results_of(name, transformer, contest, largest_only=is_variant(name))
     with storage.output(location).writing(f"{_RUN}/{part}") as stream:
         pq.write_table(results.cast(RESULTS_SCHEMA), stream, compression="zstd")

@@ -16,8 +16,16 @@ RESULTS = "results.parquet"
 COSTS = "costs.parquet"
 COMPARISON = "comparison.json"
 
+#: What the names of variants in an ablation begin with.
+VARIANT = "minkowski: "
+
 #: Name of the mean over all conditions, beside those of conditions.
 ALL = "mean"
+
+
+def is_variant(name: str) -> bool:
+    """Tell whether a descriptor is a variant in an ablation."""
+    return name.startswith(VARIANT)
 
 
 class Paired(NamedTuple):
@@ -66,12 +74,12 @@ class Comparison:
     @property
     def rivals(self) -> list[str]:
         """Names without the variants of an ablation."""
-        return [name for name in self.descriptors if ": " not in name]
+        return [name for name in self.descriptors if not is_variant(name)]
 
     @property
     def variants(self) -> list[str]:
         """Names of the variants of an ablation."""
-        return [name for name in self.descriptors if ": " in name]
+        return [name for name in self.descriptors if is_variant(name)]
 
     @property
     def reference(self) -> str:

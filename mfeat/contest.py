@@ -82,8 +82,10 @@ class Failed(Exception):
     """A candidate could not give features; the message says why."""
 
 
-def results_of(name: str, transformer: Any, contest: Contest) -> pa.Table:
-    """Return all single results of one candidate.
+def results_of(
+    name: str, transformer: Any, contest: Contest, *, largest_only: bool = False
+) -> pa.Table:
+    """Return all single results of one candidate, or those of the largest training size only.
 
     Whatever goes wrong in it is a result too: rows without accuracy, with the failure.
     """
@@ -92,7 +94,7 @@ def results_of(name: str, transformer: Any, contest: Contest) -> pa.Table:
     with threadpool_limits(1):  # workers share the processors already
         for split in contest.splits:
             before = 0
-            for size in contest.train_sizes:
+            for size in contest.train_sizes[-1:] if largest_only else contest.train_sizes:
                 train = split.training(size)
                 if len(train) > before:  # else no class has more patches than before
                     rows += _rows_of_split(features, contest, split, train, size)

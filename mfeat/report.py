@@ -8,7 +8,7 @@ from typing import Any
 import numpy as np
 
 from mfeat import __version__, charts
-from mfeat.comparison import ALL, Comparison
+from mfeat.comparison import ALL, VARIANT, Comparison
 from mfeat.conditions import CONDITIONS
 from mfeat.pages import html_page, markdown
 from mfeat.significance import Mean
@@ -17,9 +17,9 @@ REPORT_MARKDOWN = "report.md"
 REPORT_HTML = "report.html"
 
 CAUTION = (
-    "A classifier's verdict is an aid. Accuracies hold for these images and these changes; validate "
-    "on your own parts and your own measuring system. Safety-related acceptance follows the "
-    "applicable standards and qualified people."
+    "A classifier's verdict is an aid. Accuracies hold for these images and these changes; "
+    "validate on your own parts and your own measuring system. Safety-related acceptance follows "
+    "the applicable standards and qualified people."
 )
 
 # Differences with a larger p are called no difference.
@@ -55,7 +55,7 @@ def require_charts() -> None:
 
 def write_report(found: Comparison) -> dict[str, bytes]:
     """Return the files of a report by name: Markdown, HTML, and charts as PNG and SVG."""
-    sections = [make(found) for make in _SECTIONS if make is not None]
+    sections = [make(found) for make in _SECTIONS]
     sections = [section for section in sections if section is not None]
     files: dict[str, bytes] = {}
     for section in sections:
@@ -89,30 +89,39 @@ def _by_mean(found: Comparison, names: list[str]) -> list[str]:
 
 
 def _verdict(found: Comparison) -> Section:
+    return Section("What was found", [_what_was_done(found), verdict(found)])
+
+
+def verdict(found: Comparison) -> str:
+    """Return in words how the reference does against the best of the others."""
     own = found.reference
     others = [name for name in _by_mean(found, found.rivals) if name != own]
-    text = [_what_was_done(found)]
-    tests = found.against_reference(others)
-    for other in others[:1]:
-        mean = next(t for t in tests if (t.descriptor, t.condition) == (other, ALL))
-        ours, theirs = found.accuracy(own).mean, found.accuracy(other).mean
-        if math.isnan(mean.difference.mean):
-            continue
-        ahead = sum(
-            found.accuracy(own, c).mean > np.nanmax([found.accuracy(o, c).mean for o in others])
-            for c in found.conditions
-        )
-        sure = mean.adjusted_p < _LEVEL
-        text.append(
-            f"{own}: {short(ours)} over all conditions; the best other, {other}: {short(theirs)}. "
-            f"The difference is {short(mean.difference.mean)} "
-            f"[{short(mean.difference.low)}, {short(mean.difference.high)}], "
-            + (f"more than luck (p = {mean.adjusted_p:.2g})" if sure else
-               f"which may be luck (p = {mean.adjusted_p:.2g})")
-            + f". Error {short(1 - ours)} against {short(1 - theirs)}; {own} is ahead of all others "
-            f"in {ahead} of {len(found.conditions)} conditions."
-        )  # fmt: skip
-    return Section("What was found", text)
+    ours = found.accuracy(own).mean
+    if math.isnan(ours):
+        return f"{own} failed under some condition; see below."
+    if not others:
+        return f"{own}: {short(ours)} over all conditions."
+    best = others[0]
+    theirs = found.accuracy(best).mean
+    if math.isnan(theirs):
+        return f"{own}: {short(ours)} over all conditions; all others failed under some condition."
+    mean = next(
+        test for test in found.against_reference(others)
+        if (test.descriptor, test.condition) == (best, ALL)
+    )  # fmt: skip
+    ahead = sum(
+        found.accuracy(own, condition).mean
+        > max(np.nan_to_num(found.accuracy(other, condition).mean) for other in others)
+        for condition in found.conditions
+    )
+    sure = "more than luck" if mean.adjusted_p < _LEVEL else "which may be luck"
+    return (
+        f"{own}: {short(ours)} over all conditions; the best other, {best}: {short(theirs)}. The "
+        f"difference is {short(mean.difference.mean)} [{short(mean.difference.low)}, "
+        f"{short(mean.difference.high)}], {sure} (p = {mean.adjusted_p:.2g}). Error "
+        f"{short(1 - ours)} against {short(1 - theirs)}; {own} is ahead of all others in {ahead} "
+        f"of {len(found.conditions)} conditions."
+    )
 
 
 def _what_was_done(found: Comparison) -> str:
@@ -154,7 +163,7 @@ def _conditions(found: Comparison) -> Section:
         ["The shaded band is the interval of the reference."],
         ("accuracy-by-condition", "balanced accuracy of each descriptor under each condition",
          figure),
-        tables + [Table(["condition", "what changes"], [list(a.split(": ", 1)) for a in about])],
+        [*tables, Table(["condition", "what changes"], [list(a.split(": ", 1)) for a in about])],
     )  # fmt: skip
 
 
@@ -258,7 +267,7 @@ def _ablation(found: Comparison) -> Section | None:
     own = found.reference
     tests = {(t.descriptor, t.condition): t for t in found.against_reference(found.variants)}
     names = [n for n in found.variants if not math.isnan(tests[n, ALL].difference.mean)]
-    labels = [name.split(": ", 1)[1] for name in names]
+    labels = [name.removeprefix(VARIANT) for name in names]
     change = [tests[name, ALL].difference for name in names]
     figure = charts.draw_bars(
         labels, *(np.array(side) for side in zip(
@@ -267,7 +276,7 @@ def _ablation(found: Comparison) -> Section | None:
     ) if names else None  # fmt: skip
     rows = [
         [
-            name.split(": ", 1)[1],
+            name.removeprefix(VARIANT),
             *(short(found.accuracy(name, c).mean) for c in (*found.conditions, ALL)),
             "–" if (name, ALL) not in tests or math.isnan(tests[name, ALL].difference.mean)
             else f"{-tests[name, ALL].difference.mean:+.3f}"
