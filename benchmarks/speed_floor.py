@@ -22,8 +22,11 @@ from skimage import measure
 
 from mfeat import MinkowskiCurves, count_patterns, minkowski_curves
 from mfeat.functionals import contour, euler
+from mfeat.transformer import full_curves
 
-RAW_ONLY = {"smooth": (), "band": (), "slope": (), "location_scale": False, "connectivity": 8}
+RAW_ONLY = full_curves() | {
+    "smooth": (), "band": (), "slope": (), "location_scale": False, "connectivity": 8,
+}  # fmt: skip
 
 
 def level_loop(patch: np.ndarray, levels: np.ndarray) -> np.ndarray:

@@ -7,6 +7,9 @@ polynomials (T. Matsubara, Statistics of smoothed cosmic fields in perturbation 
 J. 584 (2003), 1-33). So the area, with 1 - Phi taken off, and the other curves are described by
 their products with the functions h_k(v) = exp(-v^2/2) He_k(v) / sqrt(k!), He_k the probabilists'
 Hermite polynomials: few numbers, each an average over many levels, in place of many noisy ones.
+Products with h_k, which fall off with v as curves do, are not coefficients of the series (those
+would be products with the polynomials, which far, noisy levels rule): neighbours of equal parity
+overlap.
 """
 
 import math

@@ -7,7 +7,7 @@ import numpy as np
 
 from mfeat import _checks
 from mfeat.counts import EDGES, PatternCounts, count_image
-from mfeat.fields import FAMILIES, SCALE_UNITS, Field, derive
+from mfeat.fields import FAMILIES, SCALE_UNITS, Field, check_scales, derive, prepared
 from mfeat.functionals import CONNECTIVITIES, CONTOUR_ESTIMATORS, area, contour, euler
 from mfeat.levels import RULES, level_values, place_levels
 
@@ -101,10 +101,10 @@ def minkowski_curves(
         Connectivity of the Euler number.
     level_range : (float, float), optional
         Range of a number of levels, in the units of the rule; see `mfeat.levels.level_values`.
-    field : {"raw", "smooth", "band", "slope", "curvature"}, default "raw"
+    field : {"raw", "smooth", "band", "slope", "curvature", "contrast"}, default "raw"
         The field whose level sets are measured; see `mfeat.fields`.
     scale : float, default 0.0
-        Gaussian scale of the field; must be 0 for "raw" and > 0 for "smooth" and "band".
+        Gaussian scale of the field; must be 0 for "raw", > 0 for "smooth", "band", "contrast".
     scale_unit : {"pitch", "length"}, default "pitch"
         Whether `scale` counts pitches or is a length in `unit`.
     remove_tilt : bool, default False
@@ -170,7 +170,9 @@ def minkowski_curves(
     values = _checks.compiled_type(np.asarray(image))[None]
     stack_valid = None if valid is None else valid[None]
     _checks.representable(values, stack_valid, lambda _: "image")
-    [(_, fields)] = derive((chosen,), values, stack_valid, pitch, scale_unit, remove_tilt)
+    check_scales((chosen,), image.shape, pitch, scale_unit, "fixed")
+    pixels = prepared(values, stack_valid, pitch, scale_unit, remove_tilt)
+    [(_, fields)] = derive((chosen,), pixels, "fixed")
     placed = place_levels(fields, level_rule, values_of_rule)
     counts = count_image(
         fields.values[0],
@@ -205,14 +207,14 @@ def _field(family: str, scale: float) -> Field:
             raise ValueError(f'scale must be 0 for field "raw"; got {scale!r}. Use field="smooth"')
         return Field("raw")
     number = _checks.real("scale", scale, minimum=0.0) + 0.0
-    if number == 0.0 and family in ("smooth", "band"):
+    if number == 0.0 and family in ("smooth", "band", "contrast"):
         raise ValueError(f'scale must be > 0 for field "{family}"; got {scale!r}')
     return Field(family, number)
 
 
 def _units(family: str, edges: str, unit: str, value_unit: str) -> dict[str, str]:
     value = value_unit or "1"
-    power = {"slope": f"{value}/{unit}", "curvature": f"{value}/{unit}^2"}
+    power = {"slope": f"{value}/{unit}", "curvature": f"{value}/{unit}^2", "contrast": "1"}
     totals = {"area": f"{unit}^2", "contour": unit, "euler": "1"}
     per_area = {"area": "1", "contour": f"1/{unit}", "euler": f"1/{unit}^2"}
     return {"levels": power.get(family, value)} | (totals if edges == "framed" else per_area)

@@ -134,8 +134,8 @@ def dump(
     ...         noise = np.random.default_rng(k).normal(size=(128, 192))
     ...         np.save(f"{folder}/noise{k}.npy", noise)
     ...     summary = dump(f"{folder}/*.npy", f"{folder}/table", size=64, jobs=1)
-    >>> summary.patches, summary.features, summary.rejects
-    (12, 395, 0)
+    >>> summary.patches, summary.rejects
+    (12, 0)
     """
     started = time.monotonic()
     settings = dump_settings(

@@ -142,8 +142,8 @@ def estimate(
     >>> with tempfile.TemporaryDirectory() as folder:
     ...     np.save(f"{folder}/noise.npy", np.random.default_rng(0).normal(size=(128, 128)))
     ...     found = estimate(folder, dump_settings(size=64), jobs=1)
-    >>> found.images, found.patches, found.features
-    (1, 4, 395)
+    >>> found.images, found.patches
+    (1, 4)
     """
     leave_out = locations.absolute(locations.as_location(out, "out")) if out else ""
     sources = list_sources(source, label_from=settings.label_from, leave_out=leave_out)

@@ -44,7 +44,7 @@ ROUNDING = 1e-12
 _SHRINK = {"raw": 0, "smooth": 0, "band": 0, "slope": 1, "curvature": 2, "contrast": 0}
 
 #: By how much a field's stencil can multiply an error of the pixels: the sum of its weights' sizes.
-_GAIN = {
+GAIN = {
     "raw": 1.0, "smooth": 1.0, "band": 2.0, "slope": 2.0 * math.sqrt(2.0), "curvature": 4.0,
     "contrast": 4.0,
 }  # fmt: skip
@@ -155,7 +155,7 @@ def _check_length(
     if shortest < 1.0:
         raise ValueError(
             f"field {field.name}: a length of detail of {field.scale:g} is {shortest:.3g} pixels "
-            f"at pitch {pitch}; white noise has 1 already, so give a longer one. "
+            f"at pitch {pitch}; white noise has 0.63 already, so give a longer one. "
             + _scale_hint(scale_unit)
         )
     longest = field.scale * (BAND_RATIO if field.family == "band" else 1.0)
@@ -240,42 +240,43 @@ def derive(
     -----
     Memory: one float64 array of the stack's size for each distinct smoothing, and five more.
     """
-    values, valid, offset, pitch = pixels.values, pixels.valid, pixels.offset, pixels.pitch
-    shape = values.shape[1:]
-    nothing = np.zeros(len(values))
+    lengths = _lengths(fields)
     source: Smoothings | MatchedSmoothings = pixels
-    if scale_rule == "matched":
-        source = MatchedSmoothings(pixels, _lengths(fields))
-    for field in fields:
-        order = _SHRINK[field.family]
-        rounding = _GAIN[field.family] * pixels.error / min(pitch) ** order
-        if field.family == "raw" and pixels.remove_tilt:
-            yield field, FieldStack(pixels.centred(), valid, offset, rounding)
-        elif field.family == "raw":
-            yield (
-                field,
-                FieldStack(values, valid, offset, rounding, pixels.centred, pixels.constant),
-            )
-        elif field.family == "band":
-            band = source.at(field.scale) - source.at(BAND_RATIO * field.scale)
-            yield field, FieldStack(band, valid, nothing, rounding)
-        elif field.family == "smooth":
-            smooth = source.at(field.scale)
-            yield field, FieldStack(smooth, valid, offset, rounding)
-        elif field.family == "contrast":
-            window = CONTRAST_WINDOW[scale_rule] * field.scale
-            contrast, rounding = _contrast(pixels, source.at(field.scale), valid, window, rounding)
-            yield field, FieldStack(contrast, valid, nothing, rounding)
-        else:
-            smaller = (len(values), shape[0] - order, shape[1] - order)
-            derived, defined = np.empty(smaller), np.empty(smaller, dtype=np.uint8)
-            by_kernel = (
-                _field_kernels.slope_stack
-                if field.family == "slope"
-                else _field_kernels.curvature_stack
-            )
-            by_kernel(source.at(field.scale), valid, pitch[0], pitch[1], derived, defined)
-            yield field, FieldStack(derived, defined, nothing, rounding)
+    if scale_rule == "matched" and lengths:
+        source = MatchedSmoothings(pixels, lengths)
+    for field in fields:  # in a function of its own, so that no field outlives its turn
+        yield field, _derived(field, pixels, source, scale_rule)
+
+
+def _derived(
+    field: Field, pixels: Smoothings, source: Smoothings | MatchedSmoothings, scale_rule: str
+) -> FieldStack:
+    """Return one field of a stack."""
+    valid, offset, pitch = pixels.valid, pixels.offset, pixels.pitch
+    nothing = np.zeros(len(offset))
+    order = _SHRINK[field.family]
+    rounding = GAIN[field.family] * pixels.error / min(pitch) ** order
+    if field.family == "raw" and pixels.remove_tilt:
+        return FieldStack(pixels.centred(), valid, offset, rounding)
+    if field.family == "raw":
+        return FieldStack(pixels.values, valid, offset, rounding, pixels.centred, pixels.constant)
+    smooth = source.at(field.scale)
+    if field.family == "smooth":
+        return FieldStack(smooth, valid, offset, rounding)
+    if field.family == "band":
+        return FieldStack(smooth - source.at(BAND_RATIO * field.scale), valid, nothing, rounding)
+    if field.family == "contrast":
+        window = CONTRAST_WINDOW[scale_rule] * field.scale
+        contrast, rounding = _contrast(pixels, smooth, window, rounding)
+        return FieldStack(contrast, valid, nothing, rounding)
+    count, rows, cols = smooth.shape
+    derived = np.empty((count, rows - order, cols - order))
+    defined = np.empty(derived.shape, dtype=np.uint8)
+    by_kernel = (
+        _field_kernels.slope_stack if field.family == "slope" else _field_kernels.curvature_stack
+    )
+    by_kernel(smooth, valid, pitch[0], pitch[1], derived, defined)
+    return FieldStack(derived, defined, nothing, rounding)
 
 
 def _lengths(fields: tuple[Field, ...]) -> tuple[float, ...]:
@@ -286,19 +287,19 @@ def _lengths(fields: tuple[Field, ...]) -> tuple[float, ...]:
 
 
 def _contrast(
-    pixels: "Smoothings", smooth: np.ndarray, valid: np.ndarray, window: float, rounding: np.ndarray
+    pixels: Smoothings, smooth: np.ndarray, window: float, rounding: np.ndarray
 ) -> tuple[np.ndarray, np.ndarray]:
     """Return (field - local mean) / local deviation of a stack, and a bound of its rounding.
 
     Local moments are weighted by a Gaussian window. The floor is a share of the deviation of the
     whole field; a flat field gives zeros.
     """
+    valid = pixels.valid
     mean, deviation = moments_of(smooth, valid)
     centred = smooth - mean[:, None, None]  # so that squares lose no digits
     if pixels.missing:
         centred[valid == 0] = 0.0
-    means = pixels.smoothed(centred, window)
-    squares = pixels.smoothed(np.square(centred), window)
+    means, squares = pixels.smoothed(window, centred, np.square(centred))
     relief = deviation > rounding
     floors = np.where(relief, CONTRAST_FLOOR * deviation, 0.0)
     _field_kernels.contrast_stack(centred, means, squares, valid, floors**2)

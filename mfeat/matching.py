@@ -21,7 +21,10 @@ from mfeat.smoothing import TRUNCATE, Smoothings, moments_of, sigma_pixels
 
 #: Gaussians that are tried, in pitches (of rectangular pixels: the geometric mean). Between two of
 #: them the right one is interpolated.
-LADDER = (0.0, 0.6, 0.8, 1.1, 1.5, 2.1, 2.9, 4.0, 5.6, 8.0, 11.0, 16.0)
+LADDER = (
+    *(0.0, 0.6, 0.8, 1.1, 1.5, 2.1, 2.9, 4.0, 5.6, 8.0, 11.0, 16.0),
+    *(22.0, 32.0, 45.0, 64.0, 90.0, 128.0, 181.0, 256.0, 362.0, 512.0),
+)
 
 #: Gaussians narrower than this many pixels leave pixels as they are (exp(-8) = 3e-4 at a
 #: neighbour).
@@ -118,13 +121,14 @@ class MatchedSmoothings:
 
     def __init__(self, pixels: Smoothings, lengths: tuple[float, ...]):
         self._pixels = pixels
-        shape = pixels.valid.shape
+        count, *sides = pixels.valid.shape
         self._unit = 1.0 if pixels.scale_unit == "pitch" else math.sqrt(math.prod(pixels.pitch))
+        per_pitch = sigma_pixels(1.0, pixels.pitch, "pitch")
         self._sigmas = matched_sigmas(
             tuple(length / self._unit for length in lengths),
             self._measured,
-            shape[0],
-            WIDEST_GAUSSIAN * min(shape[1:]),
+            count,
+            WIDEST_GAUSSIAN * min(side / one for side, one in zip(sides, per_pitch, strict=True)),
         )
         self._done: dict[float, np.ndarray] = {}
 
@@ -134,7 +138,7 @@ class MatchedSmoothings:
         length = math.sqrt(math.prod(pixels.pitch))
         smooth = pixels.centred()
         if sigma > 0.0:
-            smooth = pixels.smoothed(smooth, sigma * self._unit)
+            [smooth] = pixels.smoothed(sigma * self._unit, smooth)
         deviation, slope, curvature = roughness(smooth, pixels.valid, pixels.pitch)
         flat = (deviation <= pixels.error) | (slope == 0.0) | (curvature == 0.0)
         return np.where(flat, _NO_LENGTH, slope / np.where(flat, 1.0, curvature) / length)

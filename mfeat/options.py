@@ -11,6 +11,7 @@ from typing import Any
 import numpy as np
 
 from mfeat import _checks, locations
+from mfeat.basis import LEVEL_RANGE
 from mfeat.images import MAX_PIXELS, check_channel
 from mfeat.levels import DEFAULT_RANGES
 from mfeat.patches import LABEL_RULES, PatchGrid
@@ -128,11 +129,11 @@ def dump_settings(
 
 
 def _ranges_in_use(
-    levels: Any, level_rule: str, level_range: dict[str, Any], **_: Any
+    levels: Any, level_rule: str, level_range: dict[str, Any], basis: str, **_: Any
 ) -> dict[str, Any]:
     """Return the ranges of families whose levels are a number; TOML has no word for None."""
     counts = levels if isinstance(levels, dict) else dict.fromkeys(level_range, levels)
-    default = list(DEFAULT_RANGES.get(level_rule, ()))
+    default = list(LEVEL_RANGE if basis == "hermite" else DEFAULT_RANGES.get(level_rule, ()))
     return {
         family: default if given is None else given
         for family, given in level_range.items()

@@ -139,6 +139,11 @@ class VectorPlan:
             return self.terms[functional]
         return len(self.level_values[field.name])
 
+    def _terms_in_use(self) -> dict[str, int] | None:
+        if self.basis != "hermite":
+            return None
+        return {name: self.terms[name] for name in self.level_functionals()}
+
     def levels_of(self, field: Field, channel: str | None) -> np.ndarray:
         """Return the levels to place on a field of a channel: learned ones where there are some."""
         if self.learned is not None:
@@ -218,9 +223,9 @@ class VectorPlan:
             "levels": {name: values.tolist() for name, values in self.level_values.items()},
             "location_scale": self.location_scale,
             "separate_scale": self.separate_scale,
-            "roughness": list(self.roughness),
+            "roughness": list(self.roughness) if self.scale_features else None,
             "basis": self.basis,
-            "terms": dict(self.terms) if self.basis == "hermite" else None,
+            "terms": self._terms_in_use(),
             "connectivity": self.connectivity,
             "contour_estimator": self.contour_estimator,
             "pitch": list(self.pitch),

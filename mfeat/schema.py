@@ -15,7 +15,7 @@ import pyarrow.parquet as pq
 from mfeat import __version__
 from mfeat.plan import canonical_sha256
 from mfeat.settings import resolve
-from mfeat.transformer import MinkowskiCurves
+from mfeat.transformer import MinkowskiCurves, full_curves
 
 #: Version of the layout of tables; raised when older software could misread one.
 TABLE_VERSION = 1
@@ -61,8 +61,11 @@ def transformer_record(transformer: MinkowskiCurves, per_image_pitch: bool) -> d
 
 
 def restored(record: dict[str, Any]) -> MinkowskiCurves:
-    """Return the transformer of a record."""
-    transformer = MinkowskiCurves(**record["parameters"])
+    """Return the transformer of a record.
+
+    Tables from before some parameter existed hold whole curves: `full_curves` has its old sense.
+    """
+    transformer = MinkowskiCurves(**(full_curves() | record["parameters"]))
     if record["learned_levels"] is not None:
         learned = record["learned_levels"].items()
         transformer.levels_ = {key: np.array(values) for key, values in learned}

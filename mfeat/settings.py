@@ -91,13 +91,19 @@ def _resolve(estimator: Any) -> VectorPlan:
             family: level_values(
                 _of_family("levels", estimator.levels, family),
                 estimator.level_rule,
-                _range(estimator, _range_of_family(estimator, family)),
+                _range(
+                    estimator,
+                    _of_family("levels", estimator.levels, family),
+                    _range_of_family(estimator, family),
+                ),
             )
             for family in families
         }
     else:  # one array for all, by which `vector` knows that they are alike
         shared = level_values(
-            estimator.levels, estimator.level_rule, _range(estimator, estimator.level_range)
+            estimator.levels,
+            estimator.level_rule,
+            _range(estimator, estimator.levels, estimator.level_range),
         )
         per_family = dict.fromkeys(families, shared)
     plan = VectorPlan(
@@ -160,9 +166,9 @@ def _terms(estimator: Any) -> dict[str, int]:
     return found | {f"crossings_{direction}": found["contour"] for direction in DIRECTIONS}
 
 
-def _range(estimator: Any, given: Any) -> Any:
+def _range(estimator: Any, levels: Any, given: Any) -> Any:
     """Return a range of levels; Hermite functions need a wider one where none is given."""
-    if given is None and estimator.basis == "hermite" and _is_number(estimator.levels):
+    if given is None and estimator.basis == "hermite" and _is_number(levels):
         return LEVEL_RANGE
     return given
 
@@ -212,8 +218,7 @@ def _channels(given: Any) -> tuple[str, ...] | None:
 def _range_of_family(estimator: Any, family: str) -> Any:
     """Return the range of a family; levels that are given themselves need no entry."""
     ranges, levels = estimator.level_range, _of_family("levels", estimator.levels, family)
-    explicit = not isinstance(levels, int | np.integer | float | np.floating)
-    if isinstance(ranges, dict) and explicit:
+    if isinstance(ranges, dict) and not _is_number(levels):
         ranges = {family: None} | ranges
     return _of_family("level_range", ranges, family)
 

@@ -84,7 +84,6 @@ class Smoothings:
         self.scale_unit = scale_unit
         self.remove_tilt = remove_tilt
         self._done: dict[float, np.ndarray] = {}
-        self._supports: dict[float, np.ndarray] = {}
 
     def centred(self) -> np.ndarray:
         """Return the images minus their offsets, float64, zero where pixels are missing.
@@ -105,17 +104,17 @@ class Smoothings:
         if scale == 0.0:
             return self.centred()
         if scale not in self._done:
-            self._done[scale] = self.smoothed(self.centred(), scale)
+            [self._done[scale]] = self.smoothed(scale, self.centred())
         return self._done[scale]
 
-    def smoothed(self, stack: np.ndarray, scale: float) -> np.ndarray:
-        """Return a stack smoothed at a scale, over missing pixels by normalised convolution."""
-        smoothed = self._smooth(stack, scale)
+    def smoothed(self, scale: float, *stacks: np.ndarray) -> list[np.ndarray]:
+        """Return stacks smoothed at a scale, over missing pixels by normalised convolution."""
+        found = [self._smooth(stack, scale) for stack in stacks]
         if self.missing:
-            if scale not in self._supports:
-                self._supports[scale] = self._smooth(self.valid.astype(np.float64), scale)
-            _field_kernels.normalise_stack(smoothed, self._supports[scale], self.valid)
-        return smoothed
+            support = self._smooth(self.valid.astype(np.float64), scale)
+            for smoothed in found:
+                _field_kernels.normalise_stack(smoothed, support, self.valid)
+        return found
 
     def _smooth(self, stack: np.ndarray, scale: float) -> np.ndarray:
         sigma_rows, sigma_cols = sigma_pixels(scale, self.pitch, self.scale_unit)

@@ -152,7 +152,7 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
     Apart from rule "fitted", nothing is learned, and `transform` works without `fit`.
 
     Memory beyond X and the result, with the default settings: about 40 MB a worker (patches are
-    taken in groups of some 260,000 pixels, fewer where levels are many), or some 80 bytes a pixel
+    taken in groups of some 260,000 pixels, fewer where levels are many), or some 105 bytes a pixel
     of the largest patch if that is more, and some 400 bytes a patch (1000 if it is masked). Each
     further scale adds 8 bytes a pixel of a group, each level and field some hundred bytes. `fit`
     with rule "fitted" keeps half a million values of each field, or 16 a patch if that is more.
@@ -164,10 +164,10 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
     >>> patches = np.random.default_rng(0).normal(size=(5, 64, 64))
     >>> transformer = MinkowskiCurves()
     >>> X = transformer.fit_transform(patches)
-    >>> X.shape, X.dtype
-    ((5, 106), dtype('float32'))
+    >>> len(X), X.dtype
+    (5, dtype('float32'))
     >>> [str(name) for name in transformer.get_feature_names_out()[[1, 7, 8]]]
-    ['rough_1.5_log_std', 'smooth_1.5_area_h0', 'smooth_1.5_area_h1']
+    ['rough_..._log_std', 'smooth_..._area_h0', 'smooth_..._area_h1']
 
     Whole curves, in physical units:
 
@@ -353,7 +353,7 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
         Examples
         --------
         >>> from mfeat import MinkowskiCurves
-        >>> MinkowskiCurves().feature_table()[7]
+        >>> MinkowskiCurves(smooth=(1.5,)).feature_table()[7]
         Feature(name='smooth_1.5_area_h0', field='smooth', scale=1.5, functional='area', level=None,
         unit='1', term=0)
         """

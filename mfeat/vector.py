@@ -4,8 +4,9 @@ Everything here works on whole stacks without Python code per pixel or per level
 image the same numbers in whatever stack it comes.
 """
 
+import math
 from collections.abc import Iterator
-from typing import NamedTuple
+from typing import Any, NamedTuple
 
 import numpy as np
 
@@ -17,7 +18,7 @@ from mfeat.counts import (
     index_stack,
     levels_from_top,
 )
-from mfeat.fields import Field, derive, prepared
+from mfeat.fields import GAIN, Field, derive, prepared
 from mfeat.functionals import (
     anisotropy_of,
     area_of,
@@ -92,7 +93,7 @@ class _Counted(NamedTuple):
     windows: np.ndarray
     mean: np.ndarray
     deviation: np.ndarray  # 0 where there is no relief
-    length: np.ndarray  # correlation length; 1 where it is not asked for, or without relief
+    length: np.ndarray  # correlation length; 1 where it is not asked for, a pixel without relief
 
 
 def vectors(plan: VectorPlan, group: Group, stack: Stack) -> np.ndarray:
@@ -104,7 +105,7 @@ def vectors(plan: VectorPlan, group: Group, stack: Stack) -> np.ndarray:
     pixels = pixels_of(plan, stack)
     _write_scale(plan, pixels, out)
     fields = derive(plan.fields, pixels, plan.scale_rule)
-    alike: dict[int, list[_Counted]] = {}
+    alike: dict[Any, list[_Counted]] = {}
     for part in _joined(plan, group, fields):
         for one in _counted(plan, group, *part):
             column = plan.columns[one.field]
@@ -112,7 +113,10 @@ def vectors(plan: VectorPlan, group: Group, stack: Stack) -> np.ndarray:
                 number = one.mean if moment == "mean" else one.deviation
                 out[:, column] = np.where(one.windows == 0, np.nan, number)
                 column += 1
-            alike.setdefault(one.table.shape[-1], []).append(one)
+            levels = plan.level_values[one.field.name]
+            # Hermite functions depend on where the levels are, not only on how many there are
+            key = levels.tobytes() if plan.basis == "hermite" else len(levels)
+            alike.setdefault(key, []).append(one)
     for some in alike.values():
         _write_curves(plan, some, out)
     return out
@@ -124,23 +128,30 @@ def _write_scale(plan: VectorPlan, pixels: Smoothings, out: np.ndarray) -> None:
     The deviation at the first Gaussian is in the pixels' unit; the others, and gradients and
     curvatures, are divided by it. The contrast is its share of the root mean square of the pixels.
     """
-    reference, before = np.empty(0), None
+    first, before = np.empty(0), None
     for column, (scale, name) in enumerate(plan.scale_features):
         if scale != before:
-            found = roughness(pixels.at(scale), pixels.valid, pixels.pitch)
-            flat = found[0] <= pixels.error
-            deviation, slope, curvature = (_log(np.where(flat, 0.0, one)) for one in found)
+            sizes = roughness(pixels.at(scale), pixels.valid, pixels.pitch)
+            # below its rounding error nothing is told from 0, at any gain
+            errors = (GAIN[family] * pixels.error for family in ("smooth", "slope", "curvature"))
+            steps = (1.0, min(pixels.pitch), min(pixels.pitch) ** 2)
+            deviation, slope, curvature = (
+                np.where(size <= error / step, 0.0, size)
+                for size, error, step in zip(sizes, errors, steps, strict=True)
+            )
             if before is None:
-                reference = deviation
+                first = deviation
             own = {"log_std": deviation, "log_slope": slope, "log_curvature": curvature}
             before = scale
         if name == "log_contrast":
             mean = moments_of(pixels.centred(), pixels.valid)[0] + pixels.offset
-            number = deviation - np.log(np.hypot(np.exp(deviation), mean))
+            number = _log_ratio(
+                deviation, np.where(deviation > 0.0, np.hypot(deviation, mean), 1.0)
+            )
         elif name == "log_std" and scale == plan.roughness[0]:
-            number = deviation
+            number = _log(deviation)
         else:
-            number = np.where(flat, 0.0, own[name] - reference)
+            number = _log_ratio(own[name], first)
         out[:, column] = number
 
 
@@ -148,6 +159,13 @@ def _log(size: np.ndarray) -> np.ndarray:
     """Return logarithms, and `LOG_OF_NOTHING` of 0."""
     some = size > 0.0
     return np.where(some, np.log(np.where(some, size, 1.0)), LOG_OF_NOTHING)
+
+
+def _log_ratio(size: np.ndarray, reference: np.ndarray) -> np.ndarray:
+    """Return log(size / reference), which no gain changes, also where one of them is 0."""
+    some, beside = size > 0.0, reference > 0.0
+    one_sided = np.where(some, -LOG_OF_NOTHING, LOG_OF_NOTHING)
+    return np.where(some == beside, _log(size) - _log(reference), one_sided)
 
 
 def _counted(
@@ -164,25 +182,26 @@ def _counted(
     lengths = np.ones(len(windows))
     if plan.separate_scale:
         tau = mean_square_slopes(fields.centred, fields.valid, plan.pitch)
-        lengths = _correlation_lengths(fields.deviation, tau)
+        tau[np.sqrt(tau) <= fields.rounding / min(plan.pitch)] = 0.0  # a checkerboard has none
+        lengths = _correlation_lengths(fields.deviation, tau, math.sqrt(math.prod(plan.pitch)))
     for k, field in enumerate(names):
         own = slice(k * count, (k + 1) * count)
         mean = (fields.offset + fields.mean)[own]
         yield _Counted(field, table[own], windows[own], mean, fields.deviation[own], lengths[own])
 
 
-def _correlation_lengths(deviation: np.ndarray, tau: np.ndarray) -> np.ndarray:
-    """Return s / sqrt(tau), by which Gaussian theory scales curves; 1 for fields without relief.
+def _correlation_lengths(deviation: np.ndarray, tau: np.ndarray, pixel: float) -> np.ndarray:
+    """Return s / sqrt(tau), by which Gaussian theory scales curves; a pixel where one of them is 0.
 
     Sources: Rice (1944/45), Adler (1981), Tomita (1986): contour sqrt(tau)/(2 s) exp(-v^2/2), Euler
     number tau v/((2 pi)^1.5 s^2) exp(-v^2/2) at the level v in standard deviations.
     """
     defined = (deviation > 0.0) & (tau > 0.0)
-    return np.where(defined, deviation, 1.0) / np.sqrt(np.where(defined, tau, 1.0))
+    return np.where(defined, deviation, pixel) / np.sqrt(np.where(defined, tau, 1.0))
 
 
 def _write_curves(plan: VectorPlan, done: list[_Counted], out: np.ndarray) -> None:
-    """Write the curves of fields with equal numbers of levels."""
+    """Write the curves of fields with equal numbers of levels; for "hermite", equal levels."""
     windows = np.stack([one.windows for one in done])
     table = levels_from_top(np.stack([one.table for one in done]))
     found = densities(plan, table, windows)  # (functional, field, image, level)

@@ -18,6 +18,10 @@ from sklearn.preprocessing import StandardScaler
 from mfeat import MinkowskiCurves, dump, read_table
 from mfeat.demo import write_demo
 from mfeat.surfaces import PANEL_CONDITIONS
+from mfeat.transformer import full_curves
+
+#: Fields that coarse form hardly reaches.
+FIELDS = {"raw": False, "smooth": (), **dict.fromkeys(("band", "slope", "curvature"), (1, 2, 4))}
 
 
 def main(argv: list[str] | None = None) -> float:
@@ -48,16 +52,7 @@ def main(argv: list[str] | None = None) -> float:
     summary = dump(
         source,
         options.out / "table",
-        # levelled patches, and fields that coarse form hardly reaches
-        MinkowskiCurves(
-            levels=12,
-            raw=False,
-            smooth=(),
-            band=(1, 2, 4),
-            slope=(1, 2, 4),
-            curvature=(1, 2, 4),
-            remove_tilt=True,
-        ),
+        MinkowskiCurves(**full_curves() | FIELDS, levels=12, remove_tilt=True),
         size=options.size,
         stride=options.stride,
         label_from=label_from,

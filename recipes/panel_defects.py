@@ -23,6 +23,7 @@ from tqdm import tqdm
 
 from mfeat import MinkowskiCurves, PatchGrid
 from mfeat.surfaces import PANEL_CONDITIONS, simulate_panel
+from mfeat.transformer import full_curves
 
 PITCH = 0.01  # mm, so that contours come in 1/mm and Euler numbers in 1/mm^2
 
@@ -65,16 +66,13 @@ def cut_patches(panels: list, size: int, stride: int):
 
 def make_curves() -> MinkowskiCurves:
     """Return the transformer: levelled patches, and fields that coarse form hardly reaches."""
+    fields = {
+        "raw": False,
+        "smooth": (),
+        **dict.fromkeys(("band", "slope", "curvature"), (1, 2, 4)),
+    }
     return MinkowskiCurves(
-        levels=12,
-        raw=False,
-        smooth=(),
-        band=(1, 2, 4),
-        slope=(1, 2, 4),
-        curvature=(1, 2, 4),
-        remove_tilt=True,
-        pitch=PITCH,
-        n_jobs=-1,
+        **full_curves() | fields, levels=12, remove_tilt=True, pitch=PITCH, n_jobs=-1
     )
 
 

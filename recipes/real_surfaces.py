@@ -2,7 +2,7 @@
 
 scikit-image's bundled photographs of brick, grass and gravel: train on patches of the left half,
 test on patches of the right half, as they are and changed after training. Prints the accuracy of
-three settings under each condition. Run `python recipes/real_surfaces.py --help` for the sizes.
+four settings under each condition. Run `python recipes/real_surfaces.py --help` for the sizes.
 """
 
 import argparse
@@ -16,6 +16,7 @@ from sklearn.pipeline import make_pipeline
 from sklearn.preprocessing import StandardScaler
 
 from mfeat import MinkowskiCurves, PatchGrid
+from mfeat.transformer import full_curves
 
 SURFACES = ("brick", "grass", "gravel")
 SIZE = 64
@@ -93,11 +94,15 @@ def main(argv: list[str] | None = None) -> dict[str, dict[str, float]]:
     parser.add_argument("--stride", type=int, default=32, help="step of training patches (32)")
     options = parser.parse_args(argv)
 
+    whole = full_curves()
     settings = {
         "default vector": MinkowskiCurves(n_jobs=-1),
+        "whole curves": MinkowskiCurves(**whole, n_jobs=-1),
         # light changes what the mean tells, blur and noise what the finest fields tell
-        "without mean and deviation": MinkowskiCurves(location_scale=False, n_jobs=-1),
-        "without fields at pixel scale": MinkowskiCurves(raw=False, slope=(2,), n_jobs=-1),
+        "without mean and deviation": MinkowskiCurves(**whole, location_scale=False, n_jobs=-1),
+        "without fields at pixel scale": MinkowskiCurves(
+            **whole | {"raw": False, "slope": (2,)}, n_jobs=-1
+        ),
     }
     X, y = training_patches(options.stride)
     print(

@@ -294,3 +294,74 @@ def gaussian_smooth(
             if denominator[i, j] > 0:
                 out[i, j] = numerator[i, j] / denominator[i, j]
     return out
+
+
+def detail_length(image: Array, valid: Array | None = None, pitch: tuple = (1, 1)) -> float:
+    """Return the root mean square of the gradient over that of minus half the Laplacian.
+
+    The gradient is taken on windows of four valid pixels, as the mean difference of their two
+    columns and of their two rows; the Laplacian at inner pixels with four valid neighbours
+    (Longuet-Higgins 1957; Nayak 1971).
+    """
+    present = valid_pixels(image, valid)
+    rows, cols = image.shape
+    dy, dx = pitch
+    gradients, curvatures = [], []
+    for i in range(rows - 1):
+        for j in range(cols - 1):
+            if present[i : i + 2, j : j + 2].all():
+                (a, b), (c, d) = image[i : i + 2, j : j + 2].tolist()
+                across = ((b - a) + (d - c)) / 2 / dx
+                down = ((c - a) + (d - b)) / 2 / dy
+                gradients.append(across**2 + down**2)
+    for i in range(1, rows - 1):
+        for j in range(1, cols - 1):
+            cross = [(i, j), (i - 1, j), (i + 1, j), (i, j - 1), (i, j + 1)]
+            if all(present[place] for place in cross):
+                here, up, down, left, right = (float(image[place]) for place in cross)
+                laplacian = (up - 2 * here + down) / dy**2 + (left - 2 * here + right) / dx**2
+                curvatures.append((laplacian / 2) ** 2)
+    return math.sqrt(
+        math.fsum(gradients) / len(gradients) / (math.fsum(curvatures) / len(curvatures))
+    )
+
+
+def local_contrast(image: Array, sigma: float, floor: float, valid: Array | None = None) -> Array:
+    """Return (image - local mean) / local standard deviation, in Gaussian windows.
+
+    The square of `floor` times the standard deviation of all valid pixels is added to the local
+    variance. NaN where a pixel is missing.
+    """
+    present = valid_pixels(image, valid)
+    image = np.where(present, image, 0.0)
+    least = (floor * float(image[present].std())) ** 2
+    mean = gaussian_smooth(image, sigma, sigma, present)
+    centred = np.where(present, image - image[present].mean(), 0.0)
+    local = gaussian_smooth(centred, sigma, sigma, present)
+    variance = gaussian_smooth(centred**2, sigma, sigma, present) - local**2
+    out = np.full(image.shape, np.nan)
+    for i, j in np.argwhere(present):
+        out[i, j] = (image[i, j] - mean[i, j]) / math.sqrt(max(variance[i, j], 0.0) + least)
+    return out
+
+
+def hermite_polynomial(k: int, v: float) -> float:
+    """Return He_k(v), by He_(k + 1) = v He_k - k He_(k - 1)."""
+    before, own = 0.0, 1.0
+    for order in range(k):
+        before, own = own, v * own - order * before
+    return own
+
+
+def hermite_products(curve: list[float], levels: list[float], terms: int) -> list[float]:
+    """Return the trapezium rule for the products of a curve with exp(-v^2/2) He_k / sqrt(k!)."""
+    found = []
+    for k in range(terms):
+        values = [
+            y * math.exp(-v * v / 2) * hermite_polynomial(k, v) / math.sqrt(math.factorial(k))
+            for y, v in zip(curve, levels, strict=True)
+        ]
+        pairs = range(len(levels) - 1)
+        steps = [(levels[t + 1] - levels[t]) * (values[t] + values[t + 1]) / 2 for t in pairs]
+        found.append(math.fsum(steps))
+    return found

@@ -18,12 +18,13 @@ import mfeat
 from mfeat import MinkowskiCurves, cli, read_table, storage
 from mfeat.cli import main
 from mfeat.options import KEYS, dump_settings, read_settings
+from mfeat.transformer import full_curves
 
 # A short vector: two moments and three functionals at three levels.
-SHORT = [
-    *("--size", "32", "--jobs", "1", "--set", "levels=3"),
-    *("--set", "smooth=[]", "--set", "band=[]", "--set", "slope=[]"),
-]
+FEW = full_curves() | {"levels": 3, "smooth": (), "band": (), "slope": ()}
+SHORT = ["--size", "32", "--jobs", "1"]
+for name, value in FEW.items():
+    SHORT += ["--set", f"{name}={json.dumps(value)}"]
 
 
 @pytest.fixture
@@ -208,9 +209,15 @@ def test_strict_without_rejects_is_done(scans, table, run):
         (["--set", "levels=0"], "levels must be >= 1 and <= 65535; got 0"),
         (["--set", "smooth=1,2"], "smooth must be a tuple of Gaussian scales, () for none; got "),
         (["--set", "raw=yes"], "'raw' parameter of MinkowskiCurves must be an instance of 'bool'"),
-        (["--set", "level_rule=fitted"], "learns its levels from training patches: call fit"),
+        (
+            ["--set", "basis=levels", "--set", "level_rule=fitted"],
+            "learns its levels from training patches: call fit",
+        ),
         (["--set", 'channels=["a"]'], "transformer has channels, but dump reads one channel"),
-        (["--set", "smooth=[40]"], "field smooth_40: its widest Gaussian has a standard deviation"),
+        (
+            ["--set", "scale_rule=fixed", "--set", "smooth=[40]"],
+            "field smooth_40: its widest Gaussian has a standard deviation",
+        ),
         (["--settings", "none.toml"], "none.toml"),
         (["--backend", "loky", "--cluster", "tcp://x:1"], "and a cluster were given; choose one"),
         (["--label-from", "manifest"], "labels are to come from a manifest's column label; "),

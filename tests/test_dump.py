@@ -20,6 +20,7 @@ import pyarrow.parquet as pq
 import pytest
 import tifffile
 from PIL import Image
+from sklearn.base import clone
 
 from mfeat import MinkowskiCurves, PatchGrid, cutting, dump, parts, planning, read_table
 from mfeat._tiff import _SegmentedPage
@@ -27,8 +28,9 @@ from mfeat.dump import RejectsFound
 from mfeat.images import read_image, scan
 from mfeat.runs import OutputRefused
 from mfeat.sources import natural
+from mfeat.transformer import full_curves
 
-FEW = MinkowskiCurves(levels=3, smooth=(1,), band=(), slope=(0,))
+FEW = MinkowskiCurves(**full_curves() | {"levels": 3, "smooth": (1,), "band": (), "slope": (0,)})
 SIZE = 16
 
 
@@ -190,9 +192,8 @@ def test_the_default_transformer_with_overlap_and_shifted_edges(tmp_path):
 
 def test_double_precision_and_fitted_levels(tmp_path):
     np.save(tmp_path / "a.npy", grey())
-    transformer = MinkowskiCurves(
-        levels=3, level_rule="fitted", smooth=(1,), band=(), slope=(), dtype="float64"
-    ).fit([grey(seed=5), grey(seed=6)])
+    transformer = clone(FEW).set_params(level_rule="fitted", slope=(), dtype="float64")
+    transformer.fit([grey(seed=5), grey(seed=6)])
     dumped(tmp_path / "a.npy", tmp_path / "out", transformer)
     table = read_table(tmp_path / "out")
     assert table.X.dtype == np.float64
@@ -233,7 +234,7 @@ def test_one_mask_for_all_pages_or_one_for_each(tmp_path):
         with tifffile.TiffWriter(tmp_path / f"{name}.tif") as writer:
             for page in pages:
                 writer.write(page.astype(np.uint8))
-    few = MinkowskiCurves(levels=3, smooth=(1,), band=(), slope=(), min_valid=0.1)
+    few = clone(FEW).set_params(slope=(), min_valid=0.1)
     for name in ("each", "all"):
         rows = [{"path": "image.tif", "mask": f"{name}.tif"}]
         dumped(write_manifest(tmp_path / "manifest.csv", rows), tmp_path / name, few)
@@ -974,7 +975,7 @@ def test_carried_columns_that_clash_are_refused(tmp_path):
     rows = [{"path": "a.npy", "raw_mean": "x", "valid_fraction": "y"}]
     manifest = write_manifest(tmp_path / "m.csv", rows)
     with pytest.raises(ValueError, match=r"columns \['raw_mean', 'valid_fraction'\] have names"):
-        dumped(manifest, tmp_path / "out")
+        dumped(manifest, tmp_path / "out", FEW)
 
 
 def test_text_keeps_its_characters(tmp_path):

@@ -11,13 +11,15 @@ import pyarrow.parquet as pq
 import pytest
 import tifffile
 from PIL import Image
+from sklearn.base import clone
 
 from mfeat import MinkowskiCurves, __version__, cutting, dump, parts, read_table
 from mfeat.images import read_image
 from mfeat.runs import OutputRefused
 from mfeat.sources import list_sources
+from mfeat.transformer import full_curves
 
-FEW = MinkowskiCurves(levels=2, smooth=(), band=(), slope=())
+FEW = MinkowskiCurves(**full_curves() | {"levels": 2, "smooth": (), "band": (), "slope": ()})
 
 
 def dumped(source, out, transformer=FEW, **options):
@@ -142,7 +144,7 @@ def test_a_mask_has_one_page_or_as_many_as_the_image(pages, tmp_path):
     mask[0, :9] = 0
     tifffile.imwrite(tmp_path / "m.tif", mask, photometric="minisblack")
     manifest = write_manifest(tmp_path / "m.csv", [{"path": "a.tif", "mask": "m.tif"}])
-    dumped(manifest, tmp_path / "out", MinkowskiCurves(min_valid=0, smooth=(), band=(), slope=()))
+    dumped(manifest, tmp_path / "out", clone(FEW).set_params(min_valid=0))
     fractions = read_table(tmp_path / "out").columns["valid_fraction"].to_pylist()
     assert fractions == {1: [0.4] * 3, 2: [0.4, 1.0], 3: [0.4, 1.0, 1.0]}[pages]
     reasons = [reject["reason"] for reject in rejects_of(tmp_path / "out")]

@@ -24,14 +24,16 @@ import numpy as np
 import pyarrow.parquet as pq
 import pytest
 from joblib.externals.loky import reusable_executor
+from sklearn.base import clone
 
 from mfeat import MinkowskiCurves, dump, locations, parts, planning, read_table, runs, storage
 from mfeat.parts import InputChanged
 from mfeat.runs import OutputRefused
 from mfeat.storage import LocalStorage, OutputInUse, RemoteStorage, output
+from mfeat.transformer import full_curves
 
-FEW = MinkowskiCurves(levels=2, smooth=(), band=(), slope=())
-OTHER = MinkowskiCurves(levels=3, smooth=(), band=(), slope=())
+FEW = MinkowskiCurves(**full_curves() | {"levels": 2, "smooth": (), "band": (), "slope": ()})
+OTHER = clone(FEW).set_params(levels=3)
 SIZE = 16
 UNFINISHED = ".unfinished"
 
@@ -311,8 +313,9 @@ def test_the_old_manifest_is_gone_for_good_before_a_part_is_replaced(
 RUN = """
 import sys
 from mfeat import MinkowskiCurves, dump, planning
+from mfeat.transformer import full_curves
 planning._PART_COSTS = (1, 1)
-few = MinkowskiCurves(levels=2, smooth=(), band=(), slope=())
+few = MinkowskiCurves(**full_curves() | {"levels": 2, "smooth": (), "band": (), "slope": ()})
 dump(sys.argv[1], sys.argv[2], few, size=16, jobs=2, backend=sys.argv[3])
 """
 

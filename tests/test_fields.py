@@ -6,23 +6,28 @@ import pytest
 from scipy import ndimage
 
 from mfeat import minkowski_curves
-from mfeat.fields import Field, derive, gaussian_weights, scales, sigma_pixels
+from mfeat.fields import Field, derive, prepared, scales
 from mfeat.functionals import EULER_WEIGHTS
+from mfeat.smoothing import gaussian_weights, sigma_pixels
 
 
 def field_of(
-    image, family, scale, *, valid=None, pitch=(1.0, 1.0), scale_unit="pitch", remove_tilt=False
+    image,
+    family,
+    scale,
+    *,
+    valid=None,
+    pitch=(1.0, 1.0),
+    scale_unit="pitch",
+    scale_rule="fixed",
+    remove_tilt=False,
 ):
     """Return one field of one image with its offset, NaN where it is not valid."""
     stack_valid = None if valid is None else valid[None].astype(np.uint8)
-    [(_, relief)] = derive(
-        (Field(family, float(scale)),),
-        np.asarray(image, float)[None],
-        stack_valid,
-        pitch,
-        scale_unit,
-        remove_tilt,
-    )
+    chosen = (Field(family, float(scale)),)
+    image = np.asarray(image, float)
+    pixels = prepared(image[None], stack_valid, pitch, scale_unit, remove_tilt)
+    [(_, relief)] = derive(chosen, pixels, scale_rule)
     values = relief.centred[0] + relief.offset[0]
     return np.where(relief.valid[0] == 1, values, np.nan)
 
@@ -280,3 +285,81 @@ def test_scales_are_tuples_of_distinct_numbers():
         scales("smooth", (2, 2.0), zero=False)
     with pytest.raises(TypeError, match=r"smooth\[1\] must be a number; got '1'"):
         scales("smooth", (2, "1"), zero=False)
+
+
+# Contrast -----------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize("missing", [0.0, 0.25])
+@pytest.mark.parametrize("scale", [0.8, 2.0])
+def test_contrast_against_plain_loops(missing, scale):
+    small = 40.0 + 9.0 * np.random.default_rng(6).normal(size=(17, 21))
+    small[:, :8] *= 0.2  # a quiet side
+    valid = np.random.default_rng(7).random(small.shape) >= missing
+    given = np.where(valid, small, 1e4)
+    got = field_of(given, "contrast", scale, valid=valid if missing else None)
+    smooth = naive.gaussian_smooth(small, scale, scale, valid)
+    expected = naive.local_contrast(smooth, 2.5 * scale, 0.03, valid)
+    assert np.array_equal(np.isnan(got), ~valid)
+    assert got[valid] == pytest.approx(expected[valid], rel=1e-9, abs=1e-9)
+
+
+def test_contrast_against_scipy_in_a_wide_image(image):
+    smooth = ndimage.gaussian_filter(image, 1.5, mode="reflect", truncate=4.0)
+    mean, square = (
+        ndimage.gaussian_filter(x, 2.5 * 1.5, mode="reflect", truncate=4.0)
+        for x in (smooth, smooth**2)
+    )
+    expected = (smooth - mean) / np.sqrt(square - mean**2 + (0.03 * smooth.std()) ** 2)
+    assert field_of(image, "contrast", 1.5) == pytest.approx(expected, abs=1e-8)
+
+
+@pytest.mark.parametrize("rule", ["fixed", "matched"])
+@pytest.mark.parametrize(("gain", "offset"), [(3.0, 0.0), (1e-6, 5.0), (-2.0, 100.0), (1e9, -1e9)])
+def test_contrast_knows_no_gain_and_offset(image, rule, gain, offset):
+    got = field_of(gain * image + offset, "contrast", 3.0, scale_rule=rule)
+    expected = np.sign(gain) * field_of(image, "contrast", 3.0, scale_rule=rule)
+    assert got == pytest.approx(expected, abs=1e-7)
+
+
+def test_contrast_evens_out_light_that_varies_slowly(image):
+    # gain falls to a third across the image; the other side: smoothing follows it
+    light = np.linspace(1.0, 1 / 3, image.shape[1])
+    even, uneven = image - 40.0, (image - 40.0) * light
+    halves = np.s_[:, :12], np.s_[:, -12:]
+    for family, least, most in (("contrast", 0.85, 1.2), ("smooth", 1.9, 4.0)):
+        ratios = []
+        for given in (even, uneven):
+            found = field_of(given, family, 1.0)
+            ratios.append(found[halves[0]].std() / found[halves[1]].std())
+        assert least < ratios[1] / ratios[0] < most, family
+
+
+def test_contrast_of_a_flat_image_is_nothing():
+    for value in (0.0, 7.0, -1e12, 0.1):
+        for rule in ("fixed", "matched"):
+            got = field_of(np.full((20, 24), value), "contrast", 3.0, scale_rule=rule)
+            assert not got.any()
+    # quiet places stay quiet: noise of a thousandth beside a step is not blown up to the step's
+    step = np.zeros((40, 60))
+    step[:, 30:] = 1.0
+    step += 1e-3 * np.random.default_rng(8).normal(size=step.shape)
+    got = field_of(step, "contrast", 1.0)
+    assert np.abs(got[:, :12]).max() < 0.1
+    assert np.abs(got).max() > 0.5
+
+
+def test_contrast_needs_a_scale(image):
+    with pytest.raises(ValueError, match=r'scale must be > 0 for field "contrast"; got 0'):
+        minkowski_curves(image, 4, field="contrast")
+    with pytest.raises(ValueError, match=r"contrast_20: its widest Gaussian .* of 1.35 times"):
+        minkowski_curves(image, 4, field="contrast", scale=20)
+
+
+def test_curves_of_contrast_have_no_unit(image):
+    curves = minkowski_curves(image, 5, field="contrast", scale=2, unit="mm", value_unit="um")
+    assert curves.units["levels"] == "1"
+    assert curves.field == "contrast_2"
+    louder = minkowski_curves(5 * image - 3, 5, field="contrast", scale=2)
+    assert louder.levels == pytest.approx(curves.levels, abs=1e-9)
+    assert louder.euler == pytest.approx(curves.euler)

@@ -8,18 +8,21 @@ import pytest
 import theory_oracles as theory
 from skimage import data, measure
 
-from mfeat import PatternCounts, count_patterns
+from mfeat import MinkowskiCurves, PatternCounts, count_patterns
 from mfeat.counts import STATISTICS
 from mfeat.functionals import (
     AREA_WEIGHTS,
     CONTOUR_ESTIMATORS,
     EULER_WEIGHTS,
+    anisotropy_of,
     area,
     contour,
     crofton_weights,
     crossings,
     euler,
 )
+from mfeat.surfaces import gaussian_field
+from mfeat.transformer import full_curves
 
 WINDOWS = list(itertools.product((0, 1), repeat=4))
 
@@ -309,3 +312,93 @@ def test_bad_input_is_named():
     for function in (area, contour, euler, crossings):
         with pytest.raises(ValueError, match=r"no 2x2 window has four valid pixels.*4 windows"):
             function(empty)
+
+
+# Anisotropy ---------------------------------------------------------------------------------
+
+
+BOTH = {"functionals": ("contour", "anisotropy")}
+
+
+def contour_and_anisotropy(image, level=0.0, pitch=1.0):
+    """Return both at one level of the raw field, as a transformer gives them."""
+    transformer = MinkowskiCurves(
+        **full_curves() | {"smooth": (), "band": (), "slope": (), "location_scale": False} | BOTH,
+        **{"levels": [level], "level_rule": "fixed", "pitch": pitch, "dtype": "float64"},
+    )
+    names = transformer.get_feature_names_out().tolist()
+    row = transformer.transform([image])[0]
+    return row[names.index("raw_contour_00")], row[names.index("raw_anisotropy_00")]
+
+
+def stripes(angle, pitch=(1.0, 1.0), period=23.0, side=400):
+    """Waves whose edges have their normal at an angle to the rows, with 2 / period of them."""
+    y, x = np.mgrid[:side, :side] * np.array(pitch)[:, None, None]
+    return np.sin(2 * np.pi * (x * np.cos(angle) + y * np.sin(angle)) / period + 0.3)
+
+
+@pytest.mark.parametrize("pitch", [(1.0, 1.0), (0.5, 1.0), (1.5, 1.0)])
+@pytest.mark.parametrize("degrees", [0, 10, 22.5, 45, 60, 80, 90, 135, 157.5])
+def test_parallel_edges_by_the_crossings_of_four_directions(degrees, pitch):
+    # a line at angle t crosses edges with normal at angle a |cos(t - a)| times as often as one
+    # along the normal (Buffon); the four lattice directions determine a0, a2, b2, by hand
+    angle, rise = np.deg2rad(degrees), math.atan2(*pitch)
+    horizontal, vertical, one, other = (
+        abs(math.cos(t - angle)) * 2 / 23.0 for t in (0, np.pi / 2, rise, -rise)
+    )
+    swing = math.hypot((horizontal - vertical) / 2, (one - other) / (2 * math.sin(2 * rise)))
+    length, found = contour_and_anisotropy(stripes(angle, pitch), pitch=pitch)
+    assert found == pytest.approx(np.pi / 2 * swing, rel=0.03)
+    assert length == pytest.approx(2 / 23.0, rel=0.12)
+    if pitch == (1.0, 1.0):
+        # by hand: 2 sqrt 2 - 2 along the lattice directions, 2 - sqrt 2 half way between
+        bounds = 2 - math.sqrt(2), 2 * math.sqrt(2) - 2
+        assert 0.97 * bounds[0] < found / length < 1.03 * bounds[1]
+
+
+def test_parallel_edges_of_all_angles_have_two_thirds_of_the_contour():
+    # the second Fourier coefficient of |cos t| over its mean, 4/(3 pi) over 2/pi, in the continuum
+    ratios = [
+        found / length
+        for length, found in (
+            contour_and_anisotropy(stripes(angle, side=250))
+            for angle in np.linspace(0, np.pi, 32, endpoint=False)
+        )
+    ]
+    assert np.mean(ratios) == pytest.approx(2 / 3, abs=0.04)
+
+
+def test_surfaces_alike_in_all_directions_have_no_anisotropy():
+    board = np.indices((21, 31)).sum(axis=0) % 2
+    length, found = contour_and_anisotropy(board, level=1.0)
+    assert length > 0.5
+    assert found == 0.0  # as many edges across as down, and none along the diagonals
+    noise = np.random.default_rng(0).normal(size=(600, 600))
+    length, found = contour_and_anisotropy(noise)
+    assert found < 0.01 * length
+    smooth = gaussian_field((512, 512), 3.0, 1)
+    length, found = contour_and_anisotropy(smooth)
+    assert found < 0.05 * length
+    # the other side: the same surface stretched twofold along one axis, by its pitch
+    length, found = contour_and_anisotropy(smooth, pitch=(1.0, 2.0))
+    assert found > 0.2 * length
+
+
+@pytest.mark.parametrize("dtype", ["uint8", "float64"])
+def test_anisotropy_does_not_change_under_turns_bit_for_bit(dtype):
+    image = data.brick()[40:104, 200:280].astype(dtype)
+    options = {"level": 120.0}
+    expected = contour_and_anisotropy(image, **options)
+    assert expected[1] > 0.1 * expected[0]  # courses of bricks
+    for turned in (np.rot90(image), image[::-1], image[:, ::-1], image.T):
+        assert contour_and_anisotropy(turned, **options) == expected
+    # with rectangular pixels the pitch turns, too
+    one = contour_and_anisotropy(image, pitch=(0.5, 2.0), **options)
+    other = contour_and_anisotropy(image.T, pitch=(2.0, 0.5), **options)
+    assert other == pytest.approx(one, rel=1e-12)
+
+
+def test_anisotropy_without_a_window_is_nan():
+    table = np.zeros((2, 8, 3), dtype=np.int64)
+    assert np.isnan(anisotropy_of(table, np.array([0, 0]), (1.0, 1.0))).all()
+    assert not anisotropy_of(table, np.array([4, 4]), (1.0, 1.0)).any()

@@ -24,7 +24,7 @@ from hypothesis.extra import numpy as st_numpy
 
 from mfeat import _checks, _field_kernels, _kernels
 from mfeat.counts import STATISTICS
-from mfeat.fields import gaussian_weights
+from mfeat.smoothing import gaussian_weights
 
 #: Set in the child processes only, which therefore start none themselves.
 MODE = os.environ.get("MFEAT_KERNEL_MODE", "")

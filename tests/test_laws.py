@@ -10,8 +10,13 @@ from skimage import data
 
 from mfeat import MinkowskiCurves
 from mfeat.fields import FAMILIES
+from mfeat.transformer import full_curves
 
-ALL = {"smooth": (1, 2), "band": (1,), "slope": (0, 2), "curvature": (0, 1.6), "directional": True}
+ALL = full_curves() | {
+    "functionals": ("area", "contour", "euler", "anisotropy"),
+    "smooth": (1, 2), "band": (1,), "slope": (0, 2), "curvature": (0, 1.6), "contrast": (1.5,),
+    "directional": True,
+}  # fmt: skip
 
 
 @pytest.fixture(scope="module")
@@ -165,7 +170,7 @@ def test_pitch_scales_contour_and_euler_number(patches):
     one, half = vectors(patches), vectors(patches, pitch=0.5)
     for name, column in one.items():
         factor = 1.0
-        if "contour" in name or "crossings" in name:
+        if "contour" in name or "crossings" in name or "anisotropy" in name:
             factor = 2.0
         elif "euler" in name:
             factor = 4.0
@@ -209,7 +214,14 @@ def test_blind_to_arrangement_until_smoothed():
     ]
     pair = np.stack([motifs(regular, heights), motifs(clusters, heights)])
     columns = vectors(
-        pair, levels=[1, 2, 4, 6, 9], level_rule="fixed", smooth=(), band=(), slope=(), curvature=()
+        pair,
+        levels=[1, 2, 4, 6, 9],
+        level_rule="fixed",
+        smooth=(),
+        band=(),
+        slope=(),
+        curvature=(),
+        contrast=(),
     )
     for name, (one, other) in select(columns, moment=False).items():
         assert one == other, name  # every window count is the same, directed ones too
@@ -220,6 +232,7 @@ def test_blind_to_arrangement_until_smoothed():
         band=(),
         slope=(),
         curvature=(),
+        contrast=(),
         level_rule="fixed",
         levels=list(np.linspace(0.1, 1.5, 15)),
     )
@@ -246,6 +259,7 @@ def test_blind_to_orientation_until_directed():
         "band": (),
         "slope": (),
         "curvature": (),
+        "contrast": (),
     }
     columns = vectors(np.stack([tall, tall.T]), **bars)
     for name, (one, other) in select(columns, directed=False).items():
@@ -272,7 +286,9 @@ def test_blind_to_the_spectrum_until_smoothed():
             noise = np.fft.fft2(np.random.default_rng(seed).normal(size=(size, size)))
             field = np.fft.ifft2(noise * spectrum).real
             images.append((field - field.mean()) / field.std())
-    columns = vectors(np.stack(images), smooth=(2,), band=(), slope=(), curvature=(), levels=9)
+    columns = vectors(
+        np.stack(images), smooth=(2,), band=(), slope=(), curvature=(), contrast=(), levels=9
+    )
 
     def difference(field, functional):
         curve = np.array([v for n, v in columns.items() if n.startswith(f"{field}_{functional}")])

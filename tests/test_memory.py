@@ -6,6 +6,7 @@ import numpy as np
 import pytest
 
 from mfeat import MinkowskiCurves, count_patterns, minkowski_curves
+from mfeat.transformer import full_curves
 
 MB = 1e6
 
@@ -59,8 +60,9 @@ def test_a_worker_takes_groups_whatever_the_number_of_patches(image, missing):
     if missing:
         patches[:, 3, 4] = np.nan
     transformer = MinkowskiCurves()
+    width = len(transformer.get_feature_names_out())
     small, large = (
-        peak_of(lambda n=n: transformer.transform(patches[:n])) - 4 * 395 * n for n in (128, 960)
+        peak_of(lambda n=n: transformer.transform(patches[:n])) - 4 * width * n for n in (128, 960)
     )
     assert large < 40 * MB
     # a few hundred bytes a patch for its view of X; nothing of its pixels
@@ -69,7 +71,7 @@ def test_a_worker_takes_groups_whatever_the_number_of_patches(image, missing):
 
 def test_a_large_patch_takes_some_bytes_a_pixel(image):
     patch = image[None, :1500, :1500]
-    assert peak_of(lambda: MinkowskiCurves().transform(patch)) < 80 * patch.size
+    assert peak_of(lambda: MinkowskiCurves().transform(patch)) < 105 * patch.size
 
 
 @pytest.mark.parametrize(
@@ -85,4 +87,7 @@ def test_small_patches_and_many_levels_stay_within_the_bound(image, shape, optio
 def test_learning_levels_keeps_a_bounded_sample(image):
     # half a million values of each of the eight fields, sorted once
     patches = image[:2048, :1920].reshape(32, 64, 30, 64).swapaxes(1, 2).reshape(-1, 64, 64)
-    assert peak_of(lambda: MinkowskiCurves(level_rule="fitted").fit(patches)) < 80 * MB
+    assert (
+        peak_of(lambda: MinkowskiCurves(**full_curves(), level_rule="fitted").fit(patches))
+        < 80 * MB
+    )

@@ -22,8 +22,9 @@ from mfeat.options import (
     uniform_pitch,
     with_features,
 )
+from mfeat.transformer import full_curves
 
-SMALL = {"levels": 3, "smooth": (), "band": (), "slope": ()}
+SMALL = full_curves() | {"levels": 3, "smooth": (), "band": (), "slope": ()}
 
 
 def put(path, text, encoding="utf-8"):
@@ -53,7 +54,7 @@ UNUSABLE = [
         "has channels, .* use channel=",
     ),
     (
-        {"transformer": MinkowskiCurves(level_rule="fitted")},
+        {"transformer": MinkowskiCurves(basis="levels", level_rule="fitted")},
         NotFittedError,
         "learns its levels from training patches: call fit",
     ),
@@ -140,8 +141,10 @@ def test_settings_that_change_the_table_change_the_record(other):
 
 
 def test_settings_that_do_not_change_the_table_do_not_change_the_record():
+    own = MinkowskiCurves(smooth=(1, 2, 4))
     same = MinkowskiCurves(n_jobs=2, smooth=[1.0, 2, np.float32(4)])
-    assert dump_settings(same, size=(64, 64), stride=64).record() == dump_settings().record()
+    record = dump_settings(same, size=(64, 64), stride=64).record()
+    assert record == dump_settings(own).record()
 
 
 # TOML
@@ -196,6 +199,20 @@ VARIED = [
     {"transformer": {"connectivity": 8, "contour_estimator": "pixel-edge", "dtype": "float64"}},
     {"transformer": {"connectivity": np.int64(4), "min_valid": 1, "below_min_valid": "nan"}},
     {"transformer": {"raw": np.True_, "min_valid": 0.0}},
+    {"transformer": {"contrast": (2, np.float32(2.5)), "separate_scale": np.True_}},
+    {"transformer": {"separate_scale": True, "location_scale": "ratio", "roughness": [0, 2]}},
+    {"transformer": {"scale_rule": "matched", "smooth": [2.5], "band": (), "slope": (3,)}},
+    {"transformer": {"basis": "hermite", "terms": {"area": 3, "euler": np.int64(2)}}},
+    {"transformer": {"basis": "hermite", "terms": 5, "functionals": ("anisotropy",)}},
+    {
+        "transformer": {
+            "basis": "hermite",
+            "levels": {"raw": 6, "smooth": [-1.0, 1.0]},
+            "level_range": {"raw": None, "smooth": None},
+            "band": (),
+            "slope": (),
+        }
+    },
 ]
 
 
@@ -203,7 +220,7 @@ VARIED = [
 def test_what_is_printed_reads_back_as_the_same_settings(given, tmp_path):
     given = dict(given)
     if "transformer" in given:
-        given["transformer"] = MinkowskiCurves(**given["transformer"])
+        given["transformer"] = MinkowskiCurves(**full_curves() | given["transformer"])
     settings = dump_settings(**given)
     text = settings.toml()
     again = dump_settings(**read_settings(put(tmp_path / "dump.toml", text)))
@@ -387,7 +404,7 @@ def test_pitches_that_contradict_are_refused():
         with pytest.raises(ValueError, match=r"transformer has pitch \(2.0, 3.0\).*leave one of"):
             uniform_pitch(own, np.array(pitch))
     noise = np.random.default_rng(0).normal(size=(4, 16, 16))
-    fitted = MinkowskiCurves(level_rule="fitted", **SMALL).fit(noise)
+    fitted = MinkowskiCurves(**SMALL | {"level_rule": "fitted"}).fit(noise)
     with pytest.raises(ValueError, match="images of different pitch cannot share learned levels"):
         uniform_pitch(dump_settings(fitted), np.array([[2.0, 3.0], [2.0, 4.0]]))
 
@@ -558,11 +575,13 @@ def test_an_estimate_is_for_so_many_workers(mixed):
 def test_an_estimate_refuses_what_the_dump_refuses(mixed, tmp_path):
     for settings, kind, message in (
         (dump_settings(label_from="truth"), ValueError, "column truth, an image of labels"),
-        (dump_settings(size=3), ValueError, "field smooth_4: .*standard deviation"),
+        (dump_settings(MinkowskiCurves(**full_curves()), size=3), ValueError, "smooth_4: .*widest"),
     ):
         for act in (
             lambda given=settings: estimate(mixed, given, jobs=1),
-            lambda given=settings: dump(mixed, tmp_path / "t", jobs=1, **given.keywords()),
+            lambda given=settings: dump(
+                mixed, tmp_path / "t", given.transformer, jobs=1, **given.keywords()
+            ),
         ):
             with pytest.raises(kind, match=message):
                 act()
@@ -570,7 +589,7 @@ def test_an_estimate_refuses_what_the_dump_refuses(mixed, tmp_path):
         estimate(tmp_path / "none", dump_settings())
     manifest = put(tmp_path / "list.csv", "path,raw_mean,page\na.npy,1,2\n")
     with pytest.raises(ValueError, match=r"columns \['raw_mean', 'page'\] have names that the tab"):
-        estimate(manifest, dump_settings(), jobs=1)
+        estimate(manifest, dump_settings(MinkowskiCurves(**SMALL)), jobs=1)
 
 
 @pytest.mark.parametrize(

@@ -10,6 +10,7 @@ from hypothesis import strategies as st
 
 from mfeat import MinkowskiCurves, PatchGrid
 from mfeat.patches import Patches
+from mfeat.transformer import full_curves
 
 IMAGE = np.arange(10 * 13).reshape(10, 13)
 
@@ -209,9 +210,8 @@ def test_nothing_left_is_an_empty_sequence_not_an_error():
 
 def test_the_same_fractions_decide_in_the_transformer():
     patches = PatchGrid(6, stride=5).cut(missing_image())
-    transformer = MinkowskiCurves(
-        levels=2, smooth=(), band=(), slope=(), min_valid=0.5, below_min_valid="nan"
-    )
+    few = {"levels": 2, "smooth": (), "band": (), "slope": ()}
+    transformer = MinkowskiCurves(**full_curves() | few, min_valid=0.5, below_min_valid="nan")
     refused = np.isnan(transformer.transform(patches)).all(axis=1)
     np.testing.assert_array_equal(refused, patches.valid_fractions < 0.5)
     assert 0 < refused.sum() < len(patches)

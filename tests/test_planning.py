@@ -84,5 +84,5 @@ def test_a_compressed_image_is_cut_only_where_it_is_read_in_strips(tmp_path, mon
 
 def test_scales_too_large_for_any_patch_are_refused(tmp_path):
     folder = empty_images(tmp_path / "images", [64])
-    with pytest.raises(ValueError, match="smooth_4"):
+    with pytest.raises(ValueError, match=r"smooth_.*: a length of detail of .* more than 0.5"):
         planned(folder, size=3)

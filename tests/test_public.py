@@ -122,12 +122,16 @@ LAYERS = {
     "counts": {"_checks", "_kernels"},
     "functionals": {"_checks", "counts"},
     "levels": {"_checks", "_kernels", "counts"},
-    "fields": {"_checks", "_field_kernels", "levels"},
-    "plan": {"_checks", "fields", "functionals", "levels"},
-    "settings": {"_checks", "fields", "functionals", "levels", "plan"},
+    "smoothing": {"_checks", "_field_kernels", "_kernels"},
+    "matching": {"_field_kernels", "smoothing"},
+    "fields": {"_checks", "_field_kernels", "levels", "matching", "smoothing"},
+    "basis": {"_checks"},
+    "plan": {"_checks", "basis", "fields", "functionals", "levels"},
+    "settings": {"_checks", "basis", "fields", "functionals", "levels", "plan"},
     "stacks": {"_checks", "_kernels"},
     "vector": {
-        *["_checks", "_kernels", "counts", "fields", "functionals", "levels", "plan", "stacks"]
+        *["_checks", "_kernels", "counts", "fields", "functionals", "levels", "plan", "stacks"],
+        *["basis", "matching", "smoothing"],
     },
     "_descriptor_base": {"_checks", "stacks"},
     "_filters": set(),
@@ -157,8 +161,10 @@ LAYERS = {
     "sources": {"entries", "locations", "manifests"},
     "schema": {"plan", "settings", "transformer"},
     "table": {"locations", "schema", "storage", "transformer"},
-    "options": {"_checks", "images", "levels", "locations", "patches", "schema", "transformer"},
-    "planning": {"entries", "fields", "images", "options", "plan", "schema", "settings"},
+    "options": {
+        *["_checks", "basis", "images", "levels", "locations", "patches", "schema", "transformer"],
+    },
+    "planning": {"entries", "images", "options", "plan", "schema", "settings"},
     "cutting": {"_pages", "images", "options", "patches", "planning"},
     "parts": {
         *["_pages", "cutting", "entries", "options", "patches", "plan", "planning", "schema"],

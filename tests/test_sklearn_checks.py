@@ -16,6 +16,7 @@ from sklearn.utils.estimator_checks import check_estimator, estimator_checks_gen
 from sklearn.utils.validation import _check_feature_names_in, check_is_fitted, validate_data
 
 from mfeat import MinkowskiCurves
+from mfeat.transformer import full_curves
 
 #: Checks that need no X, or fail before they look at it. Names as of scikit-learn 1.6 to 1.9.
 WITHOUT_DATA = (
@@ -58,7 +59,14 @@ KNOWN_SKIPS = {"check_array_api_input"}
 #: At least so many checks of the adapter pass: counted with scikit-learn 1.9.
 FEWEST = 44
 
-VARIANTS = [{}, {"level_rule": "fitted"}, {"channels": ("a", "b"), "smooth": (), "n_jobs": 2}]
+#: The raw field alone, which the smallest images have.
+RAW = full_curves() | {"smooth": (), "band": (), "slope": ()}
+
+VARIANTS = [
+    {},
+    {"basis": "levels", "level_rule": "fitted"},
+    {"channels": ("a", "b"), "smooth": (), "n_jobs": 2},
+]
 
 
 class RowsAsImages(TransformerMixin, BaseEstimator):
@@ -71,11 +79,7 @@ class RowsAsImages(TransformerMixin, BaseEstimator):
     def fit(self, X, y=None):
         images = self._images(X, reset=True)
         self.curves_ = MinkowskiCurves(
-            levels=self.levels,
-            level_rule=self.level_rule,
-            smooth=(),
-            band=(),
-            slope=(),
+            **RAW | {"levels": self.levels, "level_rule": self.level_rule},
             below_min_valid="nan",
             dtype="float64",
         )

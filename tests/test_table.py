@@ -11,14 +11,16 @@ import numpy as np
 import pyarrow as pa
 import pyarrow.parquet as pq
 import pytest
+from sklearn.base import clone
 from sklearn.model_selection import GroupKFold, cross_val_score
 from sklearn.neighbors import KNeighborsClassifier
 
 from mfeat import FeatureTable, MinkowskiCurves, PatchGrid, dump, planning, read_table, schema
 from mfeat.schema import OWN_COLUMNS, PartWriter, about, differences, restored, transformer_record
 from mfeat.storage import LocalStorage
+from mfeat.transformer import full_curves
 
-FEW = MinkowskiCurves(levels=3, smooth=(1,), band=(), slope=())
+FEW = MinkowskiCurves(**full_curves() | {"levels": 3, "smooth": (1,), "band": (), "slope": ()})
 SIZE = 16
 
 
@@ -456,12 +458,15 @@ SETTINGS = [
     {"pitch": (np.float64(0.1), 0.3), "scale_unit": "length", "smooth": (0.5,), "band": ()},
     {"connectivity": 4, "dtype": "float64", "remove_tilt": True},
     {"raw": False, "min_valid": 0.9, "below_min_valid": "nan", "n_jobs": 2},
+    {"basis": "hermite", "terms": {"euler": np.int64(3)}, "separate_scale": np.True_},
+    {"scale_rule": "matched", "smooth": (2, 3), "band": (), "slope": (3,), "contrast": [2.5]},
+    {"separate_scale": True, "location_scale": "ratio", "roughness": (np.float64(0), 2)},
 ]
 
 
 @pytest.mark.parametrize("parameters", SETTINGS)
 def test_a_transformer_comes_back_with_its_fingerprint(parameters):
-    transformer = MinkowskiCurves(**parameters)
+    transformer = MinkowskiCurves(**full_curves() | parameters)
     record = json.loads(json.dumps(transformer_record(transformer, False)))
     again = restored(record)
     assert again.settings() == transformer.settings()
@@ -471,11 +476,21 @@ def test_a_transformer_comes_back_with_its_fingerprint(parameters):
     assert list(again.get_feature_names_out()) == list(transformer.get_feature_names_out())
 
 
+def test_a_record_from_before_a_parameter_existed_means_what_it_meant():
+    # whole curves of fixed fields were all there was: not the default of today
+    record = json.loads(json.dumps(transformer_record(FEW, False)))
+    for name in ("basis", "terms", "contrast", "scale_rule", "separate_scale", "roughness"):
+        del record["parameters"][name]
+    again = restored(record)
+    assert again.fingerprint() == FEW.fingerprint()
+    assert list(again.get_feature_names_out()) == list(FEW.get_feature_names_out())
+
+
 @pytest.mark.parametrize("parameters", [{}, {"levels": (0.1, 0.5, 0.9)}, {"remove_tilt": True}])
 def test_learned_levels_come_back_bit_for_bit(parameters):
     few = {"smooth": (1,), "band": (), "slope": (0,), "level_rule": "fitted"}
     patches = [noise(seed, (24, 24)) for seed in range(4)]
-    transformer = MinkowskiCurves(**few | parameters).fit(patches)
+    transformer = MinkowskiCurves(**full_curves() | few | parameters).fit(patches)
     record = json.loads(json.dumps(transformer_record(transformer, False)))
     again = restored(record)
     assert again.fingerprint() == transformer.fingerprint()
@@ -487,7 +502,7 @@ def test_learned_levels_come_back_bit_for_bit(parameters):
 
 def test_a_fitted_transformer_travels_in_its_table(tmp_path):
     np.save(tmp_path / "a.npy", noise(0))
-    few = MinkowskiCurves(levels=3, smooth=(), band=(), slope=(), level_rule="fitted")
+    few = clone(FEW).set_params(smooth=(), level_rule="fitted")
     with pytest.raises(Exception, match="learns its levels from training"):
         dumped(tmp_path / "a.npy", tmp_path / "out", few)
     few.fit([noise(7)])

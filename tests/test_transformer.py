@@ -23,8 +23,9 @@ import mfeat
 from mfeat import MinkowskiCurves, PatchGrid, minkowski_curves, stacks, transformer, vector
 from mfeat import settings as plans
 
-RAW_ONLY = {"smooth": (), "band": (), "slope": ()}
-EVERY_FAMILY = {"smooth": (1, 1.5), "band": (1,), "slope": (0, 1), "curvature": (0, 1)}
+WHOLE = transformer.full_curves()
+RAW_ONLY = WHOLE | {"smooth": (), "band": (), "slope": ()}
+EVERY_FAMILY = WHOLE | {"smooth": (1, 1.5), "band": (1,), "slope": (0, 1), "curvature": (0, 1)}
 
 
 def noise(n=6, shape=(16, 18), seed=0):
@@ -32,7 +33,7 @@ def noise(n=6, shape=(16, 18), seed=0):
 
 
 def small(**options):
-    """A transformer of every family of field, with few levels."""
+    """A transformer of whole curves of fields of five families, with few levels."""
     return MinkowskiCurves(**({"levels": 4, "dtype": "float64"} | EVERY_FAMILY | options))
 
 
@@ -355,9 +356,9 @@ def difference_over_pitch(scale_unit, **wanted):
     """Largest difference of features between pitch 1 and 0.5, as a share of the largest value."""
     found = []
     for pitch in (1.0, 0.5):
-        fitted = MinkowskiCurves(
+        fitted = small(
             levels=5, level_range=(-1.5, 1.5), smooth=(2,), band=(2,), slope=(2,), curvature=(2,),
-            pitch=pitch, scale_unit=scale_unit, dtype="float64",
+            pitch=pitch, scale_unit=scale_unit,
         )  # fmt: skip
         found.append(fitted.transform(waves(pitch)[None])[0, columns(fitted, **wanted)])
     coarse, fine = found
@@ -447,9 +448,7 @@ def test_names_agree_with_the_table_and_the_width(options):
 
 
 def test_names_in_full():
-    fitted = MinkowskiCurves(
-        functionals=["euler", "area"], levels=1, smooth=(), band=(1.5,), slope=(0,)
-    )
+    fitted = raw(functionals=["euler", "area"], levels=1, band=(1.5,), slope=(0,))
     # by hand; the order of functionals is fixed
     assert fitted.get_feature_names_out().tolist() == [
         "raw_mean",
@@ -643,7 +642,7 @@ def test_grid_search_in_a_cached_pipeline(tmp_path, monkeypatch):
     }
     pipeline = Pipeline(
         [
-            ("curves", MinkowskiCurves(band=(), slope=(0,), location_scale=False)),
+            ("curves", raw(slope=(0,), location_scale=False)),
             ("lda", LinearDiscriminantAnalysis(solver="lsqr")),
         ],
         memory=joblib.Memory(tmp_path, verbose=0),
@@ -999,18 +998,18 @@ def test_one_pixel_of_relief_is_relief(step):
 
 
 def test_equal_settings_written_differently_have_one_fingerprint():
-    plain = MinkowskiCurves(
+    plain = small(
         functionals=("area", "euler"), levels=4, level_range=(-1.0, 1.0), smooth=(1.0, 2.0),
         band=(1.0,), slope=(0.0,), pitch=0.5, min_valid=1.0,
     )  # fmt: skip
-    other = MinkowskiCurves(
+    other = small(
         functionals=["euler", "area"], levels=np.int16(4), level_range=[-1, 1], smooth=[1, 2],
         band=np.array([1]), slope=(0,), pitch=(0.5, np.float32(0.5)), min_valid=1,
-        location_scale=np.True_, connectivity="mean", n_jobs=2,
+        location_scale=np.True_, separate_scale=np.False_, connectivity="mean", n_jobs=2,
     )  # fmt: skip
     dicts = clone(plain).set_params(
-        levels=dict.fromkeys(("slope", "band", "smooth", "raw"), 4),
-        level_range=dict.fromkeys(("raw", "smooth", "band", "slope"), (-1, 1)),
+        levels=dict.fromkeys(("curvature", "slope", "band", "smooth", "raw"), 4),
+        level_range=dict.fromkeys(("raw", "smooth", "band", "slope", "curvature"), (-1, 1)),
     )
     explicit = clone(plain).set_params(levels=np.linspace(-1, 1, 4), level_range=None)
     for same in (other, dicts, explicit):
@@ -1019,9 +1018,11 @@ def test_equal_settings_written_differently_have_one_fingerprint():
     assert set(plain.fingerprint()) <= set("0123456789abcdef")
 
 
-#: One other value of each parameter, and whether values may depend on it.
+#: One other value of each parameter than `full_curves` has, and whether values may depend on it.
 OTHER_VALUES = {
     "functionals": (("area", "contour"), True),
+    "basis": ("hermite", True),
+    "terms": (3, False),  # of basis "hermite" only
     "levels": (17, True),
     "level_rule": ("rank", True),
     "level_range": ((-2.0, 2.0), True),
@@ -1030,8 +1031,12 @@ OTHER_VALUES = {
     "band": ((), True),
     "slope": ((1, 3), True),
     "curvature": ((1,), True),
+    "contrast": ((1,), True),
+    "scale_rule": ("matched", True),
     "remove_tilt": (True, True),
     "location_scale": (False, True),
+    "separate_scale": (True, True),
+    "roughness": ((2,), False),  # of numbers beside a separated scale only
     "directional": (True, True),
     "connectivity": (4, True),
     "contour_estimator": ("crofton-2", True),
@@ -1046,12 +1051,13 @@ OTHER_VALUES = {
 
 
 def test_every_parameter_has_its_say_in_the_fingerprint():
-    assert set(OTHER_VALUES) == set(MinkowskiCurves().get_params())
-    own = MinkowskiCurves().fingerprint()
+    whole = MinkowskiCurves(**WHOLE)
+    assert set(OTHER_VALUES) == set(whole.get_params())
+    own = whole.fingerprint()
     seen = {own}
     for name, (value, matters) in OTHER_VALUES.items():
-        assert MinkowskiCurves().get_params()[name] != value, name
-        found = MinkowskiCurves(**{name: value}).fingerprint()
+        assert whole.get_params()[name] != value, name
+        found = clone(whole).set_params(**{name: value}).fingerprint()
         assert (found != own) == matters, name
         if matters:
             assert found not in seen, name
@@ -1081,14 +1087,14 @@ def test_settings_are_json():
 def test_fingerprint_is_the_same_in_every_process():
     code = (
         "from mfeat import MinkowskiCurves\n"
-        "print(MinkowskiCurves(levels={'raw': 3, 'slope': 4}, smooth=(), band=()).fingerprint())"
+        "print(MinkowskiCurves(levels={'smooth': 3, 'curvature': 4}, contrast=()).fingerprint())"
     )
     root = str(Path(mfeat.__file__).parents[1])
     environment = os.environ | {"PYTHONHASHSEED": "77", "PYTHONPATH": root}
     done = subprocess.run(
         [sys.executable, "-c", code], env=environment, capture_output=True, text=True, check=True
     )
-    own = MinkowskiCurves(levels={"slope": 4, "raw": 3}, smooth=(), band=()).fingerprint()
+    own = MinkowskiCurves(levels={"curvature": 4, "smooth": 3}, contrast=()).fingerprint()
     assert done.stdout.strip() == own
 
 
@@ -1231,6 +1237,8 @@ BAD_PARAMETERS = [
     ({"slope": (0, 0.0)}, "slope holds the scale 0.0 twice"),
     ({"smooth": ("1",)}, r"smooth\[0\] must be a number; got '1'"),
     ({"slope": (True,)}, r"slope\[0\] must be a number; got True"),
+    ({"contrast": (0,)}, r"contrast\[0\] must be > 0; got 0"),
+    ({"contrast": 2}, r"contrast must be a tuple.* write contrast=\(2,\)"),
     ({"smooth": 2}, "smooth"),
     ({"band": 1.5}, "band"),
     ({"slope": 0}, "slope"),
@@ -1279,7 +1287,22 @@ BAD_PARAMETERS = [
     ({"levels": [0, 1], "level_range": (0, 1)}, r"level_range=\(0, 1\) has no meaning beside"),
     ({"level_range": {"rwa": (0, 1)}}, r"level_range has unknown field families \['rwa'\]"),
     ({"level_range": {"band": (0, 1)}}, "level_range is a dict without an entry for 'raw'"),
+    # Hermite functions
+    ({"terms": 0}, r"terms\['area'\] must be >= 1 and <= 16; got 0"),
+    ({"terms": {"euler": 17}}, r"terms\['euler'\] must be >= 1 and <= 16; got 17"),
+    ({"terms": 2.0}, r"terms\['area'\] must be an integer; got 2.0"),
+    ({"terms": {"area": True}}, r"terms\['area'\] must be an integer; got True"),
+    ({"terms": "4"}, r"terms\['area'\] must be an integer; got '4'"),
+    ({"terms": {"volume": 2}}, r"terms has entries \['volume'\]; functionals are area, contour"),
+    ({"basis": "hermite", "level_rule": "rank"}, 'basis "hermite" needs level_rule "standard"'),
     # closed options
+    ({"basis": "fourier"}, "'basis' parameter of MinkowskiCurves must be a str among"),
+    ({"scale_rule": "own"}, "'scale_rule' parameter of MinkowskiCurves must be a str among"),
+    ({"separate_scale": 1}, "'separate_scale' parameter of MinkowskiCurves must be"),
+    ({"location_scale": "ratio"}, "location_scale='ratio' chooses .* separate_scale=True keeps"),
+    ({"roughness": (-1,)}, r"roughness\[0\] must be a finite number >= 0; got -1"),
+    ({"roughness": 2}, r"roughness must be a tuple.* write roughness=\(2,\)"),
+    ({"location_scale": "log"}, "'location_scale' parameter of MinkowskiCurves must be"),
     ({"connectivity": 6}, "'connectivity' parameter of MinkowskiCurves must be .* Got 6"),
     ({"connectivity": 4.0}, "'connectivity' parameter of MinkowskiCurves must be .* Got 4.0"),
     ({"connectivity": "4"}, "'connectivity' parameter of MinkowskiCurves must be .* Got '4'"),
@@ -1304,7 +1327,7 @@ BAD_PARAMETERS = [
     ({"functionals": ("volume",)}, "functionals must be one of 'area', .* got 'volume'"),
     ({"functionals": ("area", "area")}, r"functionals holds a name twice: \('area', 'area'\)"),
     ({"functionals": "area"}, "'functionals' parameter of MinkowskiCurves must be"),
-    ({"raw": False}, "no field is left: raw is False and smooth, band, slope and curvature are"),
+    ({"raw": False}, "no field is left: raw is False and smooth, band, slope, curvature and con"),
     ({"functionals": (), "location_scale": False}, "the vector would be empty: functionals is"),
 ]  # fmt: skip
 
@@ -1378,7 +1401,7 @@ def test_curves_and_vectors_agree_to_the_bit():
     # law 9: one image's curves and its vector are the same numbers
     image = noise(1, (15, 19))
     pitch = (0.5, 0.7)
-    whole = MinkowskiCurves(levels=6, pitch=pitch, dtype="float64", location_scale=False)
+    whole = MinkowskiCurves(**WHOLE, levels=6, pitch=pitch, dtype="float64", location_scale=False)
     row = dict(zip(whole.get_feature_names_out(), whole.transform(image)[0], strict=True))
     for field in ("raw", "smooth_2", "band_1", "slope_0"):
         family, _, scale = field.partition("_")
@@ -1395,9 +1418,9 @@ def test_joining_fields_changes_no_bit(monkeypatch, rule):
     X[1, 2:4, 3] = np.nan
     X[2] = 7.0
     options = {"smooth": (1, 2), "band": (1,), "slope": (0, 1), "curvature": (1,)}
-    whole = MinkowskiCurves(
+    whole = small(
         levels={"raw": 5, "smooth": 5, "band": 4, "slope": 5, "curvature": 4},
-        level_rule=rule, dtype="float64", min_valid=0.0, **options,
+        level_rule=rule, min_valid=0.0, **options,
     ).fit(X)  # fmt: skip
     monkeypatch.setattr(vector, "JOIN_PIXELS", 0)
     apart = whole.transform(X)
