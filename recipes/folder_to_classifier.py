@@ -20,8 +20,11 @@ from mfeat.demo import write_demo
 from mfeat.surfaces import PANEL_CONDITIONS
 from mfeat.transformer import full_curves
 
-#: Fields that coarse form hardly reaches.
-FIELDS = {"raw": False, "smooth": (), **dict.fromkeys(("band", "slope", "curvature"), (1, 2, 4))}
+#: Whole curves, in whose tails small defects show, of fields that coarse form hardly reaches.
+CURVES = full_curves() | {
+    **{"raw": False, "smooth": (), "scale_rule": "matched"},
+    **dict.fromkeys(("band", "slope", "curvature"), (2, 4, 8)),
+}
 
 
 def main(argv: list[str] | None = None) -> float:
@@ -52,7 +55,7 @@ def main(argv: list[str] | None = None) -> float:
     summary = dump(
         source,
         options.out / "table",
-        MinkowskiCurves(**full_curves() | FIELDS, levels=12, remove_tilt=True),
+        MinkowskiCurves(**CURVES, levels=12, remove_tilt=True),
         size=options.size,
         stride=options.stride,
         label_from=label_from,

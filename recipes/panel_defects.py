@@ -65,14 +65,22 @@ def cut_patches(panels: list, size: int, stride: int):
 
 
 def make_curves() -> MinkowskiCurves:
-    """Return the transformer: levelled patches, and fields that coarse form hardly reaches."""
+    """Return the transformer: whole curves of levelled patches.
+
+    Small defects show in the tails of curves, which the default's Hermite functions damp. Coarse
+    form hardly reaches these fields.
+    """
     fields = {
         "raw": False,
         "smooth": (),
-        **dict.fromkeys(("band", "slope", "curvature"), (1, 2, 4)),
+        **dict.fromkeys(("band", "slope", "curvature"), (2, 4, 8)),
     }
     return MinkowskiCurves(
-        **full_curves() | fields, levels=12, remove_tilt=True, pitch=PITCH, n_jobs=-1
+        **full_curves() | fields | {"scale_rule": "matched"},
+        levels=12,
+        remove_tilt=True,
+        pitch=PITCH,
+        n_jobs=-1,
     )
 
 
@@ -128,7 +136,7 @@ def draw(path: Path, images, labels, groups, shares, vectors, names, table) -> N
             shown, ax=axes, orientation="horizontal", label="height, µm (red: lost)", shrink=0.8
         )
     for axes, functional, unit in ((left, "contour", "1/mm"), (middle, "euler", "1/mm$^2$")):
-        columns = [k for k, name in enumerate(names) if name.startswith(f"band_4_{functional}_")]
+        columns = [k for k, name in enumerate(names) if name.startswith(f"band_8_{functional}_")]
         levels = np.linspace(-2.5, 2.5, len(columns))
         for condition, colour, stroke in zip(present, colours, strokes, strict=False):
             median = np.median(vectors[np.ix_(labels == condition, columns)], axis=0)

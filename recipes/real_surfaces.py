@@ -9,54 +9,18 @@ import argparse
 import sys
 
 import numpy as np
-from scipy import ndimage
-from skimage import data, transform
+from skimage import data
 from sklearn.discriminant_analysis import LinearDiscriminantAnalysis
 from sklearn.pipeline import make_pipeline
 from sklearn.preprocessing import StandardScaler
 
 from mfeat import MinkowskiCurves, PatchGrid
+from mfeat.conditions import Scene, conditions_for, margin_for
 from mfeat.transformer import full_curves
 
 SURFACES = ("brick", "grass", "gravel")
 SIZE = 64
-MARGIN = 24  # around a test patch, so that turned and zoomed ones have real pixels everywhere
-
-
-def light(patch, rng):
-    """Gamma .7 to 1.4, gain .6 to 1, offset up to 10 grey values, rounded to 8 bit."""
-    gamma, gain = rng.uniform(0.7, 1.4), rng.uniform(0.6, 1.0)
-    return np.clip(np.rint(255 * gain * (patch / 255) ** gamma + rng.uniform(-10, 10)), 0, 255)
-
-
-def rotation(patch, rng):
-    """Turn by any angle."""
-    return transform.rotate(patch, rng.uniform(0, 360), preserve_range=True)
-
-
-def noise(patch, rng):
-    """Gaussian noise of a quarter of the patch's standard deviation."""
-    return patch + rng.normal(scale=patch.std() / 4, size=patch.shape)
-
-
-def blur(patch, rng):
-    """Gaussian blur of .8 pixels."""
-    return ndimage.gaussian_filter(patch, 0.8)
-
-
-def zoom(patch, rng):
-    """Zoom by .85 to 1.15."""
-    return transform.rescale(patch, rng.uniform(0.85, 1.15), preserve_range=True)
-
-
-CONDITIONS = {
-    "clean": lambda patch, rng: patch,
-    "light": light,
-    "rotation": rotation,
-    "noise": noise,
-    "blur": blur,
-    "zoom": zoom,
-}
+CONDITIONS = conditions_for("grey")
 
 
 def training_patches(stride: int):
@@ -70,19 +34,19 @@ def training_patches(stride: int):
     return np.stack(images), np.array(labels)
 
 
-def test_patches(number: int, change, seed: int):
+def test_patches(number: int, condition, seed: int):
     """Return `number` changed patches of each right half, at random places, and their labels."""
     rng = np.random.default_rng(seed)
     images, labels = [], []
-    wide = SIZE + 2 * MARGIN
+    margin = margin_for((SIZE, SIZE))  # so that turned and zoomed ones have real pixels everywhere
+    wide = SIZE + 2 * margin
     for name in SURFACES:
-        image = getattr(data, name)().astype(float)
+        image = getattr(data, name)()
         half = image[:, image.shape[1] // 2 :]
         for _ in range(number):
             row, col = (rng.integers(0, length - wide + 1) for length in half.shape)
-            changed = change(half[row : row + wide, col : col + wide], rng)
-            top, left = ((length - SIZE) // 2 for length in changed.shape)
-            images.append(changed[top : top + SIZE, left : left + SIZE])
+            scene = Scene(half[row : row + wide, col : col + wide], margin, full_scale=255.0)
+            images.append(condition.change(scene, rng))
             labels.append(name)
     return np.stack(images), np.array(labels)
 
@@ -94,15 +58,12 @@ def main(argv: list[str] | None = None) -> dict[str, dict[str, float]]:
     parser.add_argument("--stride", type=int, default=32, help="step of training patches (32)")
     options = parser.parse_args(argv)
 
-    whole = full_curves()
     settings = {
         "default vector": MinkowskiCurves(n_jobs=-1),
-        "whole curves": MinkowskiCurves(**whole, n_jobs=-1),
-        # light changes what the mean tells, blur and noise what the finest fields tell
-        "without mean and deviation": MinkowskiCurves(**whole, location_scale=False, n_jobs=-1),
-        "without fields at pixel scale": MinkowskiCurves(
-            **whole | {"raw": False, "slope": (2,)}, n_jobs=-1
-        ),
+        'location_scale="ratio"': MinkowskiCurves(location_scale="ratio", n_jobs=-1),
+        # noise roughens what is smooth, so matched scales smooth it more; fixed ones do not
+        'scale_rule="fixed"': MinkowskiCurves(scale_rule="fixed", n_jobs=-1),
+        "whole curves, fixed fields": MinkowskiCurves(**full_curves(), n_jobs=-1),
     }
     X, y = training_patches(options.stride)
     print(
@@ -110,15 +71,17 @@ def main(argv: list[str] | None = None) -> dict[str, dict[str, float]]:
         f"right half; {SIZE}x{SIZE} pixels\n"
     )
     print(
-        "accuracy".ljust(31) + "".join(name.rjust(10) for name in CONDITIONS) + "numbers".rjust(10)
+        "accuracy".ljust(31)
+        + "".join(condition.name.rjust(10) for condition in CONDITIONS)
+        + "numbers".rjust(10)
     )
     accuracies = {}
     for name, curves in settings.items():
         classifier = LinearDiscriminantAnalysis(solver="lsqr", shrinkage="auto")
         model = make_pipeline(curves, StandardScaler(), classifier).fit(X, y)
         accuracies[name] = {
-            condition: float(model.score(*test_patches(options.patches, change, seed)))
-            for seed, (condition, change) in enumerate(CONDITIONS.items())
+            condition.name: float(model.score(*test_patches(options.patches, condition, seed)))
+            for seed, condition in enumerate(CONDITIONS)
         }
         numbers = len(curves.get_feature_names_out())
         print(
