@@ -96,16 +96,18 @@ def _named(name: Any, own: MinkowskiCurves) -> Any:
         return own
     if name in DESCRIPTORS:
         return DESCRIPTORS[name]()
-    if ":" not in name:
-        raise ValueError(f"there is no descriptor {name!r}; known are {_known()}")
     module, _, attribute = name.partition(":")
+    if not module or not attribute or module.startswith("."):
+        raise ValueError(f"there is no descriptor {name!r}; known are {_known()}")
     try:
-        found = getattr(importlib.import_module(module), attribute)
+        imported = importlib.import_module(module)
     except ImportError as error:
         raise ImportError(
             f"descriptor {name!r}: module {module!r} cannot be imported ({error}); it must be "
             "installed, or lie in the current folder"
         ) from error
+    try:
+        found = getattr(imported, attribute)
     except AttributeError:
         raise ValueError(
             f"descriptor {name!r}: module {module!r} has no attribute {attribute!r}"
@@ -140,6 +142,8 @@ def learns(transformer: Any) -> bool:
     """
     if isinstance(transformer, MinkowskiCurves):
         return transformer.level_rule == "fitted"
+    if not hasattr(transformer, "__sklearn_tags__"):
+        return True
     return bool(get_tags(transformer).requires_fit)
 
 
@@ -173,6 +177,8 @@ def classifiers_of(names: Any) -> dict[str, Any]:
     elif isinstance(names, str) or not isinstance(names, Sequence):
         raise TypeError(f"classifiers must be a list of names, or a dict; got {names!r}")
     else:
+        if len(set(map(str, names))) < len(names):
+            raise ValueError(f"classifiers holds a name twice: {list(names)!r}")
         found = {
             name: CLASSIFIERS[_checks.choice("classifiers", name, tuple(CLASSIFIERS))]()
             for name in names
@@ -180,6 +186,8 @@ def classifiers_of(names: Any) -> dict[str, Any]:
     if not found:
         raise ValueError(f"classifiers is empty; known are {', '.join(CLASSIFIERS)}")
     for name, one in found.items():
+        if not isinstance(name, str) or not name:
+            raise TypeError(f"names of classifiers must be text; got {name!r}")
         if not hasattr(one, "fit") or not hasattr(one, "predict") or isinstance(one, type):
             raise TypeError(f"classifier {name!r} must be a scikit-learn classifier; got {one!r}")
     return found

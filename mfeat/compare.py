@@ -29,6 +29,7 @@ from mfeat.costs import measure_costs
 from mfeat.entries import Sources
 from mfeat.images import MAX_PIXELS
 from mfeat.options import DumpSettings, dump_settings
+from mfeat.planning import with_pitch
 from mfeat.pool import Pool, halves_pool, labelled_pool, packed, unpacked
 from mfeat.publishing import OutputRefused
 from mfeat.report import require_charts, write_report
@@ -211,6 +212,12 @@ def _inputs(
     sources = list_sources(source, label_from=reading["label_from"], leave_out=out)
     for remark in sources.remarks:
         _log.warning("%s", remark)
+    settings, differs = with_pitch(settings, sources)
+    if differs:
+        raise ValueError(
+            "the images have different pitches; compare those of each pitch apart, in manifests of "
+            "their own"
+        )
     return sources, settings
 
 

@@ -10,7 +10,7 @@ The strengths are ours: common practice for industrial images, meant to hurt but
 
 import math
 import zlib
-from collections.abc import Callable
+from collections.abc import Callable, Iterable
 from dataclasses import dataclass
 from typing import Any, NamedTuple
 
@@ -177,7 +177,7 @@ def conditions_for(kind: str, names: Any = None) -> list[Condition]:
     """
     if names is None:
         return [condition for condition in CONDITIONS.values() if kind in condition.kinds]
-    if isinstance(names, str):
+    if isinstance(names, str) or not isinstance(names, Iterable):
         raise TypeError(f"conditions must be a list of names; got {names!r}")
     chosen = {_checks.choice("conditions", name, tuple(CONDITIONS)) for name in names} | {"clean"}
     found = [condition for condition in CONDITIONS.values() if condition.name in chosen]
@@ -247,5 +247,8 @@ def _as_before(scene: Scene, values: np.ndarray, missing: np.ndarray | None) -> 
             patch[missing] = np.nan
         return patch
     low, high = (0, 1) if dtype.kind == "b" else (np.iinfo(dtype).min, np.iinfo(dtype).max)
-    patch = np.clip(np.rint(values), low, high).astype(dtype)
+    top = float(high)
+    if top > high:  # of 64 bits: the float beside it does not fit
+        top = np.nextafter(top, 0.0)
+    patch = np.clip(np.rint(values), low, top).astype(dtype)
     return patch if missing is None else np.ma.MaskedArray(patch, missing)

@@ -7,7 +7,6 @@ from typing import Any
 import numpy as np
 import pyarrow as pa
 from sklearn.base import clone
-from sklearn.metrics import balanced_accuracy_score
 from threadpoolctl import threadpool_limits
 
 from mfeat.candidates import learns, prepared
@@ -89,7 +88,7 @@ def results_of(
 
     Whatever goes wrong in it is a result too: rows without accuracy, with the failure.
     """
-    features = _Features(prepared(transformer, contest.any_missing()), contest)
+    features = _Features(transformer, contest)
     rows = []
     with threadpool_limits(1):  # workers share the processors already
         for split in contest.splits:
@@ -132,10 +131,15 @@ def _rows_of_split(
                 "n_train": len(train),
                 "n_test": len(truth),
                 "accuracy": None if reason else float(np.mean(answer == truth)),
-                "balanced_accuracy": None if reason else balanced_accuracy_score(truth, answer),
+                "balanced_accuracy": None if reason else _mean_recall(truth, answer),
                 "n_features": None if given is None else given.shape[1],
                 "failure": reason,
             }
+
+
+def _mean_recall(truth: np.ndarray, answer: np.ndarray) -> float:
+    """Return the mean over the classes in `truth` of the share that was found."""
+    return float(np.mean([np.mean(answer[truth == one] == one) for one in np.unique(truth)]))
 
 
 def _tried(call: Any, *arguments: Any) -> tuple[Any, str | None]:
@@ -158,8 +162,9 @@ class _Features:
     """Features of a candidate; those that depend on no training set are computed once."""
 
     def __init__(self, transformer: Any, contest: Contest):
-        self._transformer, self._contest = transformer, contest
-        self._learns = learns(transformer)
+        self._contest = contest
+        self._made, self._unmade = _tried(prepared, transformer, contest.any_missing())
+        self._learns = self._unmade is None and learns(self._made)
         self._known: dict[str, tuple[np.ndarray | None, str | None]] = {}
         self._last: tuple[Any, Any] = (None, None)
 
@@ -168,6 +173,8 @@ class _Features:
 
     def of(self, condition: str, members: np.ndarray, train: np.ndarray) -> np.ndarray:
         """Return the features (n, p) of some patches under a condition."""
+        if self._unmade is not None:
+            raise Failed(self._unmade)
         if self._learns:
             found = self._computed(self._fitted(train), condition, members)
         else:
@@ -192,7 +199,7 @@ class _Features:
         if self._last[0] != key:
             patches = together(self._contest.patches("clean", train))
             labels = self._contest.labels[train]
-            self._last = key, clone(self._transformer).fit(patches, labels)
+            self._last = key, clone(self._made).fit(patches, labels)
         return self._last[1]
 
     def _computed(self, fitted: Any, condition: str, members: np.ndarray) -> np.ndarray:

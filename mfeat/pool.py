@@ -10,13 +10,17 @@ from tqdm import tqdm
 
 from mfeat._checks import number
 from mfeat._pages import Page, UnreadableImage
-from mfeat.conditions import Scene, margin_for
+from mfeat.conditions import Scene, margin_for, missing_in
 from mfeat.cutting import OpenFiles, cuts
 from mfeat.entries import Sources
 from mfeat.images import grey_rows, missing_pixels, open_pages
 from mfeat.options import DumpSettings
+from mfeat.patches import window_shares
 from mfeat.planning import Item, make_plan
 from mfeat.vector import refusal
+
+#: How many times the patches that a split needs are taken from each half at most.
+_SPARE = 2
 
 
 class Place(NamedTuple):
@@ -81,8 +85,8 @@ def halves_pool(sources: Sources, settings: DumpSettings, wanted: int, quiet: bo
     sources : Sources
     settings : DumpSettings
     wanted : int
-        Patches that each half should give. Where separate ones with their surroundings are fewer,
-        patches overlap by up to half their side.
+        Patches that each half should give; at most twice as many are taken. Where separate ones
+        with their surroundings are fewer, patches overlap by up to half their side.
     quiet : bool
         Whether no progress is shown.
 
@@ -106,9 +110,21 @@ def halves_pool(sources: Sources, settings: DumpSettings, wanted: int, quiet: bo
             f"{number(len(small), 'image')} too small for two patches of {rows}x{cols} pixels in "
             f"each half: {', '.join(small[:5])}; use a smaller size, or leave them out"
         )
-    _require_classes(pool, "one image is one class, so two images at least are needed")
+    why = "one image is one class, so two images at least are needed"
+    _require_classes(pool, why)
     _read_scenes(pool, sources, settings, quiet)
+    _leave_out_poor(pool)
+    _require_classes(pool, why)
     return pool
+
+
+def _leave_out_poor(pool: Pool) -> None:
+    """Leave out images that have fewer than two usable patches in a half."""
+    counts = Counter((place.label, place.half) for place in pool.places)
+    poor = [one for one in pool.classes if min(counts[one, 0], counts[one, 1]) < 2]
+    pool.left_out += [(one, "fewer than two usable patches in a half") for one in poor]
+    kept = [k for k, place in enumerate(pool.places) if place.label not in poor]
+    pool.places, pool.scenes = ([all_[k] for k in kept] for all_ in (pool.places, pool.scenes))
 
 
 def labelled_pool(
@@ -119,7 +135,7 @@ def labelled_pool(
     Raises
     ------
     ValueError
-        If no patch has a label, or a class has one patch.
+        If no patch has a label, there are fewer than two classes, or a class has one patch.
     """
     pool = Pool([])
     entries = sources.entries.select(["source", "label", "group"]).to_pylist()
@@ -149,7 +165,7 @@ def labelled_pool(
             if label is not None:
                 own = (item.entry, item.page, row, col, *cut.size, bounds, label, group, -1)
                 pool.places.append(Place(*own))
-    if not pool.places:
+    if not pool.places and unlabelled:
         raise ValueError(
             "no patch has a label; name where labels come from (label_from), or compare with "
             'protocol="halves", where every image is a class of its own'
@@ -206,10 +222,13 @@ def _in_halves(
     for half in (0, 1):
         top = item.row + half * (item.height - half_rows)
         bounds = (top, item.col, top + half_rows, item.col + item.width)
-        for row in rows:
-            for col in cols:
-                own = (item.entry, item.page, top + row, item.col + col, *size, bounds)
-                places.append(Place(*own, source, source, half))
+        grid = [(row, col) for row in rows for col in cols]
+        if len(grid) > _SPARE * wanted:  # of a large image, places spread over all of it
+            evenly = np.linspace(0, len(grid) - 1, _SPARE * wanted).round().astype(int)
+            grid = [grid[k] for k in evenly]
+        for row, col in grid:
+            own = (item.entry, item.page, top + row, item.col + col, *size, bounds)
+            places.append(Place(*own, source, source, half))
     return places, overlap
 
 
@@ -259,6 +278,7 @@ def _drawn(places: list[Place], wanted: int, seed: int) -> list[Place]:
     chosen = set()
     for groups in by_class.values():
         queues = [[own[k] for k in rng.permutation(len(own))] for own in groups.values()]
+        rng.shuffle(queues)  # else the groups listed first would be drawn where not all can be
         count = 0
         while queues and count < wanted:
             for queue in queues:
@@ -270,7 +290,8 @@ def _drawn(places: list[Place], wanted: int, seed: int) -> list[Place]:
 
 
 def _read_scenes(pool: Pool, sources: Sources, settings: DumpSettings, quiet: bool) -> None:
-    """Read the pixels of all places; places of an image that cannot be read are left out."""
+    """Read the pixels of all places; those that cannot be read or used are left out."""
+    min_valid = float(settings.transformer.min_valid)
     entries = sources.entries.to_pylist()
     kept: list[tuple[Place, np.ndarray, int, Any]] = []
     by_image: dict[tuple[int, int], list[Place]] = defaultdict(list)
@@ -285,6 +306,11 @@ def _read_scenes(pool: Pool, sources: Sources, settings: DumpSettings, quiet: bo
         for place in places:
             margin = margin_for((place.height, place.width))
             region, mirrored = _surrounded(pixels, place, margin)
+            if reason := _unusable(region, margin, min_valid):
+                where = f"{entries[k]['source']} row {place.row}, column {place.col}"
+                pool.left_out.append((where, reason))
+                continue
+            region = _without_infinities(region)
             pool.mirrored += mirrored
             kept.append((place, region, margin, stored))
     pool.places = [place for place, *_ in kept]
@@ -300,6 +326,34 @@ def _read_scenes(pool: Pool, sources: Sources, settings: DumpSettings, quiet: bo
     pool.scenes = [
         Scene(region, margin, scales.get(str(stored), 1.0)) for _, region, margin, stored in kept
     ]
+
+
+def _unusable(region: np.ndarray, margin: int, min_valid: float) -> str | None:
+    """Return why a patch cannot be used, as `cuts` would say it, or None."""
+    patch = Scene(region, margin, 1.0).patch
+    if (infinite := _infinities(patch)) is not None and infinite.any():
+        return "holds infinite values, which cannot be ranked"
+    if (missing := missing_in(patch)) is None:
+        return None
+    valid = (~missing).astype(np.uint8)
+    return refusal(
+        float(window_shares(valid, np.zeros((1, 2), np.int64), patch.shape)[0]), min_valid
+    )
+
+
+def _infinities(pixels: np.ndarray) -> np.ndarray | None:
+    """Return where valid pixels are infinite; None for integers."""
+    if pixels.dtype.kind != "f":
+        return None
+    return np.isinf(np.ma.getdata(pixels)) & ~np.ma.getmaskarray(pixels)
+
+
+def _without_infinities(region: np.ndarray) -> np.ndarray:
+    """Return a region with infinities masked: beside a patch, they would spread into it."""
+    infinite = _infinities(region)
+    if infinite is None or not infinite.any():
+        return region
+    return np.ma.MaskedArray(region, np.ma.getmaskarray(region) | infinite)
 
 
 def _full_scales(kept: list[tuple]) -> dict[str, float]:

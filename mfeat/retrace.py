@@ -9,7 +9,7 @@ from mfeat.entries import Sources, changed_inputs, with_stamps
 from mfeat.options import DumpSettings, dump_settings
 from mfeat.parts import InputChanged, load_entries
 from mfeat.publishing import manifest_of
-from mfeat.schema import MANIFEST, about, restored
+from mfeat.schema import MANIFEST, about, per_image_pitch, restored
 
 
 def is_table(source: Any) -> bool:
@@ -28,12 +28,19 @@ def table_inputs(source: Any) -> tuple[Sources, DumpSettings]:
     ------
     InputChanged
         If an image is not what it was; it is named.
+    ValueError
+        If the images had pitches of their own.
     """
     place = locations.as_location(source, "source")
     store = storage.output(place)
     manifest = manifest_of(store)
     with store.open(manifest["parts"][0]["name"]) as stream:
         made = about(pq.read_schema(stream))
+    if per_image_pitch(made["transformer"]):
+        raise ValueError(
+            f"the images of {place} have pitches of their own, but patches are compared at one "
+            "pitch; name the manifest instead, with a transformer of the pitch that is meant"
+        )
     record = manifest["record"]
     keywords = {name: record[name] for name in dump_settings().keywords()}
     entries = load_entries(store, "")

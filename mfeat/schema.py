@@ -60,6 +60,11 @@ def transformer_record(transformer: MinkowskiCurves, per_image_pitch: bool) -> d
     }
 
 
+def per_image_pitch(record: dict[str, Any]) -> bool:
+    """Tell whether a transformer's record leaves the pitch to each image."""
+    return record["parameters"]["pitch"] == _PER_IMAGE
+
+
 def restored(record: dict[str, Any]) -> MinkowskiCurves:
     """Return the transformer of a record.
 

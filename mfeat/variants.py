@@ -3,6 +3,7 @@
 from collections.abc import Iterator
 from typing import Any
 
+import numpy as np
 from sklearn.base import clone
 
 from mfeat.fields import FAMILIES
@@ -16,8 +17,9 @@ _LEVELS = (8, 16, 32, 64)
 def variants_of(transformer: MinkowskiCurves) -> dict[str, MinkowskiCurves]:
     """Return variants by what they are, e.g. "without euler", "only smooth", "32 levels".
 
-    Each differs from `transformer` in one part. Variants that would be empty or equal to it are
-    not among them.
+    Each differs from `transformer` in one part. Variants that would be empty, equal to it or to one
+    before, or that its other settings exclude (levels given by family, say, where families are
+    added) are not among them. They are not fitted, whether it is or not.
 
     Examples
     --------
@@ -26,11 +28,16 @@ def variants_of(transformer: MinkowskiCurves) -> dict[str, MinkowskiCurves]:
     >>> list(variants_of(MinkowskiCurves()))[:3]
     ['without area', 'without contour', 'without euler']
     """
-    fingerprint = transformer.fingerprint()
+    seen = [transformer._plan().settings()]
     found = {}
     for name, parameters in _changes(transformer):
         variant = clone(transformer).set_params(**parameters)
-        if variant.fingerprint() != fingerprint:
+        try:
+            settings = variant._plan().settings()
+        except ValueError:
+            continue  # its settings exclude each other
+        if settings not in seen:
+            seen.append(settings)
             found[name] = variant
     return found
 
@@ -46,6 +53,7 @@ def _changes(transformer: MinkowskiCurves) -> Iterator[tuple[str, dict[str, Any]
                 yield f"without {one}", without(transformer, rest)
             for one in parts:
                 yield f"only {one}", without(transformer, [one])
+    together = {"separate_scale": False, "location_scale": bool(transformer.location_scale)}
     if functionals:
         yield "without location and scale", {"location_scale": False}
         if transformer.separate_scale:
@@ -62,15 +70,14 @@ def _changes(transformer: MinkowskiCurves) -> Iterator[tuple[str, dict[str, Any]
             yield "rank levels", levels | {"level_rule": "rank"}
         else:
             yield "rank levels", {"level_rule": "rank", "level_range": None}
-        if isinstance(transformer.levels, int):
+        if isinstance(transformer.levels, int | np.integer):
             for number in _LEVELS:
                 yield f"{number} levels", {"levels": number}
     if transformer.separate_scale:
-        location = {True: True, "ratio": True, False: False}[transformer.location_scale]
-        yield "scale not apart", {"separate_scale": False, "location_scale": location}
+        yield "scale not apart", together
     if transformer.scale_rule == "matched":
         yield "fixed Gaussians", {"scale_rule": "fixed"} | _halved(transformer)
-        yield "whole curves of fixed fields", full_curves()
+        yield "whole curves of fixed fields", full_curves() | together
 
 
 def _is_on(transformer: MinkowskiCurves, family: str) -> bool:
