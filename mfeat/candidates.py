@@ -188,6 +188,7 @@ def classifiers_of(names: Any) -> dict[str, Any]:
     for name, one in found.items():
         if not isinstance(name, str) or not name:
             raise TypeError(f"names of classifiers must be text; got {name!r}")
-        if not hasattr(one, "fit") or not hasattr(one, "predict") or isinstance(one, type):
+        needed = ("fit", "predict", "get_params")
+        if isinstance(one, type) or not all(hasattr(one, method) for method in needed):
             raise TypeError(f"classifier {name!r} must be a scikit-learn classifier; got {one!r}")
     return found

@@ -47,6 +47,11 @@ def require_matplotlib() -> Any:
     return Figure
 
 
+def _plain(name: str) -> str:
+    """Return a name as it is shown as it is: matplotlib reads what stands between $ as formula."""
+    return name.replace("$", r"\$")
+
+
 def _axes(width: float, height: float) -> tuple[Any, Any]:
     figure = require_matplotlib()(figsize=(width, height), layout="constrained")
     axes = figure.add_subplot()
@@ -76,11 +81,11 @@ def draw_lines(
     """
     figure, axes = _axes(8.6, 4.4)
     x = np.arange(len(places))
-    others = 0
+    others, handles = 0, []
     for line in lines:
         style = _style(others, line.own)
         others += not line.own
-        axes.plot(x, line.values, label=line.name, **style)
+        handles += axes.plot(x, line.values, label=line.name, **style)
         if line.own and line.low is not None:
             axes.fill_between(x, line.low, line.high, color=OWN_COLOUR, alpha=0.15, linewidth=0)
     axes.set_xticks(x, places)
@@ -89,9 +94,8 @@ def draw_lines(
     axes.margins(x=0.03)
     axes.set_ylim(top=min(1.0, axes.get_ylim()[1]) + 0.005)
     order = np.argsort([-np.nan_to_num(np.mean(line.values), nan=-1.0) for line in lines])
-    handles, labels = axes.get_legend_handles_labels()
-    axes.legend(
-        [handles[k] for k in order], [labels[k] for k in order], frameon=False,
+    axes.legend(  # named here: matplotlib leaves labels out that begin with "_"
+        [handles[k] for k in order], [_plain(lines[k].name) for k in order], frameon=False,
         loc="center left", bbox_to_anchor=(1.0, 0.5), handlelength=3.4,
     )  # fmt: skip
     return figure
@@ -110,7 +114,7 @@ def draw_costs(
         for unwanted in ("dashes", "linewidth"):
             style.pop(unwanted, None)
         axes.plot([x], [y], linestyle="none", **style | {"markersize": 9})
-        axes.annotate(name, (x, y), xytext=(8, 5), textcoords="offset points", fontsize=9,
+        axes.annotate(_plain(name), (x, y), xytext=(8, 5), textcoords="offset points", fontsize=9,
                       color="#222222", weight="bold" if name == own else "normal")  # fmt: skip
     axes.set_xscale("log")
     axes.set_xlabel(across)
@@ -134,9 +138,9 @@ def draw_bars(
                   edgecolor="white")  # fmt: skip
     reach = np.nan_to_num(np.stack([values - low, high - values]))
     axes.errorbar(values, y, xerr=reach, fmt="none", ecolor="#222222", elinewidth=1, capsize=2)
-    axes.set_yticks(y, names)
+    axes.set_yticks(y, [_plain(name) for name in names])
     axes.axvline(0.0, color="#222222", linewidth=1)
-    axes.set_xlabel(across)
+    axes.set_xlabel(_plain(across))
     axes.margins(y=0.02)
     return figure
 

@@ -346,7 +346,8 @@ def _compare(options: argparse.Namespace) -> int:
         print(f"mfeat compare: {verdict(found)}", file=sys.stderr)
         return f"{found.out}/{REPORT_HTML}"
 
-    kept = f"what is finished is kept in {options.out}; the same command goes on from there"
+    again = "the same command" + (" without --fresh" if options.fresh else "")
+    kept = f"what is finished is kept in {options.out}; {again} goes on from there"
     return _run("compare", run, "is complete", kept)
 
 

@@ -2,7 +2,9 @@
 
 import json
 import logging
-from collections.abc import Callable, Iterator, Sequence
+import re
+import sys
+from collections.abc import Callable, Iterable, Iterator, Sequence
 from dataclasses import dataclass, replace
 from typing import Any
 
@@ -13,7 +15,7 @@ from joblib import Parallel, delayed
 from tqdm import tqdm
 
 from mfeat import __version__, _checks, locations, storage
-from mfeat.candidates import candidates_of, classifiers_of
+from mfeat.candidates import OWN, candidates_of, classifiers_of
 from mfeat.comparison import (
     COMPARISON,
     COSTS,
@@ -26,7 +28,7 @@ from mfeat.comparison import (
 from mfeat.conditions import conditions_for
 from mfeat.contest import RESULTS_SCHEMA, Contest, results_of
 from mfeat.costs import measure_costs
-from mfeat.entries import Sources
+from mfeat.entries import Sources, changed_inputs
 from mfeat.images import MAX_PIXELS
 from mfeat.options import DumpSettings, dump_settings
 from mfeat.planning import with_pitch
@@ -172,6 +174,11 @@ def compare(
     sources, settings = _inputs(source, place, transformer, reading)
     chosen = candidates_of(descriptors, settings.transformer)
     if ablation:
+        if next(iter(chosen)) != OWN:
+            raise ValueError(
+                f"ablation compares variants of {OWN!r} with it, so it must come first among the "
+                f"descriptors; got {list(chosen)}"
+            )
         chosen |= {f"{VARIANT}{k}": v for k, v in variants_of(settings.transformer).items()}
     plan = _Plan(
         sources=sources,
@@ -204,6 +211,13 @@ def _inputs(
 ) -> tuple[Sources, DumpSettings]:
     """Return the images of a source, and how they are read: as given, or as a table was made."""
     if is_table(source):
+        default = dump_settings().keywords()
+        given = dump_settings(**reading).keywords()
+        if others := [name for name in reading if given[name] != default[name]]:
+            raise ValueError(
+                f"source {source} is a table, whose images are read and labelled as when it was "
+                f"made; leave out {', '.join(others)}, or give the images themselves"
+            )
         sources, settings = table_inputs(source)
         if transformer is not None:
             settings = replace(settings, transformer=dump_settings(transformer).transformer)
@@ -245,6 +259,8 @@ def _train_sizes(train: Any) -> tuple[int, ...] | None:
         return None
     if isinstance(train, int | np.integer):
         train = (train,)
+    if isinstance(train, str) or not isinstance(train, Iterable):
+        raise TypeError(f"train must be numbers of patches a class; got {train!r}")
     sizes = [_checks.integer(f"train[{k}]", n, minimum=1) for k, n in enumerate(train)]
     if not sizes or sorted(set(sizes)) != sizes:
         raise ValueError(f"train must be ascending numbers of patches a class; got {train!r}")
@@ -282,9 +298,11 @@ class _Plan:
         """Return all that the accuracies depend on, in types that JSON knows."""
         reading = self.settings.keywords()
         kept = ("regions", "label_from", "truth_rule", "channel", "missing_value", "max_pixels")
+        inputs = ("source", "stamp", "label", "group", "mask", "row", "col", "height", "width")
         return {
             "mfeat_version": __version__,
             "descriptors": {name: _described(one) for name, one in self.candidates.items()},
+            "order": list(self.candidates),  # the first is the reference; parts are numbered by it
             "classifiers": {name: _described(one) for name, one in self.classifiers.items()},
             "conditions": None if self.conditions is None else list(self.conditions),
             "protocol": self.protocol,
@@ -296,9 +314,8 @@ class _Plan:
             "folds": self.folds,
             "seed": self.seed,
             "reading": {name: reading[name] for name in kept},
-            "inputs": self.sources.entries.select(["source", "stamp", "label", "group"])
-            .to_pylist(),
-        }  # fmt: skip
+            "inputs": self.sources.entries.select(inputs).to_pylist(),
+        }
 
     def contest(self, size: tuple[int, int], quiet: bool | None) -> tuple[Contest, Pool]:
         """Choose and read the patches of a size, and draw the splits."""
@@ -347,8 +364,10 @@ class _Plan:
 
 def _described(one: Any) -> str:
     """Return a transformer or classifier as text with all its parameters."""
-    parameters = ", ".join(f"{k}={v!r}" for k, v in sorted(one.get_params(deep=False).items()))
-    return f"{type(one).__module__}.{type(one).__qualname__}({parameters})"
+    with np.printoptions(threshold=sys.maxsize, floatmode="unique"):  # nothing is left out
+        parameters = ", ".join(f"{k}={v!r}" for k, v in sorted(one.get_params(deep=False).items()))
+    text = f"{type(one).__module__}.{type(one).__qualname__}({parameters})"
+    return re.sub(r" at 0x[0-9a-fA-F]+", "", text)  # another process has other addresses
 
 
 class _ComparisonRun:
@@ -360,20 +379,21 @@ class _ComparisonRun:
 
     def complete(self, fresh: bool) -> None:
         """Resume, start, or find the comparison complete."""
-        if fresh:
-            self._store.remove_tree(_RUN)
-        elif self._store.exists(_RECORD):
+        goes_on = not fresh and self._store.exists(_RECORD)
+        if goes_on:
             self._refuse_differences(_RECORD, "an interrupted comparison", lambda found: found)
-        elif self._store.exists(COMPARISON):
+        elif not fresh and self._store.exists(COMPARISON):
             self._refuse_differences(COMPARISON, "a comparison", lambda found: found["record"])
             return
-        self._store.make(_RUN)
-        self._write_json(_RECORD, self._record)
         contests, pools = [], []
         for size in self._plan.sizes:
             contest, pool = self._plan.contest(size, self._quiet)
             contests.append(contest)
             pools.append(pool)
+        if not goes_on:  # only now: what cannot be compared leaves no trace
+            self._store.remove_tree(_RUN)  # parts without a record are of an unknown run
+            self._store.make(_RUN)
+            self._write_json(_RECORD, self._record)
         self._compete(contests)
         costs = [measure_costs(self._plan.candidates, one, self._quiet) for one in contests]
         self._finish(contests, pools, pa.concat_tables(costs))
@@ -383,7 +403,9 @@ class _ComparisonRun:
     ) -> None:
         with self._store.open(name) as stream:
             there = record_of(json.loads(stream.read()))
-        found = differences(there, json.loads(json.dumps(self._record)))
+        now = json.loads(json.dumps(self._record))
+        inputs = [pa.Table.from_pylist(record.pop("inputs")) for record in (there, now)]
+        found = [*differences(there, now), *changed_inputs(*inputs)]
         if found:
             lines = "\n  ".join(found)
             raise OutputRefused(
@@ -452,6 +474,9 @@ class _ComparisonRun:
         for name in names:
             self._store.make(name.rpartition("/")[0])
             self._store.move(f"{_RUN}/{name}", name)
+        for name in self._store.names("charts"):
+            if f"charts/{name}" not in names:  # of an earlier comparison
+                self._store.remove(f"charts/{name}")
         self._store.move(f"{_RUN}/{COMPARISON}", COMPARISON)
         self._store.settle()
         self._store.remove_tree(_RUN)
@@ -462,6 +487,8 @@ def _part_of(size: int, candidate: int) -> str:
 
 
 def _about_size(contest: Contest, pool: Pool) -> dict[str, Any]:
+    largest = contest.train_sizes[-1]
+    ratios = [len(split.test) / len(split.training(largest)) for split in contest.splits]
     return {
         "size": list(contest.size),
         "patches": len(pool.places),
@@ -470,7 +497,7 @@ def _about_size(contest: Contest, pool: Pool) -> dict[str, Any]:
         "train_sizes": list(contest.train_sizes),
         "conditions": list(contest.conditions),
         "splits": len(contest.splits),
-        "ratio": float(np.mean([split.ratio for split in contest.splits])),
+        "ratio": float(np.mean(ratios)),
         "mirrored": pool.mirrored,
         "overlapping": pool.overlapping,
         "left_out": pool.left_out,

@@ -9,7 +9,7 @@ import numpy as np
 import pyarrow as pa
 import pyarrow.parquet as pq
 
-from mfeat import locations, storage
+from mfeat import _checks, locations, storage
 from mfeat.significance import Difference, Mean, compare_paired, holm, mean_with_interval
 
 RESULTS = "results.parquet"
@@ -107,7 +107,11 @@ class Comparison:
 
     def _about_size(self, size: tuple[int, int] | None) -> dict[str, Any]:
         sizes = self.about["sizes"]
-        return sizes[0] if size is None else sizes[self.sizes.index(size)]
+        if size is None:
+            return sizes[0]
+        if isinstance(size, tuple | list) and tuple(size) in self.sizes:
+            return sizes[self.sizes.index(tuple(size))]
+        raise ValueError(f"size must be one of {', '.join(map(str, self.sizes))}; got {size!r}")
 
     def splits(
         self,
@@ -136,11 +140,23 @@ class Comparison:
         -------
         ndarray of shape (J,)
             NaN where something failed.
+
+        Raises
+        ------
+        ValueError
+            For what did not take part; variants took part at the largest training size only.
         """
+        _checks.choice("descriptor", descriptor, self.descriptors)
+        _checks.choice("condition", condition, [*self.conditions, ALL])
         conditions = self.conditions if condition == ALL else [condition]
-        classifiers = self.classifiers if classifier is None else [classifier]
-        size = self.sizes[0] if size is None else size
-        train_size = self.train_sizes(size)[-1] if train_size is None else train_size
+        classifiers = self.classifiers
+        if classifier is not None:
+            classifiers = [_checks.choice("classifier", classifier, self.classifiers)]
+        known = self.train_sizes(size)[-1:] if is_variant(descriptor) else self.train_sizes(size)
+        size = self.sizes[0] if size is None else tuple(size)
+        if train_size is None:
+            train_size = known[-1]
+        _checks.choice("train_size", train_size, known)
         found = [
             self._index[descriptor, one, other, size, train_size]
             for one in classifiers

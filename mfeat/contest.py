@@ -117,9 +117,9 @@ def _rows_of_split(
         for condition, (found, reason) in tests.items():
             reason = untrained or reason
             truth = contest.labels[split.test]
-            answer = None
+            scores = None
             if reason is None:
-                answer, reason = _tried(model.predict, found)
+                scores, reason = _tried(_scores, model, found, truth)
             yield {
                 "classifier": name,
                 "condition": condition,
@@ -130,8 +130,8 @@ def _rows_of_split(
                 "fold": split.fold,
                 "n_train": len(train),
                 "n_test": len(truth),
-                "accuracy": None if reason else float(np.mean(answer == truth)),
-                "balanced_accuracy": None if reason else _mean_recall(truth, answer),
+                "accuracy": None if scores is None else scores[0],
+                "balanced_accuracy": None if scores is None else scores[1],
                 "n_features": None if given is None else given.shape[1],
                 "failure": reason,
             }
@@ -156,6 +156,14 @@ def _tried(call: Any, *arguments: Any) -> tuple[Any, str | None]:
 
 def _fitted(classifier: Any, features: np.ndarray, labels: np.ndarray) -> Any:
     return clone(classifier).fit(features, labels)
+
+
+def _scores(model: Any, features: np.ndarray, truth: np.ndarray) -> tuple[float, float]:
+    """Return the share of right answers, and its mean over the classes that are tested."""
+    answer = np.asarray(model.predict(features))
+    if answer.shape != truth.shape:
+        raise Failed(f"predict gave shape {answer.shape} for {len(truth)} patches")
+    return float(np.mean(answer == truth)), _mean_recall(truth, answer)
 
 
 class _Features:
@@ -220,9 +228,9 @@ class _Features:
 
 
 def together(patches: list[np.ndarray]) -> Any:
-    """Return patches as one array where they can be one, else as a list."""
+    """Return copies of patches, as one array where they can be one, else as a list."""
     alike = len({(patch.shape, patch.dtype) for patch in patches}) == 1
-    if not alike:
-        return patches
+    if not alike:  # a candidate that writes into its input must not change that of others
+        return [patch.copy() for patch in patches]
     masked = any(np.ma.isMaskedArray(patch) for patch in patches)
     return np.ma.stack(patches) if masked else np.stack(patches)

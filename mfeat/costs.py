@@ -42,22 +42,32 @@ def measure_costs(candidates: dict[str, Any], contest: Contest, quiet: bool | No
     """
     spread = np.linspace(0, len(contest.scenes) - 1, PATCHES).astype(int)
     members = np.unique(spread)
-    patches = together(contest.patches("clean", members))
+    patches = contest.patches("clean", members)
+
+    def own() -> Any:  # a candidate that writes into its input must not change that of others
+        return together(patches)
+
     missing = contest.any_missing()
     fitted, failures = {}, {}
     with threadpool_limits(1):
         for name, transformer in tqdm(candidates.items(), desc="costs", disable=quiet):
             try:
-                model = clone(prepared(transformer, missing)).fit(patches, contest.labels[members])
-                model.transform(patches)  # compiles, and fills caches
-                fitted[name] = (model, *_peak(model, patches))
+                model = clone(prepared(transformer, missing)).fit(own(), contest.labels[members])
+                model.transform(own())  # compiles, and fills caches
+                fitted[name] = (model, *_peak(model, own()))
             except Exception as error:  # of a candidate: any; its results tell it, too
-                failures[name] = f"{type(error).__name__}: {' '.join(str(error).split())}"
+                failures[name] = _told(error)
         seconds = {name: np.empty(ROUNDS) for name in fitted}
         for k in range(ROUNDS):
-            for name, (model, *_) in fitted.items():
+            for name, (model, *_) in list(fitted.items()):
+                given = own()
                 started = time.perf_counter()
-                model.transform(patches)
+                try:
+                    model.transform(given)
+                except Exception as error:
+                    failures[name] = _told(error)
+                    del fitted[name], seconds[name]
+                    continue
                 seconds[name][k] = time.perf_counter() - started
     first = seconds.get(next(iter(candidates)))
     rows = []
@@ -75,6 +85,10 @@ def measure_costs(candidates: dict[str, Any], contest: Contest, quiet: bool | No
                 row |= {"ratio": middle, "ratio_low": low, "ratio_high": high}
         rows.append(row)
     return pa.Table.from_pylist(rows, schema=COSTS_SCHEMA)
+
+
+def _told(error: Exception) -> str:
+    return f"{type(error).__name__}: {' '.join(str(error).split())}"
 
 
 def _peak(model: Any, patches: Any) -> tuple[int, int]:

@@ -32,7 +32,7 @@ def markdown(title: str, caution: str, sections: Sequence[Any]) -> str:
     for section in sections:
         lines += ["", f"## {section.title}"]
         for text in section.text:
-            lines += ["", text]
+            lines += ["", _escaped(text)]
         if section.chart is not None:
             name, about, _ = section.chart
             lines += ["", f"![{about}](charts/{name}.png)"]
@@ -45,7 +45,13 @@ def markdown(title: str, caution: str, sections: Sequence[Any]) -> str:
 
 
 def _row(cells: Sequence[str]) -> str:
-    return "| " + " | ".join(cell.replace("|", "\\|").replace("\n", " ") for cell in cells) + " |"
+    shown = [_escaped(cell).replace("|", "\\|").replace("\n", " ") for cell in cells]
+    return f"| {' | '.join(shown)} |"
+
+
+def _escaped(text: str) -> str:
+    """Return text that Markdown does not take for HTML."""
+    return html.escape(text, quote=False)
 
 
 def html_page(title: str, caution: str, sections: Sequence[Any], files: dict[str, bytes]) -> str:

@@ -287,7 +287,7 @@ def _ablation(found: Comparison) -> Section | None:
     ]  # fmt: skip
     rows.insert(
         0, [own, *(short(found.accuracy(own, c).mean) for c in (*found.conditions, ALL)), "",
-            str(found.cost(own)["n_features"])]
+            str(found.cost(own)["n_features"] or "–")]
     )  # fmt: skip
     chart = None
     if figure is not None:
@@ -334,18 +334,35 @@ def _remarks(found: Comparison) -> Section:
             )
         if about["overlapping"]:
             text.append(f"{size}: patches overlap, because the images are small.")
-    left_out = found.about["sizes"][0]["left_out"]
+    left_out = list(dict.fromkeys(
+        tuple(one) for about in found.about["sizes"] for one in about["left_out"]
+    ))  # fmt: skip
     if left_out:
         text.append(f"{len(left_out)} left out" + _first_of(left_out))
         tables.append(Table(["left out", "why"], [list(one) for one in left_out[:_LISTED]]))
-    failures = found.failures()
+    failures = _failures(found)
     if failures:
-        text.append(f"{len(failures)} failures" + _first_of(failures))
-        rows = [[*one[:3], str(one[3])] for one in failures[:_LISTED]]
-        tables.append(Table(["descriptor", "condition", "failure", "results"], rows))
+        text.append(f"{len(failures)} failures:")
+        tables.append(Table(["descriptor", "condition", "failure", "results"], failures))
     if not text:
         text.append("Nothing was left out, and nothing failed.")
     return Section("Left out, failed, worth knowing", text, None, tables)
+
+
+def _failures(found: Comparison) -> list[list[str]]:
+    """Return a row for each descriptor and condition that failed: the most frequent reason."""
+    reasons: dict[tuple[str, str], dict[str, int]] = {}
+    for name, condition, reason, count in found.failures():
+        reasons.setdefault((name, condition), {})[reason] = count
+    for row in found.costs.to_pylist():
+        if row["failure"] is not None:
+            reasons.setdefault((row["descriptor"], "costs"), {})[row["failure"]] = 1
+    rows = []
+    for own, counts in reasons.items():
+        main = max(counts, key=counts.get)
+        others = f" (and {len(counts) - 1} other reasons)" if len(counts) > 1 else ""
+        rows.append([*own, main + others, str(sum(counts.values()))])
+    return rows
 
 
 def _first_of(listed: list) -> str:
