@@ -23,7 +23,7 @@ from mfeat._checks import read_only
 
 #: Functionals of the vector in their order, with the number of Hermite functions that each gets by
 #: default: an even one more tells little.
-TERMS = {"area": 4, "contour": 2, "euler": 4, "anisotropy": 1}
+TERMS = {"area": 4, "contour": 2, "euler": 4, "anisotropy": 3}
 
 #: Range of the levels by which curves are integrated, where none is given.
 LEVEL_RANGE = (-3.0, 3.0)

@@ -125,10 +125,11 @@ class VectorPlan:
             return []
         found = []
         for scale in self.roughness:
-            first = scale == self.roughness[0]
-            if first and self.location_scale is True:
+            first, located = scale == self.roughness[0], self.location_scale is True
+            if located:
                 found.append((scale, "log_contrast"))
-            if not (first and self.location_scale == "ratio"):
+            # beside contrasts, the ratios of deviations would say the same again
+            if self.location_scale != "ratio" if first else not located:
                 found.append((scale, "log_std"))
             found += [(scale, "log_slope"), (scale, "log_curvature")]
         return found

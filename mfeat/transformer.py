@@ -55,7 +55,7 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
         few Hermite functions, see `mfeat.basis`; level rule "standard" only.
     terms : int or dict, optional
         Number of Hermite functions, 1 to 16, for all functionals or by functional; default
-        ``{"area": 4, "contour": 2, "euler": 4, "anisotropy": 1}``.
+        ``{"area": 4, "contour": 2, "euler": 4, "anisotropy": 3}``.
     levels : int, sequence of float, or dict, default 16
         Number of levels (1 to 65,535), or the levels themselves in the units of the rule. A dict
         gives either one per field family, e.g. ``{"raw": 32, "slope": 8}``.
@@ -70,16 +70,16 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
         A dict gives one per field family.
     raw : bool, default False
         Whether the image itself is a field.
-    smooth : tuple of float, default (1.5, 2, 2.8)
+    smooth : tuple of float, default (1.5, 2.1)
         Scales of the smoothings; () for none.
     band : tuple of float, default ()
         Scales of the bands: the smoothing at s minus that at 2 s.
     slope : tuple of float, default ()
         Scales at which the gradient magnitude is taken (0: of the image itself), in data units per
         length.
-    curvature : tuple of float, default (1.5, 2, 2.8)
+    curvature : tuple of float, default (1.5, 2.1)
         Scales at which minus half the Laplacian is taken, in data units per length^2.
-    contrast : tuple of float, default (1.5, 2, 2.8)
+    contrast : tuple of float, default (1.5, 2.1)
         Scales at which the smoothed image is divided by its own local contrast: its difference
         from the local mean, over the local standard deviation, both in a Gaussian window of 1.4
         times the scale (2.5 times under "fixed"). Uneven light and gain do not matter.
@@ -103,11 +103,11 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
         multiplied by the field's correlation length (standard deviation over root mean square slope
         in one direction), the Euler number by its square, which makes pure numbers of them.
         Gaussian fields then have the same curves, whatever their size.
-    roughness : tuple of float, default (1.5, 3)
+    roughness : tuple of float, default (1.1, 3)
         Gaussian scales under which the numbers of the scale are taken: "log_std", the logarithm of
         the standard deviation; "log_slope" and "log_curvature", of the root mean squares of
         gradient and curvature; all but the first divided by the first's deviation. "log_contrast":
-        of the first deviation over the root mean square of the pixels.
+        of the deviation over the root mean square of the pixels, in place of later deviations.
     directional : bool, default False
         Whether the crossing densities of four directions are features; they tell orientations
         apart and change when the part is turned.
@@ -217,16 +217,16 @@ class MinkowskiCurves(TransformerMixin, BaseEstimator):
         level_rule="standard",
         level_range=None,
         raw=False,
-        smooth=(1.5, 2, 2.8),
+        smooth=(1.5, 2.1),
         band=(),
         slope=(),
-        curvature=(1.5, 2, 2.8),
-        contrast=(1.5, 2, 2.8),
+        curvature=(1.5, 2.1),
+        contrast=(1.5, 2.1),
         scale_rule="matched",
         remove_tilt=False,
         location_scale=True,
         separate_scale=True,
-        roughness=(1.5, 3),
+        roughness=(1.1, 3),
         directional=False,
         connectivity="mean",
         contour_estimator="crofton-4",

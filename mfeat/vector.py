@@ -126,7 +126,8 @@ def _write_scale(plan: VectorPlan, pixels: Smoothings, out: np.ndarray) -> None:
     """Write the numbers that tell the scale of each image: logarithms, all at fixed Gaussians.
 
     The deviation at the first Gaussian is in the pixels' unit; the others, and gradients and
-    curvatures, are divided by it. The contrast is its share of the root mean square of the pixels.
+    curvatures, are divided by it. A contrast is the deviation as a share of the pixels' root mean
+    square.
     """
     first, before = np.empty(0), None
     for column, (scale, name) in enumerate(plan.scale_features):
