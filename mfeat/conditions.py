@@ -177,9 +177,7 @@ def conditions_for(kind: str, names: Any = None) -> list[Condition]:
     """
     if names is None:
         return [condition for condition in CONDITIONS.values() if kind in condition.kinds]
-    if isinstance(names, str) or not isinstance(names, Iterable):
-        raise TypeError(f"conditions must be a list of names; got {names!r}")
-    chosen = {_checks.choice("conditions", name, tuple(CONDITIONS)) for name in names} | {"clean"}
+    chosen = {*known_names(names), "clean"}
     found = [condition for condition in CONDITIONS.values() if condition.name in chosen]
     for condition in found:
         if kind not in condition.kinds:
@@ -189,6 +187,13 @@ def conditions_for(kind: str, names: Any = None) -> list[Condition]:
                 f"these are {kind} images ({pixels} pixels)"
             )
     return found
+
+
+def known_names(names: Any) -> list[str]:
+    """Return names of conditions as a list, each checked."""
+    if isinstance(names, str) or not isinstance(names, Iterable):
+        raise TypeError(f"conditions must be a list of names; got {names!r}")
+    return [_checks.choice("conditions", name, tuple(CONDITIONS)) for name in names]
 
 
 def _filled(pixels: np.ndarray) -> tuple[np.ndarray, np.ndarray | None]:

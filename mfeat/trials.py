@@ -45,11 +45,6 @@ class Split:
         """Return at most `size` training patches of each class."""
         return np.concatenate([patches[:size] for patches in self.train])
 
-    @property
-    def ratio(self) -> float:
-        """Test patches over training patches at the largest training size."""
-        return len(self.test) / sum(map(len, self.train))
-
 
 def half_splits(
     labels: np.ndarray, halves: np.ndarray, train: int, test: int, repeats: int, seed: int

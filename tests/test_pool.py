@@ -16,7 +16,8 @@ from mfeat import MinkowskiCurves
 from mfeat.conditions import Scene, margin_for
 from mfeat.images import read_image
 from mfeat.options import dump_settings
-from mfeat.pool import Pool, halves_pool, labelled_pool, packed, unpacked
+from mfeat.packing import packed, unpacked
+from mfeat.pool import Pool, halves_pool, labelled_pool
 from mfeat.sources import list_sources
 
 SIZE = 16
