@@ -92,7 +92,10 @@ def draw_lines(
     axes.set_xlabel(across)
     axes.set_ylabel(upward)
     axes.margins(x=0.03)
-    axes.set_ylim(top=min(1.0, axes.get_ylim()[1]) + 0.005)
+    values = np.concatenate([line.values for line in lines])
+    if np.isfinite(values).any():  # intervals may reach beyond what an accuracy can be
+        low, high = float(np.nanmin(values)), float(np.nanmax(values))
+        axes.set_ylim(max(low - 0.05, -0.005), min(high + 0.05, 1.005))
     order = np.argsort([-np.nan_to_num(np.mean(line.values), nan=-1.0) for line in lines])
     axes.legend(  # named here: matplotlib leaves labels out that begin with "_"
         [handles[k] for k in order], [_plain(lines[k].name) for k in order], frameon=False,
@@ -145,10 +148,18 @@ def draw_bars(
     return figure
 
 
+def _settle(figure: Any) -> None:
+    """Lay a figure out once and for all: every drawing would move it a little."""
+    if figure.get_layout_engine() is not None:
+        figure.draw_without_rendering()
+        figure.set_layout_engine("none")
+
+
 def as_svg(figure: Any) -> bytes:
     """Return a figure as SVG; the same figure gives the same bytes."""
     import matplotlib
 
+    _settle(figure)
     stream = io.BytesIO()
     with matplotlib.rc_context({"svg.fonttype": "none", "svg.hashsalt": "mfeat"}):
         figure.savefig(stream, format="svg", metadata={"Date": None})
@@ -157,6 +168,7 @@ def as_svg(figure: Any) -> bytes:
 
 def as_png(figure: Any) -> bytes:
     """Return a figure as PNG."""
+    _settle(figure)
     stream = io.BytesIO()
     figure.savefig(stream, format="png", dpi=120, metadata={"Software": None})
     return stream.getvalue()

@@ -80,7 +80,7 @@ def short(value: float, digits: int = 3) -> str:
 def _interval(mean: Mean) -> str:
     if math.isnan(mean.mean):
         return "failed"
-    return f"{short(mean.mean)} [{short(mean.low)}, {short(min(mean.high, 1.0))}]"
+    return f"{short(mean.mean)} [{short(max(mean.low, 0.0))}, {short(min(mean.high, 1.0))}]"
 
 
 def _by_mean(found: Comparison, names: list[str]) -> list[str]:

@@ -439,7 +439,8 @@ def test_what_variants_of_the_default_hold():
     rough = {name for name in everything if name.startswith("rough_")}
     assert names("only location and scale") == rough
     assert names("without location and scale") == everything - rough
-    assert names("scale as ratios") < everything
+    assert names("scale as ratios") - everything == {"rough_3_log_std"}  # in place of a contrast
+    assert not any("contrast" in name and "rough" in name for name in names("scale as ratios"))
     assert {n for n in names("with directions") - everything if "crossings" not in n} == set()
     whole = found["whole curves of fixed fields"]
     assert whole.fingerprint() == MinkowskiCurves(**full_curves()).fingerprint()

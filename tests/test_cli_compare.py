@@ -11,13 +11,12 @@ import toys
 from toys import texture, write_textures
 
 import mfeat
-from mfeat import MinkowskiCurves, cli, read_comparison, storage
+from mfeat import MinkowskiCurves, cli, comparing, read_comparison, storage
 from mfeat.candidates import CLASSIFIERS
 from mfeat.cli import build_parser, main
 from mfeat.conditions import CONDITIONS
 from mfeat.descriptors import DESCRIPTORS
 
-MODULE = sys.modules["mfeat.compare"]  # mfeat.compare is the function
 SHORT = [
     *("--size", "16", "--train", "2", "--train", "4", "--test", "4", "--repeats", "2"),
     *("--jobs", "1", "--condition", "clean", "--classifier", "lda"),
@@ -32,7 +31,7 @@ def folder(tmp_path):
 
 @pytest.fixture
 def plain(monkeypatch):
-    monkeypatch.setattr(MODULE, "write_report", lambda found: {"report.html": b"plain"})
+    monkeypatch.setattr(comparing, "write_report", lambda found: {"report.html": b"plain"})
 
 
 @pytest.fixture
@@ -206,7 +205,7 @@ def test_other_refusals_exit_with_2(folder, tmp_path, run, plain, monkeypatch):
     assert run(folder, "--out", out, *SHORT, *GREY, "--seed", "3", "--fresh")[0] == 0
     assert run(folder, "--out", folder, *SHORT, *GREY)[0] == 2
     assert run(folder, "--out", folder / "texture0.npy", *SHORT, *GREY)[0] == 2
-    with storage.output(str(tmp_path / "busy")).lock(f"{MODULE.UNFINISHED}/lock"):
+    with storage.output(str(tmp_path / "busy")).lock(f"{comparing.UNFINISHED}/lock"):
         code, _, error = run(folder, "--out", tmp_path / "busy", *SHORT, *GREY)
     assert code == 2
     assert "another run writes to" in error
@@ -232,7 +231,7 @@ def test_other_refusals_exit_with_2(folder, tmp_path, run, plain, monkeypatch):
 def test_what_stops_a_run(folder, tmp_path, run, plain, monkeypatch, raised, code, text, fresh):
     out = tmp_path / "out"
     arguments = [folder, "--out", out, *SHORT, *GREY, "--descriptor", "co-occurrence"]
-    real = MODULE.results_of
+    real = comparing.results_of
 
     def stops(name, *rest, **how):
         if name == "co-occurrence":
@@ -240,13 +239,13 @@ def test_what_stops_a_run(folder, tmp_path, run, plain, monkeypatch, raised, cod
         return real(name, *rest, **how)
 
     with monkeypatch.context() as patch:
-        patch.setattr(MODULE, "results_of", stops)
+        patch.setattr(comparing, "results_of", stops)
         found, stdout, error = run(*arguments, *["--fresh"] * fresh)
     assert (found, stdout) == (code, "")
     assert text in error
     again = "the same command without --fresh goes on" if fresh else "the same command goes on"
     assert again in error.splitlines()[-1]
-    assert (out / MODULE.UNFINISHED / "comparison" / "part-00-000.parquet").exists()
+    assert (out / comparing.UNFINISHED / "comparison" / "part-00-000.parquet").exists()
     assert run(*arguments)[0] == 0
 
 

@@ -18,15 +18,14 @@ from sklearn.preprocessing import FunctionTransformer
 from toys import QUICK, Blind, Breaks, Nearest, Slopes, small_curves, texture, write_textures
 
 import mfeat
-from mfeat import compare, dump, read_comparison, storage
-from mfeat.compare import OutputRefused
+from mfeat import compare, comparing, contests, dump, read_comparison, storage
 from mfeat.contest import RESULTS_SCHEMA
 from mfeat.costs import COSTS_SCHEMA
 from mfeat.parts import InputChanged
+from mfeat.publishing import OutputRefused
 from mfeat.schema import UNFINISHED
 from mfeat.storage import OutputInUse
 
-MODULE = sys.modules["mfeat.compare"]  # mfeat.compare is the function
 NEAREST = {"classifiers": {"nearest": Nearest()}}
 CLEAN = {"conditions": ["clean"]} | NEAREST
 FILES = ["charts", "comparison.json", "costs.parquet", "report.html", "report.md",
@@ -36,7 +35,7 @@ FILES = ["charts", "comparison.json", "costs.parquet", "report.html", "report.md
 @pytest.fixture
 def plain(monkeypatch):
     """Leave the charts out, which take a second."""
-    monkeypatch.setattr(MODULE, "write_report", lambda found: {"report.md": b"plain"})
+    monkeypatch.setattr(comparing, "write_report", lambda found: {"report.md": b"plain"})
 
 
 @pytest.fixture
@@ -314,13 +313,13 @@ def interrupted(folder, out, names=THREE, **how):
 
 def counted(monkeypatch):
     """Return a list of the names of candidates that are computed from now on."""
-    done, real = [], MODULE.results_of
+    done, real = [], comparing.results_of
 
     def spy(name, *arguments, **how):
         done.append(name)
         return real(name, *arguments, **how)
 
-    monkeypatch.setattr(MODULE, "results_of", spy)
+    monkeypatch.setattr(comparing, "results_of", spy)
     return done
 
 
@@ -358,7 +357,7 @@ def test_a_killed_process_is_resumed(folder, tmp_path, plain):
         import os, signal, sys
         import toys
         from mfeat import compare
-        sys.modules["mfeat.compare"].write_report = lambda found: {"report.md": b"plain"}
+        sys.modules["mfeat.comparing"].write_report = lambda found: {"report.md": b"plain"}
         source, out, kill = sys.argv[1:]
         class Kills(toys.Slopes):
             def transform(self, X):
@@ -530,11 +529,11 @@ def test_functions_are_the_same_in_another_process(folder, tmp_path, plain, monk
     one = FunctionTransformer(lambda X: X)
     other = FunctionTransformer(lambda X: X)
     assert repr(one.func) != repr(other.func)
-    assert MODULE._described(one) == MODULE._described(other)
+    assert contests._described(one) == contests._described(other)
     long = np.arange(5000.0)
     short = long.copy()
     short[2500] += 1e-12
-    texts = [MODULE._described(Slopes(doubled=values)) for values in (long, short, long.copy())]
+    texts = [contests._described(Slopes(doubled=values)) for values in (long, short, long.copy())]
     assert texts[0] != texts[1]
     assert texts[0] == texts[2]
 
@@ -583,7 +582,7 @@ def test_functions_are_the_same_in_another_process(folder, tmp_path, plain, monk
         ({"label_from": "moon"}, ValueError, "label_from must be one of"),
         ({"source": "nowhere"}, FileNotFoundError, "nowhere does not exist"),
     ],
-    ids=str,
+    ids=lambda one: re.sub(" at 0x[0-9a-f]+", "", str(one)),
 )  # fmt: skip
 def test_what_cannot_be_compared_is_refused_and_leaves_no_trace(
     folder, tmp_path, plain, how, error, text

@@ -172,7 +172,7 @@ def test_the_ratio_is_that_of_patches_that_were_really_used(tmp_path, monkeypatc
         place.mkdir(parents=True, exist_ok=True)
         shape = (32, 48) if k % 2 else (64, 128)
         np.save(place / f"part{k}.npy", texture(k, 0.6 + k % 2, shape))
-    monkeypatch.setattr(sys.modules["mfeat.compare"], "write_report", lambda found: {})
+    monkeypatch.setattr(sys.modules["mfeat.comparing"], "write_report", lambda found: {})
     how = QUICK | {"train": None, "label_from": "folder", "classifiers": {"n": Nearest()}}
     found = compare(
         tmp_path / "images", tmp_path / "out", {"s": Slopes(), "b": Blind()},

@@ -87,7 +87,9 @@ def test_twins_have_equal_results():
     assert set(one["descriptor"].to_pylist()) == {"one"}
 
 
-@pytest.mark.parametrize("transformer", [small_curves(), Slopes(), Spy()], ids=repr)
+@pytest.mark.parametrize(
+    "transformer", [small_curves(), Slopes(), Spy()], ids=["curves", "slopes", "spy"]
+)
 def test_results_do_not_depend_on_who_went_before(transformer):
     contest = contest_of(ONE)
     Spy.seen = []
@@ -211,7 +213,9 @@ def test_no_features_at_all_is_a_failure():
     assert all("0 feature" in row["failure"] for row in rows)
 
 
-@pytest.mark.parametrize("transformer", [toys.Untagged(), toys.Uncloneable()], ids=repr)
+@pytest.mark.parametrize(
+    "transformer", [toys.Untagged(), toys.Uncloneable()], ids=["untagged", "uncloneable"]
+)
 def test_what_cannot_be_prepared_is_a_failure_and_stops_nothing(transformer):
     rows = rows_of("a", transformer, contest_of(ONE))
     assert len(rows) == 8
