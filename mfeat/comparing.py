@@ -16,7 +16,13 @@ from joblib import Parallel, delayed
 from tqdm import tqdm
 
 from mfeat import storage
-from mfeat.comparison import COMPARISON, COSTS, RESULTS, Comparison, is_variant
+from mfeat.comparison import (
+    COMPARISON,
+    COSTS,
+    RESULTS,
+    Comparison,
+    is_variant,
+)
 from mfeat.contest import RESULTS_SCHEMA, Contest, results_of
 from mfeat.contests import ComparisonPlan
 from mfeat.costs import measure_costs
@@ -108,7 +114,7 @@ class ComparisonRun:
         for s in range(len(contests)):
             for c in range(len(self._plan.candidates)):
                 with self._store.open(f"{RUN}/{_part_of(s, c)}") as stream:
-                    yield pq.read_table(stream)
+                    yield storage.read_parquet(stream)
 
     def _finish(self, contests: list[Contest], pools: list[Pool], costs: pa.Table) -> None:
         """Write tables and report beside the parts, then let them appear, the record last."""

@@ -7,7 +7,6 @@ from typing import Any, NamedTuple
 
 import numpy as np
 import pyarrow as pa
-import pyarrow.parquet as pq
 
 from mfeat import _checks, locations, storage
 from mfeat.significance import Difference, Mean, compare_paired, holm, mean_with_interval
@@ -255,5 +254,5 @@ def read_comparison(path: Any) -> Comparison:
     tables = []
     for name in (RESULTS, COSTS):
         with store.open(name) as stream:
-            tables.append(pq.read_table(stream))
+            tables.append(storage.read_parquet(stream))
     return Comparison(place, *tables, about)

@@ -9,9 +9,8 @@ from typing import Any, BinaryIO
 import numpy as np
 import pyarrow as pa
 import pyarrow.compute as pc
-import pyarrow.parquet as pq
 
-from mfeat import locations
+from mfeat import locations, storage
 from mfeat.entries import TRUTH, Sources, entries_table, folder_of, join, kept_label
 
 #: Columns of a manifest that have a meaning; all others are carried into the table.
@@ -122,7 +121,7 @@ def _read_csv(content: bytes) -> pa.Table:
 
 def _read_parquet(stream: BinaryIO) -> pa.Table:
     """Read Parquet; columns of types that Arrow cannot choose rows of become plain ones."""
-    table = pq.read_table(stream).unify_dictionaries()
+    table = storage.read_parquet(stream).unify_dictionaries()
     plain = {pa.string_view(): pa.string(), pa.binary_view(): pa.binary()}
     fields = [field.with_type(plain.get(field.type, field.type)) for field in table.schema]
     return table.cast(pa.schema(fields))

@@ -316,7 +316,7 @@ class TableRun:
                 if rejects_name(part) not in names:
                     continue
                 with self._store.open(f"{folder}/{rejects_name(part)}") as rejects:
-                    table = pq.read_table(rejects)
+                    table = storage.read_parquet(rejects)
                 writer.write_table(table)
                 total += len(table)
                 images += table["row"].null_count

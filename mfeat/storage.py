@@ -19,6 +19,9 @@ from collections.abc import Callable, Iterator
 from pathlib import Path
 from typing import BinaryIO
 
+import pyarrow as pa
+import pyarrow.parquet as pq
+
 from mfeat.locations import filesystem, local_path
 
 _log = logging.getLogger("mfeat")
@@ -34,6 +37,14 @@ def output(location: str) -> "LocalStorage | RemoteStorage":
     """Return the storage of an output folder."""
     path = local_path(location)
     return RemoteStorage(location) if path is None else LocalStorage(Path(path))
+
+
+def read_parquet(stream: BinaryIO) -> pa.Table:
+    """Read a small Parquet file in this thread.
+
+    Threads of Arrow that read from a Python stream may outlive it, and abort a process that ends.
+    """
+    return pq.ParquetFile(stream).read(use_threads=False)
 
 
 class LocalStorage:

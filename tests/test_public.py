@@ -160,7 +160,7 @@ LAYERS = {
     "storage": {"locations"},
     "images": {"_checks", "_formats", "_pages", "_tiff", "locations"},
     "entries": {"locations"},
-    "manifests": {"entries", "locations"},
+    "manifests": {"entries", "locations", "storage"},
     "sources": {"entries", "locations", "manifests"},
     "schema": {"plan", "settings", "transformer"},
     "table": {"locations", "schema", "storage", "transformer"},

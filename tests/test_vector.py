@@ -79,8 +79,8 @@ def test_gaussian_fields_have_the_same_curves_whatever_their_size():
 @pytest.mark.parametrize("scale", [0, 1.5])
 def test_scale_in_logarithms_against_numpy(scale):
     X = 5.0 * noise() + 40.0
-    own = compact(**ONLY | {"raw": True}, roughness=(scale, 3), pitch=0.5)
-    found = columns(own, X)
+    only = ONLY | {"raw": True, "roughness": (scale, 3), "pitch": 0.5}
+    found = columns(compact(**only), X) | columns(compact(**only, location_scale="scale"), X)
     sizes = {}
     for sigma in (scale, 3):
         smooth = np.stack([ndimage.gaussian_filter(x, sigma, truncate=4.0) for x in X])
@@ -94,9 +94,9 @@ def test_scale_in_logarithms_against_numpy(scale):
         }
     first = sizes[scale]["log_std"]
     assert found[f"rough_{scale}_log_std"] == pytest.approx(np.log(first), rel=1e-10)
-    whole = np.hypot(first, X.mean(axis=(1, 2)))
-    assert found[f"rough_{scale}_log_contrast"] == pytest.approx(np.log(first / whole), rel=1e-10)
     for sigma, expected in sizes.items():
+        part = np.log(expected["log_std"] / np.hypot(expected["log_std"], X.mean(axis=(1, 2))))
+        assert found[f"rough_{sigma}_log_contrast"] == pytest.approx(part, rel=1e-10)
         for name, size in expected.items():
             if (sigma, name) != (scale, "log_std"):
                 got = found[f"rough_{sigma}_{name}"]
@@ -130,6 +130,13 @@ def test_curves_are_multiplied_by_powers_of_the_length():
             [
                 *["rough_1_log_contrast", "rough_1_log_std", "rough_1_log_slope"],
                 *["rough_1_log_curvature"],
+                *["rough_2.5_log_contrast", "rough_2.5_log_slope", "rough_2.5_log_curvature"],
+            ],
+        ),
+        (
+            {"location_scale": "ratio"},
+            [
+                *["rough_1_log_slope", "rough_1_log_curvature"],
                 *["rough_2.5_log_std", "rough_2.5_log_slope", "rough_2.5_log_curvature"],
             ],
         ),
@@ -168,8 +175,9 @@ def test_ratios_know_no_gain_and_offset(surfaces, gain, offset):
     # the other side: with it, the deviation of the first field follows, and it alone
     one, other = (columns(compact(**EVERY), x) for x in (X, gain * X + offset))
     moved = {name for name in one if not np.allclose(one[name], other[name], atol=1e-5)}
-    assert moved == {"rough_1.5_log_std"} | ({"rough_1.5_log_contrast"} if offset else set())
-    change = other["rough_1.5_log_std"] - one["rough_1.5_log_std"]
+    contrasts = {"rough_1.1_log_contrast", "rough_3_log_contrast"}
+    assert moved == {"rough_1.1_log_std"} | (contrasts if offset else set())
+    change = other["rough_1.1_log_std"] - one["rough_1.1_log_std"]
     assert change == pytest.approx(math.log(gain))
 
 
@@ -190,7 +198,10 @@ def test_ratios_of_what_is_not_there_know_no_gain_either(gain):
     found = columns(compact(**ONLY | {"raw": True}, roughness=(0, 1)), flat)
     assert found["rough_0_log_contrast"].tolist() == [LOG_OF_NOTHING] * 3
     assert found["rough_0_log_std"].tolist() == [LOG_OF_NOTHING] * 3
-    assert not found["rough_1_log_std"].any()
+    ratios = columns(
+        compact(**ONLY | {"raw": True}, roughness=(0, 1), location_scale="ratio"), flat
+    )
+    assert not ratios["rough_1_log_std"].any()
 
 
 def test_numbers_of_shape_do_not_follow_the_unit_of_the_pitch(surfaces):
@@ -232,7 +243,7 @@ def test_turns_do_not_matter(surfaces, turn):
         own = compact(**options)
         one, other = own.transform(surfaces), own.transform(turn(surfaces))
         assert other == pytest.approx(one, rel=1e-7, abs=1e-7)
-    raw = compact(**ONLY | {"raw": True})
+    raw = compact(**ONLY | {"raw": True}, roughness=(0,))
     assert np.array_equal(raw.transform(turn(surfaces)), raw.transform(surfaces))
 
 
@@ -329,7 +340,7 @@ def test_terms_are_products_of_the_whole_curves():
     for family, scale, functional in asked:
         stem = f"{Field(family, scale).name}_{functional}"
         curve = np.stack([curves[f"{stem}_{k:02d}"] for k in range(16)], axis=-1)
-        terms = {"area": 5, "euler": 4, "anisotropy": 1}.get(functional, 3)
+        terms = {"area": 5, "euler": 4}.get(functional, 3)
         expected = project(functional, curve, levels, terms)
         for k in range(terms):
             assert found[f"{stem}_h{k}"] == pytest.approx(expected[:, k], rel=1e-12, abs=1e-13)
