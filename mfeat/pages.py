@@ -14,9 +14,9 @@ h2 { font-size: 1.2rem; margin: 2rem 0 .4rem; padding-top: .6rem; border-top: 3p
 .caution { border: 2px solid #d55e00; padding: .6rem .9rem; background: #fff6ef; }
 .wide { overflow-x: auto; margin: .8rem 0; }
 table { border-collapse: collapse; font-variant-numeric: tabular-nums; font-size: .9rem; }
-th, td { padding: .2rem .6rem; text-align: right; border-bottom: 1px solid #ddd; }
-th:first-child, td:first-child, td.text { text-align: left; }
-td.text { overflow-wrap: anywhere; min-width: 12rem; }
+th, td { padding: .2rem .6rem; text-align: right; border-bottom: 1px solid #ddd; white-space: nowrap; }
+th:first-child, td:first-child, th.text, td.text { text-align: left; }
+td.text { overflow-wrap: anywhere; min-width: 12rem; white-space: normal; }
 thead th { border-bottom: 2px solid #444; vertical-align: bottom; }
 tr.own { background: #e8eef9; font-weight: 600; }
 figure { margin: .8rem 0; }
@@ -86,7 +86,10 @@ def _table(table: Any) -> str:
     # columns of words are set flush left and may be broken
     wordy = [max((len(row[k]) for row in table.rows), default=0) > 30
              for k in range(len(table.head))]  # fmt: skip
-    head = "".join(f'<th scope="col">{html.escape(cell)}</th>' for cell in table.head)
+    head = "".join(
+        f'<th scope="col"{" class=text" if wordy[k] else ""}>{html.escape(cell)}</th>'
+        for k, cell in enumerate(table.head)
+    )
     rows = []
     for row in table.rows:
         cells = "".join(
