@@ -14,7 +14,8 @@ h2 { font-size: 1.2rem; margin: 2rem 0 .4rem; padding-top: .6rem; border-top: 3p
 .caution { border: 2px solid #d55e00; padding: .6rem .9rem; background: #fff6ef; }
 .wide { overflow-x: auto; margin: .8rem 0; }
 table { border-collapse: collapse; font-variant-numeric: tabular-nums; font-size: .9rem; }
-th, td { padding: .2rem .6rem; text-align: right; border-bottom: 1px solid #ddd; white-space: nowrap; }
+th, td { padding: .2rem .6rem; text-align: right; white-space: nowrap; }
+th, td { border-bottom: 1px solid #ddd; }
 th:first-child, td:first-child, th.text, td.text { text-align: left; }
 td.text { overflow-wrap: anywhere; min-width: 12rem; white-space: normal; }
 thead th { border-bottom: 2px solid #444; vertical-align: bottom; }
