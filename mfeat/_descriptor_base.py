@@ -6,12 +6,12 @@ from typing import Any, ClassVar
 
 import numpy as np
 from joblib import Parallel, delayed
-from scipy import ndimage
 from sklearn.base import BaseEstimator, TransformerMixin
 from sklearn.exceptions import NotFittedError
 from sklearn.utils._param_validation import StrOptions
 
 from mfeat import _checks, stacks
+from mfeat.smoothing import fill_nearest
 
 # Order statistics that each training patch gives for a value range, so that all weigh alike.
 _PER_PATCH = 101
@@ -233,12 +233,6 @@ def _some(positions: list[int]) -> str:
     """Return "X[3], X[7]", cut short where there are many."""
     shown = ", ".join(f"X[{k}]" for k in sorted(positions)[:5])
     return shown + (f" and {len(positions) - 5} more" if len(positions) > 5 else "")
-
-
-def fill_nearest(image: np.ndarray, valid: np.ndarray) -> np.ndarray:
-    """Return an image whose missing pixels have the value of the nearest valid pixel."""
-    nearest = ndimage.distance_transform_edt(~valid, return_distances=False, return_indices=True)
-    return image[tuple(nearest)]
 
 
 def flattened(images: np.ndarray) -> np.ndarray:

@@ -3,6 +3,7 @@
 import json
 from collections.abc import Iterable
 from dataclasses import dataclass
+from functools import cached_property
 from typing import Any, NamedTuple
 
 import numpy as np
@@ -163,24 +164,20 @@ class Comparison:
         ]
         return np.mean(found, axis=0)
 
-    @property
+    @cached_property
     def _index(self) -> dict[tuple, np.ndarray]:
         """Balanced accuracies of all splits by what they are of."""
-        known = self.__dict__.get("_known")
-        if known is None:
-            names = (
-                *("descriptor", "classifier", "condition", "patch_rows", "patch_cols"),
-                *("train_size", "balanced_accuracy"),
-            )
-            ordered = self.results.sort_by([("repeat", "ascending"), ("fold", "ascending")])
-            columns = [ordered[name].to_pylist() for name in names]
-            known = {}
-            for name, model, condition, rows, cols, train, accuracy in zip(*columns, strict=True):
-                key = (name, model, condition, (rows, cols), train)
-                known.setdefault(key, []).append(np.nan if accuracy is None else accuracy)
-            known = {key: np.array(values) for key, values in known.items()}
-            self.__dict__["_known"] = known
-        return known
+        names = (
+            *("descriptor", "classifier", "condition", "patch_rows", "patch_cols"),
+            *("train_size", "balanced_accuracy"),
+        )
+        ordered = self.results.sort_by([("repeat", "ascending"), ("fold", "ascending")])
+        columns = [ordered[name].to_pylist() for name in names]
+        known: dict[tuple, list[float]] = {}
+        for name, model, condition, rows, cols, train, accuracy in zip(*columns, strict=True):
+            key = (name, model, condition, (rows, cols), train)
+            known.setdefault(key, []).append(np.nan if accuracy is None else accuracy)
+        return {key: np.array(values) for key, values in known.items()}
 
     def ratio(self, size: tuple[int, int] | None = None, train_size: int | None = None) -> float:
         """Return test patches over training patches of a split, for the corrected variance."""

@@ -18,6 +18,7 @@ import numpy as np
 from scipy import ndimage
 
 from mfeat import _checks
+from mfeat.smoothing import fill_nearest
 
 #: Kinds of image: grey values of a camera, or heights in a length unit.
 KINDS = ("grey", "height")
@@ -206,8 +207,7 @@ def _filled(pixels: np.ndarray) -> tuple[np.ndarray, np.ndarray | None]:
     values = np.asarray(pixels).astype(np.float64)
     if missing is None:
         return values, None
-    nearest = ndimage.distance_transform_edt(missing, return_distances=False, return_indices=True)
-    return values[tuple(nearest)], missing
+    return fill_nearest(values, ~missing), missing
 
 
 def missing_in(pixels: np.ndarray) -> np.ndarray | None:

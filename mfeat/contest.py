@@ -151,7 +151,12 @@ def _tried(call: Any, *arguments: Any) -> tuple[Any, str | None]:
     except Failed as error:
         return None, str(error)
     except Exception as error:  # of a candidate: any
-        return None, f"{type(error).__name__}: {' '.join(str(error).split())}"
+        return None, told(error)
+
+
+def told(error: Exception) -> str:
+    """Return an error of a candidate in one line."""
+    return f"{type(error).__name__}: {' '.join(str(error).split())}"
 
 
 def _fitted(classifier: Any, features: np.ndarray, labels: np.ndarray) -> Any:

@@ -11,7 +11,7 @@ from threadpoolctl import threadpool_limits
 from tqdm import tqdm
 
 from mfeat.candidates import prepared
-from mfeat.contest import Contest, together
+from mfeat.contest import Contest, together, told
 
 #: Patches that are timed together, and rounds in which candidates take turns.
 PATCHES, ROUNDS = 64, 5
@@ -56,7 +56,7 @@ def measure_costs(candidates: dict[str, Any], contest: Contest, quiet: bool | No
                 model.transform(own())  # compiles, and fills caches
                 fitted[name] = (model, *_peak(model, own()))
             except Exception as error:  # of a candidate: any; its results tell it, too
-                failures[name] = _told(error)
+                failures[name] = told(error)
         seconds = {name: np.empty(ROUNDS) for name in fitted}
         for k in range(ROUNDS):
             for name, (model, *_) in list(fitted.items()):
@@ -65,7 +65,7 @@ def measure_costs(candidates: dict[str, Any], contest: Contest, quiet: bool | No
                 try:
                     model.transform(given)
                 except Exception as error:
-                    failures[name] = _told(error)
+                    failures[name] = told(error)
                     del fitted[name], seconds[name]
                     continue
                 seconds[name][k] = time.perf_counter() - started
@@ -85,10 +85,6 @@ def measure_costs(candidates: dict[str, Any], contest: Contest, quiet: bool | No
                 row |= {"ratio": middle, "ratio_low": low, "ratio_high": high}
         rows.append(row)
     return pa.Table.from_pylist(rows, schema=COSTS_SCHEMA)
-
-
-def _told(error: Exception) -> str:
-    return f"{type(error).__name__}: {' '.join(str(error).split())}"
 
 
 def _peak(model: Any, patches: Any) -> tuple[int, int]:

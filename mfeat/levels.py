@@ -18,8 +18,9 @@ from typing import Any
 
 import numpy as np
 
-from mfeat import _checks, _kernels
+from mfeat import _checks
 from mfeat.counts import thresholds_for
+from mfeat.smoothing import moments_of
 
 RULES = ("standard", "rank", "fixed", "fitted")
 
@@ -102,17 +103,11 @@ class FieldStack:
 
     @cached_property
     def _raw_moments(self) -> tuple[np.ndarray, np.ndarray]:
-        count, _, cols = self.values.shape
-        mean, deviation = np.empty(count), np.empty(count)
-        scratch = np.empty((2, cols + 1))
-        _kernels.moments(self.centred, self.valid, scratch[0], scratch[1], mean, deviation)
-        return mean, deviation
+        return moments_of(self.centred, self.valid)
 
     @cached_property
     def _moments(self) -> tuple[np.ndarray, np.ndarray]:
         mean, deviation = self._raw_moments
-        if np.isnan(mean).any():  # some field is empty
-            mean, deviation = np.where(self.empty, 0.0, (mean, deviation))
         return mean, np.where(self.flat, 0.0, deviation)
 
 

@@ -95,8 +95,8 @@ def matched_sigmas(
     """
     found = {length: np.full(count, np.nan) for length in lengths}
     below_sigma, below = 0.0, np.log(measure(0.0))
-    for own in found.items():
-        own[1][np.log(own[0]) <= below] = 0.0
+    for length, own in found.items():
+        own[np.log(length) <= below] = 0.0
     rungs = [sigma for sigma in LADDER if 0.0 < sigma < widest] + [widest]
     for sigma in rungs:
         if not any(np.isnan(own).any() for own in found.values()):

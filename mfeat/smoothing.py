@@ -8,6 +8,7 @@ import math
 from functools import lru_cache
 
 import numpy as np
+from scipy import ndimage
 
 from mfeat import _checks, _field_kernels, _kernels
 
@@ -42,6 +43,12 @@ def gaussian_weights(sigma: float) -> np.ndarray:
     distance = np.arange(int(TRUNCATE * sigma + 0.5) + 1)
     weights = np.exp(-0.5 * (distance / sigma) ** 2)
     return _checks.read_only(weights / (weights[0] + 2.0 * weights[1:].sum()))
+
+
+def fill_nearest(image: np.ndarray, valid: np.ndarray) -> np.ndarray:
+    """Return an image whose missing pixels have the value of the nearest valid pixel."""
+    nearest = ndimage.distance_transform_edt(~valid, return_distances=False, return_indices=True)
+    return image[tuple(nearest)]
 
 
 def moments_of(values: np.ndarray, valid: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
